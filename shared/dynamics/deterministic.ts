@@ -1,52 +1,15 @@
-/**
- * Exponential and logarithm from + − × ÷ alone. Math.exp, log and pow differ between engines in the last bits; what an
- * adaptation serves must not.
- */
+import { exp } from './elementary.ts'
 
-// ln 2 in two parts: the first has 32 trailing zero bits, so that an integer up to 2^20 times it is exact (fdlibm's split).
+// ln 2 in two parts: the first has 32 trailing zero bits, so that an exponent times it is exact.
 const LN2_HIGH = 6.93147180369123816490e-1
 const LN2_LOW = 1.90821492927058770002e-10
-const INVERSE_LN2 = 1.44269504088896338700
 
 /** 2^512, 2^256, …, 2^1: every power of two of a double is a product of these, exactly. */
 const POWERS_OF_TWO = [2 ** 512, 2 ** 256, 2 ** 128, 2 ** 64, 2 ** 32, 2 ** 16, 2 ** 8, 2 ** 4, 2 ** 2, 2 ** 1]
 
-/** 1/13!, 1/12!, …, 1/1!, 1/0!: on |r| ≤ ln 2 / 2 the first term left out is below 5e-18. */
-const INVERSE_FACTORIALS = inverseFactorials(13)
-
-function inverseFactorials(highest: number): number[] {
-  const values: number[] = []
-  for (let k = 0, factorial = 1; k <= highest; factorial *= ++k) values.unshift(1 / factorial)
-  return values
-}
-
-/** value · 2^exponent, exact unless it leaves the range of normal doubles. */
-function scale(value: number, exponent: number): number {
-  let rest = Math.abs(exponent)
-  for (let k = 0, step = 512; k < POWERS_OF_TWO.length; k++, step /= 2) {
-    for (; rest >= step; rest -= step) value = exponent > 0 ? value * POWERS_OF_TWO[k] : value / POWERS_OF_TWO[k]
-  }
-  return value
-}
-
 /**
- * e to the power x, within 2 units in the last place for −708 < x < 709; 0 below −746, Infinity above 710.
- *
- * @param x  any number; NaN gives NaN
- */
-export function exp(x: number): number {
-  if (x > 710) return Infinity
-  if (x < -746) return 0
-  if (x !== x) return x
-  const k = Math.floor(x * INVERSE_LN2 + 0.5)
-  const r = x - k * LN2_HIGH - k * LN2_LOW
-  let sum = 0
-  for (const coefficient of INVERSE_FACTORIALS) sum = sum * r + coefficient
-  return scale(sum, k)
-}
-
-/**
- * Natural logarithm, within 2 units in the last place.
+ * Natural logarithm from + − × ÷ alone, within 2 units in the last place. Math.log differs between engines in the last
+ * bits; what an adaptation serves must not.
  *
  * @param x  0 gives −Infinity, below 0 and NaN give NaN
  */

@@ -16,7 +16,6 @@ export interface LossDescription {
   readonly scheme: Scheme
   /** Recommended settings, used where an adaptation states none. */
   readonly update: UpdateSettings
-  readonly rho: number
 }
 
 /** An immutable version of a loss. */

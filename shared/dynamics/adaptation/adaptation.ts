@@ -60,7 +60,7 @@ export interface Reason {
 
 export type ReasonCode =
   | 'not_finite' | 'step_norm' | 'torque_change' | 'drift' | 'no_help' | 'worse_than_base'
-  | 'frozen' | 'gap' | 'low_excitation' | 'below_noise'
+  | 'frozen' | 'gap' | 'excitation' | 'below_noise'
 
 /** Where an adaptation stands. */
 export type AdaptationState =
@@ -82,15 +82,15 @@ export interface BatchOutcome {
   readonly reasons: readonly Reason[]
   /** Mean squared error of the whole batch before the step, in base standard deviations, averaged over joints. */
   readonly before: number
-  /** The candidate's on the same rows; where no candidate was made, the same as before. */
-  readonly after: number
+  /** The candidate's on the same rows; null where no step was computed. */
+  readonly after: number | null
   /** Root mean square error per joint, N·m, length n each. */
   readonly jointBefore: Float64Array
-  readonly jointAfter: Float64Array
-  /** Mean loss weight per joint over the batch, length n; ones under mse; null under a loss without weights. */
-  readonly weights: Float64Array | null
-  /** Euclidean norm of the change the candidate would make or made; 0 where no candidate was made. */
-  readonly stepNorm: number
+  readonly jointAfter: Float64Array | null
+  /** Mean loss weight per joint over the batch, length n; ones under mse; under `unstructured`, its gradient beside plain squared error's. */
+  readonly weights: Float64Array
+  /** Euclidean norm of the change the candidate makes; null where no step was computed. */
+  readonly stepNorm: number | null
   /** Set when this batch made the adaptation freeze itself. */
   readonly changedTo: AdaptationState | null
 }
@@ -136,7 +136,7 @@ export interface Snapshot {
   /** Network parameters in canonical order, to be read with the base version's description. */
   readonly parameters: Float32Array
   /** The fading bias at asOf, base standard deviations, length n, and the share left after a second; null in schemes without. */
-  readonly bias: { readonly values: Float64Array; readonly rho: number } | null
+  readonly bias: { readonly values: Float64Array; readonly fade: number } | null
 }
 
 /**
