@@ -1,0 +1,5 @@
+export { everyItem, Heftwise, type Page } from './client.ts'
+export { ConnectionError, isProblem, ProblemError, TimeoutError } from './errors.ts'
+export { defaultRetry, type RetryPolicy } from './retry.ts'
+export type { CallOptions, TransportOptions } from './transport.ts'
+export type { AnswerOf, BodyOf, QueryOf, Schemas } from './wire.ts'
