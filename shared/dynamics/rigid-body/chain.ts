@@ -91,7 +91,10 @@ export interface ChainWork {
   readonly force: Float64Array
   readonly moment: Float64Array
   readonly wrench: Float64Array
+  /** n zeros, read only. */
   readonly zeros: Float64Array
+  /** Three zeros, read only: no gravity. */
+  readonly weightless: Float64Array
   readonly unit: Float64Array
   readonly bias: Float64Array
   readonly column: Float64Array
@@ -194,6 +197,7 @@ function createWork(size: number): ChainWork {
     moment: new Float64Array(3 * (size + 1)),
     wrench: new Float64Array(6),
     zeros: new Float64Array(size),
+    weightless: new Float64Array(3),
     unit: new Float64Array(size),
     bias: new Float64Array(size),
     column: new Float64Array(size),

@@ -38,7 +38,7 @@ export function forwardDynamics(
   const { size, gravity } = chain
   const { matrix, bias, zeros } = chain.work
   placeLinks(chain, q)
-  torquesOfMotion(chain, qd, zeros, gravity[0], gravity[1], gravity[2], bias)
+  torquesOfMotion(chain, qd, zeros, gravity, bias)
   fillMassMatrix(chain, matrix)
   if (damping !== undefined) for (let i = 0; i < size; i++) matrix[size * i + i] = matrix[size * i + i] + damping[i]
   for (let i = 0; i < size; i++) qdd[i] = tau[i] - bias[i]
@@ -47,10 +47,10 @@ export function forwardDynamics(
 
 function fillMassMatrix(chain: Chain, out: Float64Array): void {
   const { size } = chain
-  const { unit, zeros, column } = chain.work
+  const { unit, zeros, weightless, column } = chain.work
   for (let j = 0; j < size; j++) {
     unit[j] = 1
-    torquesOfMotion(chain, zeros, unit, 0, 0, 0, column)
+    torquesOfMotion(chain, zeros, unit, weightless, column)
     unit[j] = 0
     for (let i = j; i < size; i++) {
       out[size * i + j] = column[i]

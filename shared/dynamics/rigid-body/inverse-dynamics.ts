@@ -29,7 +29,7 @@ export function inverseDynamics(
   if (wrench !== undefined) checkLength('wrench', wrench.length, 6, 'moment and force')
   placeLinks(chain, q)
   const { gravity } = chain
-  torquesOfMotion(chain, qd, qdd, gravity[0], gravity[1], gravity[2], tau, wrench)
+  torquesOfMotion(chain, qd, qdd, gravity, tau, wrench)
 }
 
 /**
@@ -45,9 +45,9 @@ export function inverseDynamicsTerms(chain: Chain, q: Float64Array, qd: Float64A
   checkLength('gravity', out.gravity.length, chain.size, 'one per joint')
   const { gravity, work } = chain
   placeLinks(chain, q)
-  torquesOfMotion(chain, work.zeros, qdd, 0, 0, 0, out.inertia)
-  torquesOfMotion(chain, qd, work.zeros, 0, 0, 0, out.coriolis)
-  torquesOfMotion(chain, work.zeros, work.zeros, gravity[0], gravity[1], gravity[2], out.gravity)
+  torquesOfMotion(chain, work.zeros, qdd, work.weightless, out.inertia)
+  torquesOfMotion(chain, qd, work.zeros, work.weightless, out.coriolis)
+  torquesOfMotion(chain, work.zeros, work.zeros, gravity, out.gravity)
 }
 
 /**
@@ -62,7 +62,7 @@ export function gravityTorque(chain: Chain, q: Float64Array, tau: Float64Array):
   checkLength('tau', tau.length, chain.size, 'one per joint')
   const { gravity, work } = chain
   placeLinks(chain, q)
-  torquesOfMotion(chain, work.zeros, work.zeros, gravity[0], gravity[1], gravity[2], tau)
+  torquesOfMotion(chain, work.zeros, work.zeros, gravity, tau)
 }
 
 /** @throws {ShapeError} q, qd or qdd is not n long */
@@ -82,7 +82,7 @@ export function placeLinks(chain: Chain, q: Float64Array): void {
     if (isSliding) {
       trig[0] = 0
       trig[1] = 1
-    } else sineCosine(q[i], trig, 0)
+    } else sineCosine(q, i, trig)
     const travel = isSliding ? q[i] : 0
     const sine = trig[0]
     const cosine = trig[1]
@@ -96,14 +96,14 @@ export function placeLinks(chain: Chain, q: Float64Array): void {
  *
  * Row 0 of the work arrays is the base: at rest, accelerating against gravity, which stands for gravity acting on every link.
  */
-export function moveLinks(chain: Chain, qd: Float64Array, qdd: Float64Array, gx: number, gy: number, gz: number): void {
+export function moveLinks(chain: Chain, qd: Float64Array, qdd: Float64Array, gravity: Float64Array): void {
   const { size, slides, axis } = chain
   const { rotation, offset, angularVelocity: w, angularAcceleration: dw, acceleration: a } = chain.work
   w[0] = w[1] = w[2] = 0
   dw[0] = dw[1] = dw[2] = 0
-  a[0] = -gx
-  a[1] = -gy
-  a[2] = -gz
+  a[0] = -gravity[0]
+  a[1] = -gravity[1]
+  a[2] = -gravity[2]
   for (let i = 0; i < size; i++) {
     const b = 3 * i
     const o = b + 3
@@ -153,11 +153,11 @@ export function moveLinks(chain: Chain, qd: Float64Array, qdd: Float64Array, gx:
 
 /** Torques of a motion of links already placed; trusts lengths. See {@link inverseDynamics}. */
 export function torquesOfMotion(
-  chain: Chain, qd: Float64Array, qdd: Float64Array, gx: number, gy: number, gz: number, tau: Float64Array, wrench?: Float64Array,
+  chain: Chain, qd: Float64Array, qdd: Float64Array, gravity: Float64Array, tau: Float64Array, wrench?: Float64Array,
 ): void {
   const { size, parameters } = chain
   const { angularVelocity: w, angularAcceleration: dw, acceleration: a, force, moment } = chain.work
-  moveLinks(chain, qd, qdd, gx, gy, gz)
+  moveLinks(chain, qd, qdd, gravity)
   for (let i = 0; i < size; i++) {
     const o = 3 * i + 3
     const p = 10 * i

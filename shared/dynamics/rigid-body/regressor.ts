@@ -22,7 +22,7 @@ export function inertialRegressor(chain: Chain, q: Float64Array, qd: Float64Arra
   checkLength('out', out.length, size * columns, 'joints × 10 joints')
   out.fill(0)
   placeLinks(chain, q)
-  moveLinks(chain, qd, qdd, gravity[0], gravity[1], gravity[2])
+  moveLinks(chain, qd, qdd, gravity)
   const { wrench } = chain.work
   for (let link = 0; link < size; link++) {
     for (let parameter = 0; parameter < PARAMETERS_PER_LINK; parameter++) {
@@ -47,7 +47,7 @@ export function payloadRegressor(chain: Chain, q: Float64Array, qd: Float64Array
   const { size, gravity, flangeOrigin, flangeRotation: r } = chain
   checkLength('out', out.length, size * PAYLOAD_PARAMETERS, 'joints × 4')
   placeLinks(chain, q)
-  moveLinks(chain, qd, qdd, gravity[0], gravity[1], gravity[2])
+  moveLinks(chain, qd, qdd, gravity)
   const { wrench, angularVelocity: w, angularAcceleration: dw, acceleration: a } = chain.work
   const o = 3 * size
   const wx = w[o], wy = w[o + 1], wz = w[o + 2]

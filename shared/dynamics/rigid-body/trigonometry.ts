@@ -12,17 +12,19 @@ const HALF_PI_3 = 2.02226624879595063154e-21
 export const LARGEST_ANGLE = 1e6
 
 /**
- * Sine and cosine of one angle, within one unit in the last place.
+ * Sine and cosine of one angle, within one unit in the last place. Angle and result stay in arrays: a number handed over
+ * by itself is boxed where the call is not inlined, and an evaluation of dynamics must not allocate.
  *
- * @param angle  rad, |angle| ≤ {@link LARGEST_ANGLE}; beyond, and for a value that is not finite, the result is NaN
- * @param out    out: sine at `at`, cosine at `at + 1`
- * @param at     index of the sine
+ * @param angles  rad, |angle| ≤ {@link LARGEST_ANGLE}; beyond, and for a value that is not finite, the result is NaN
+ * @param index   which of them
+ * @param out     out: sine at 0, cosine at 1
  * Source: polynomials of fdlibm (Sun Microsystems, 1993), k_sin.c and k_cos.c.
  */
-export function sineCosine(angle: number, out: Float64Array, at: number): void {
+export function sineCosine(angles: Float64Array, index: number, out: Float64Array): void {
+  const angle = angles[index]
   if (!(angle <= LARGEST_ANGLE && angle >= -LARGEST_ANGLE)) {
-    out[at] = NaN
-    out[at + 1] = NaN
+    out[0] = NaN
+    out[1] = NaN
     return
   }
   const quarter = Math.floor(angle * TWO_OVER_PI + 0.5)
@@ -44,16 +46,16 @@ export function sineCosine(angle: number, out: Float64Array, at: number): void {
   const cosine = near + (1 - near - half + (z * cosinePolynomial - x * tail))
   const turn = quarter - 4 * Math.floor(quarter / 4)
   if (turn === 0) {
-    out[at] = sine
-    out[at + 1] = cosine
+    out[0] = sine
+    out[1] = cosine
   } else if (turn === 1) {
-    out[at] = cosine
-    out[at + 1] = -sine
+    out[0] = cosine
+    out[1] = -sine
   } else if (turn === 2) {
-    out[at] = -sine
-    out[at + 1] = -cosine
+    out[0] = -sine
+    out[1] = -cosine
   } else {
-    out[at] = -cosine
-    out[at + 1] = sine
+    out[0] = -cosine
+    out[1] = sine
   }
 }
