@@ -64,15 +64,6 @@ export function softplus(x: number): number {
   return (x > 0 ? x : 0) + logOnePlus(exp(x > 0 ? -x : x))
 }
 
-/**
- * aʰ for a in (0, 1] and any h, as the fading of a bias needs it: e^(h ln a).
- *
- * @param logA  ln a, at most 0: kept by the caller, so that no logarithm is needed here
- */
-export function fade(logA: number, h: number): number {
-  return exp(h * logA)
-}
-
 /** ln(1 + u) for u in [0, 1], by 2 artanh(u / (2 + u)). */
 function logOnePlus(u: number): number {
   const s = u / (2 + u)

@@ -1,4 +1,4 @@
-import { exp, fade } from './elementary.ts'
+import { exp } from './elementary.ts'
 import type { Loss, LossName, LossRows, LossShape } from './losses/index.ts'
 import { lossKinds } from './losses/index.ts'
 import {
@@ -171,7 +171,7 @@ function createBiasMetaGradient(shape: ChainShape): MetaGradient {
     const stepSize = exp(learned[rate])
     const kappa = exp(learned[fading])
     const aheadOf = (t: number, r: number) => stretch.ahead[t * rowsPerStep + r]
-    const fadeAt = (t: number, r: number) => fade(-kappa, aheadOf(t, r))
+    const fadeAt = (t: number, r: number) => exp(-kappa * aheadOf(t, r))
     // d(e^−κh)/d(ln κ) = −κ h e^−κh.
     const fadeSlope = (t: number, r: number) => -kappa * aheadOf(t, r) * fadeAt(t, r)
     const newest = rowsPerStep - 1
