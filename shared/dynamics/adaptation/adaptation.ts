@@ -11,9 +11,12 @@ export interface AdaptationInputs {
   readonly loss: LossVersion | 'mse'
   readonly settings: AdaptationSettings
   readonly limits: ArmLimits
+  /** Names and units (N·m or N) of the joints, length n, for the sentences of reasons. */
+  readonly jointNames: readonly string[]
+  readonly units: readonly string[]
 }
 
-/** A measured stretch of motion: matrices are row-major, rows × n, joints in the arm's order, SI units. Kept by reference only during prepare. */
+/** A measured stretch of motion: matrices are row-major, rows × n, joints in the arm's order, SI units. Read during prepare only. */
 export interface BatchEntry {
   readonly kind: 'batch'
   /** Place in the log of batches and events, from 1. */
@@ -112,7 +115,7 @@ export type Refusal =
   | { readonly code: 'sequence_gap'; readonly detail: string; readonly expectedSequence: number }
   | { readonly code: 'sequence_repeated'; readonly detail: string; readonly expectedSequence: number }
   | { readonly code: 'time_not_rising'; readonly detail: string; readonly row: number }
-  | { readonly code: 'ended' | 'not_frozen' | 'already_frozen' | 'context_changed'; readonly detail: string }
+  | { readonly code: 'ended' | 'not_frozen' | 'context_changed'; readonly detail: string }
 
 /** What is served, and where the log stands. */
 export interface AdaptationStatus {
@@ -174,7 +177,8 @@ export interface Adaptation {
   /**
    * Torques of the published state, into a prediction made by createPrediction.
    *
-   * @param query  as for predict on a version; `ahead`: seconds after asOf per row, length rows, from 0; null reads as 0
+   * @param ahead  seconds after asOf per row, each from 0: what fades, fades by it; null reads as 0
+   * @throws as Predictor.predict
    */
   predict(query: PredictQuery, ahead: Float64Array | null, into: Prediction): void
   /** The published state as bytes; restoreAdaptation continues from them to the same bits. */
@@ -183,13 +187,3 @@ export interface Adaptation {
   /** Frees the kernel memory it holds. It must not be used afterwards. */
   release(): void
 }
-
-/** A new adaptation at revision 0, serving the base version. */
-export declare function createAdaptation(inputs: AdaptationInputs): Adaptation
-
-/**
- * An adaptation as it stood when the checkpoint was taken. With the entries after it, it reaches the identical bits.
- *
- * @throws {RangeError} the bytes are no checkpoint of an adaptation with these inputs
- */
-export declare function restoreAdaptation(inputs: AdaptationInputs, checkpoint: Uint8Array): Adaptation

@@ -39,3 +39,106 @@ export interface AdaptationSettings {
   /** Seconds for which a state is valid after its newest accepted row (the arm's stated horizon). */
   readonly horizon: number
 }
+
+/** Batches of this many rows or more hold out their newest quarter; smaller ones are judged prequentially. */
+export const HOLD_OUT_ROWS = 32
+
+/** Seconds for which the step-norm bound rests after a grip or a release. */
+export const STEP_NORM_REST = 1
+
+/** Most rows of a batch. */
+export const MOST_BATCH_ROWS = 1024
+
+/** Range and default of one guard setting. */
+export interface GuardField {
+  readonly least: number
+  readonly most: number
+  readonly isInteger: boolean
+  readonly unit: string
+  /** The default for a scheme and update. */
+  standard(scheme: Scheme, update: UpdateSettings): number
+}
+
+/** Every guard setting, with the range within which it may be set when an adaptation is created. */
+export const GUARD_FIELDS: Readonly<Record<keyof GuardSettings, GuardField>> = {
+  stepNorm: {
+    least: 1e-6, most: 1000, isInteger: false, unit: 'parameters (all, last_layer), base standard deviations (bias)',
+    standard: scheme => (scheme === 'bias' ? 3 : 3),
+  },
+  torqueChange: { least: 0.001, most: 1, isInteger: false, unit: "share of the joint's torque limit", standard: () => 0.25 },
+  drift: { least: 0.001, most: 2, isInteger: false, unit: "share of the joint's torque limit", standard: () => 0.5 },
+  tolerance: { least: 0, most: 1, isInteger: false, unit: 'share', standard: () => 0.1 },
+  excitation: { least: 0, most: 1, isInteger: false, unit: 'base standard deviations of velocity', standard: () => 0.05 },
+  gapPeriods: { least: 1.5, most: 100, isInteger: false, unit: 'sample periods', standard: () => 5 },
+  rejectionsBeforeFreeze: { least: 1, most: 1000, isInteger: true, unit: 'batches', standard: () => 20 },
+}
+
+/** Why a setting is refused: which, and what would do. */
+export class SettingError extends RangeError {
+  override readonly name = 'SettingError'
+  constructor(readonly field: string, detail: string) {
+    super(`${field}: ${detail}`)
+  }
+}
+
+/**
+ * Completes guard settings with the defaults of a scheme and update.
+ *
+ * @throws {SettingError} a setting lies outside its range
+ */
+export function completeGuard(given: Partial<GuardSettings>, scheme: Scheme, update: UpdateSettings): GuardSettings {
+  const guard = {} as Record<keyof GuardSettings, number>
+  for (const name of Object.keys(GUARD_FIELDS) as (keyof GuardSettings)[]) {
+    const { least, most, isInteger, standard } = GUARD_FIELDS[name]
+    const value = given[name] ?? standard(scheme, update)
+    if (!(value >= least && value <= most) || (isInteger && !Number.isInteger(value))) {
+      throw new SettingError(`guard.${name}`, `${value} is outside ${least} to ${most}${isInteger ? ', whole numbers' : ''}.`)
+    }
+    guard[name] = value
+  }
+  return guard
+}
+
+/** Rates for plain squared error where neither the request nor the version recommends one. Tuned on simulated payload motions. */
+const MSE_RATES: Readonly<Record<Scheme, Readonly<Record<UpdateSettings['kind'], number>>>> = {
+  all: { sgd: 0.1, adam: 0.003 },
+  last_layer: { sgd: 0.05, adam: 0.01 },
+  bias: { sgd: 1, adam: 0.1 },
+}
+
+/** What a request for an adaptation may leave out. */
+export interface RequestedSettings {
+  readonly scheme?: Scheme
+  readonly update?: Partial<UpdateSettings>
+  readonly guard?: Partial<GuardSettings>
+}
+
+/**
+ * Completes what a request leaves out: first from the recommended settings (the loss version's, or the base version's for
+ * plain squared error), then from defaults. Recommended rates count only for the scheme and kind they were found with.
+ *
+ * @param recommended  null where nothing is recommended
+ * @param horizon  the arm's, s
+ * @throws {SettingError} a setting lies outside its range
+ */
+export function completeSettings(
+  requested: RequestedSettings,
+  recommended: { readonly scheme: Scheme; readonly update: UpdateSettings } | null,
+  horizon: number,
+): AdaptationSettings {
+  const scheme = requested.scheme ?? recommended?.scheme ?? 'all'
+  const kind = requested.update?.kind ?? recommended?.update.kind ?? 'sgd'
+  const fitting = recommended?.scheme === scheme && recommended.update.kind === kind ? recommended.update : null
+  const update: UpdateSettings = {
+    kind,
+    rate: requested.update?.rate ?? fitting?.rate ?? MSE_RATES[scheme][kind],
+    rowsPerStep: requested.update?.rowsPerStep ?? fitting?.rowsPerStep ?? 4,
+    fade: scheme === 'bias' ? requested.update?.fade ?? fitting?.fade ?? 0.5 : 1,
+  }
+  if (!(update.rate > 0 && update.rate <= 10)) throw new SettingError('update.rate', `${update.rate} is outside 0 to 10.`)
+  if (!Number.isInteger(update.rowsPerStep) || update.rowsPerStep < 1 || update.rowsPerStep > MOST_BATCH_ROWS) {
+    throw new SettingError('update.rowsPerStep', `${update.rowsPerStep} is outside 1 to ${MOST_BATCH_ROWS}, whole numbers.`)
+  }
+  if (!(update.fade > 0 && update.fade <= 1)) throw new SettingError('update.fade', `${update.fade} is outside 0 to 1.`)
+  return { scheme, update, guard: completeGuard(requested.guard ?? {}, scheme, update), horizon }
+}

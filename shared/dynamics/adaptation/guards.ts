@@ -1,0 +1,110 @@
+import type { Reason, ReasonCode } from './adaptation.ts'
+import type { GuardSettings } from './settings.ts'
+
+/** What the guards know of the arm and the version, made ready once. n joints. */
+export interface GuardTable {
+  readonly settings: GuardSettings
+  readonly jointNames: readonly string[]
+  readonly units: readonly string[]
+  /** N·m per base standard deviation, length n. */
+  readonly outputStd: Float64Array
+  /** Largest change and drift of predicted torque, base standard deviations, length n. */
+  readonly torqueChange: Float64Array
+  readonly drift: Float64Array
+  /** Squared noise, base standard deviations, length n. */
+  readonly noiseSquared: Float64Array
+}
+
+/**
+ * Whether one joint is worse than base: its root mean square error more than `tolerance` above base's, and the mean
+ * squared errors further apart than the noise's. Without the second test, a joint on which base is all but perfect would
+ * stop the others from learning.
+ *
+ * @param served, base  sums of squared errors over the same rows, base standard deviations
+ */
+export function isWorse(served: number, base: number, rows: number, noiseSquared: number, tolerance: number): boolean {
+  const bound = (1 + tolerance) * (1 + tolerance) * base
+  return served > bound && served - base > rows * noiseSquared
+}
+
+/** The first joint that isWorse, or −1. */
+export function worseJoint({ settings, noiseSquared }: GuardTable, served: Float64Array, base: Float64Array, rows: number): number {
+  for (let j = 0; j < served.length; j++) {
+    if (isWorse(served[j], base[j], rows, noiseSquared[j], settings.tolerance)) return j
+  }
+  return -1
+}
+
+/** Index into `states` of the joint that exceeds its bound the most on any reference state, or −1. */
+export function mostExceeding(now: Float64Array, before: Float64Array, bounds: Float64Array): number {
+  let worst = -1
+  let most = 1
+  for (let k = 0, j = 0; k < now.length; k++, j = j + 1 === bounds.length ? 0 : j + 1) {
+    const difference = now[k] - before[k]
+    const ratio = (difference < 0 ? -difference : difference) / bounds[j]
+    if (ratio > most) {
+      most = ratio
+      worst = k
+    }
+  }
+  return worst
+}
+
+/** A number as a sentence shows it: four significant digits. */
+function shown(value: number): string {
+  return String(Number(value.toPrecision(4)))
+}
+
+function reason(code: ReasonCode, detail: string, joint: number | null, found: number | null, bound: number | null): Reason {
+  return { code, detail, joint, found, bound }
+}
+
+/** The sentences of all verdicts, one function per code. */
+export const reasons = {
+  notFinite: (what: string): Reason =>
+    reason('not_finite', `${what} is not a finite number, so nothing can be learned from this batch.`, null, null, null),
+
+  stepNorm: (found: number, bound: number): Reason =>
+    reason('step_norm', `The step would change the adapted numbers by ${shown(found)}, more than ${shown(bound)}.`, null, found, bound),
+
+  torqueChange: (table: GuardTable, joint: number, found: number): Reason => {
+    const bound = table.torqueChange[joint] * table.outputStd[joint]
+    return reason('torque_change', `${table.jointNames[joint]}: the step would change the predicted torque by ${shown(found)} ` +
+      `${table.units[joint]} on a reference state, more than ${shown(bound)} ${table.units[joint]} ` +
+      `(${shown(100 * table.settings.torqueChange)} % of the joint's limit).`, joint, found, bound)
+  },
+
+  drift: (table: GuardTable, joint: number, found: number): Reason => {
+    const bound = table.drift[joint] * table.outputStd[joint]
+    return reason('drift', `${table.jointNames[joint]}: the predicted torque would lie ${shown(found)} ${table.units[joint]} from the ` +
+      `base version's on a reference state, more than ${shown(bound)} ${table.units[joint]} ` +
+      `(${shown(100 * table.settings.drift)} % of the joint's limit).`, joint, found, bound)
+  },
+
+  /** found, base: root mean square errors in the joint's unit. */
+  worseThanBase: (table: GuardTable, joint: number, found: number, base: number, where: string): Reason => {
+    const bound = (1 + table.settings.tolerance) * base
+    return reason('worse_than_base', `${table.jointNames[joint]}: ${where} the error is ${shown(found)} ${table.units[joint]}, base's ` +
+      `${shown(base)} ${table.units[joint]}; more than ${shown(100 * table.settings.tolerance)} % worse is not served.`,
+      joint, found, bound)
+  },
+
+  noHelp: (found: number, bound: number): Reason =>
+    reason('no_help', `On the newest quarter, which it did not see, the step leaves an error of ${shown(found)}, no less than the ` +
+      `${shown(bound)} before it.`, null, found, bound),
+
+  frozen: (why: string): Reason =>
+    reason('frozen', `The adaptation is frozen: ${why}`, null, null, null),
+
+  gap: (found: number, bound: number): Reason =>
+    reason('gap', `The rows pause for ${shown(found)} s, longer than ${shown(bound)} s; steps are not taken across a gap.`,
+      null, found, bound),
+
+  excitation: (table: GuardTable, joint: number, found: number): Reason =>
+    reason('excitation', `The arm hardly moved over the last second: the most moved joint, ${table.jointNames[joint]}, reached ` +
+      `${shown(found)} of its base standard deviation of velocity, less than ${shown(table.settings.excitation)}.`,
+      joint, found, table.settings.excitation),
+
+  belowNoise: (found: number): Reason =>
+    reason('below_noise', `The error is ${shown(found)} times the noise, which no step can improve.`, null, found, 1),
+}
