@@ -33,7 +33,7 @@ export const allActions = Object.keys(actions) as Action[]
 /** Who asks, in which team. Services take this, never a request. */
 export type Caller =
   | { kind: 'person'; teamId: string; id: string; name: string; role: Role; sessionId: string }
-  | { kind: 'key'; teamId: string; id: string; name: string; scopes: readonly Scope[] }
+  | { kind: 'key'; teamId: string; id: string; name: string; scopes: readonly Scope[]; secret?: 'newest' | 'former' }
 
 export function rolesFor(action: Action): readonly Role[] {
   return actions[action].roles
