@@ -1,0 +1,12 @@
+import { queryOptions } from '@tanstack/react-query'
+import type { Schemas } from '../../../sdk/index.ts'
+import { heftwise } from '../../lib/client.ts'
+import { everything } from '../../lib/everything.ts'
+
+export type Arm = Schemas['Arm']
+
+export const armsOptions = queryOptions({
+  queryKey: ['arms'],
+  queryFn: ({ signal }) => everything((cursor) => heftwise.arms.list({ cursor, limit: 200, signal })),
+  staleTime: 30_000,
+})
