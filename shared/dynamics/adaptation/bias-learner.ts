@@ -1,14 +1,14 @@
 import { fade } from '../deterministic.ts'
 import type { Kernels } from '../kernels/kernels.ts'
-import { lossShapeOf } from '../loss-version.ts'
-import { lossKinds } from '../losses/index.ts'
 import { updateKinds } from '../updates/index.ts'
 import type { AdaptationInputs } from './adaptation.ts'
 import type { Learned, Learner, Rows } from './learner.ts'
+import { loadLossOf } from './loss-of.ts'
 import { createReference } from './reference.ts'
 
 interface LearnedBias extends Learned {
   readonly bias: Float64Array
+  /** What the update remembers, as in `updates`. */
   readonly memory: Float64Array
 }
 
@@ -16,27 +16,24 @@ interface LearnedBias extends Learned {
  * Scheme `bias`: ŷ(t + h) = base(x) + ρ^h b, b per joint in double precision. A group of rowsPerStep rows first lets b fade
  * up to its newest row, then steps on the loss of base(x) + b over the group.
  */
-export function createBiasLearner(kernels: Kernels, { version, loss, settings }: AdaptationInputs): Learner {
+export function createBiasLearner(kernels: Kernels, inputs: AdaptationInputs): Learner {
+  const { version, settings } = inputs
   const { joints, network: shape } = version.description
   const { rate, rowsPerStep, kind, fade: share } = settings.update
   const network = kernels.loadNetwork(shape, version.parameters)
   const reference = createReference(kernels, version)
-  const update = updateKinds[kind]
-  const lossShape = loss === 'mse' ? { joints, inputs: 3 * joints, hidden: 0, positive: 'exp' as const } : lossShapeOf(loss.description)
-  const phi = loss === 'mse' ? new Float64Array(0) : Float64Array.from(loss.parameters)
-  const kindOfLoss = lossKinds[loss === 'mse' ? 'mse' : loss.description.kind]
-  const stepLoss = kindOfLoss.create(lossShape, rowsPerStep)
-  const idle: LearnedBias[] = []
-  const biasGradient = new Float64Array(joints)
-  const stepRows = { x: new Float64Array(rowsPerStep * 3 * joints), y: new Float64Array(rowsPerStep * joints) }
-  const stepMeasured = new Float64Array(rowsPerStep * joints)
-  const outputGradient = new Float64Array(rowsPerStep * joints)
-  const initialMemory = update.initialState(joints)
   const baseReference = reference.create()
   reference.predict(network, baseReference)
+  const loss = loadLossOf(kernels, inputs)
+  const update = updateKinds[kind]
+  const initialMemory = update.initialState(joints)
+  const idle: LearnedBias[] = []
+  const squares = new Float64Array(joints)
+  const gradient = new Float64Array(joints)
+  const stepWeights = new Float64Array(joints)
   let outputs = new Float32Array(64 * joints)
-  let batchLoss = kindOfLoss.create(lossShape, 64)
-  let batchX = new Float64Array(64 * 3 * joints)
+  let predicted = new Float64Array(64 * joints)
+  let slope = new Float32Array(64 * joints)
 
   function make(): LearnedBias {
     return {
@@ -44,23 +41,26 @@ export function createBiasLearner(kernels: Kernels, { version, loss, settings }:
     }
   }
 
-  function evaluateBase(batch: Rows, from: number, rows: number): void {
-    if (outputs.length < rows * joints) outputs = new Float32Array(2 * rows * joints)
-    kernels.forward(network, batch.x.subarray(from * 3 * joints, (from + rows) * 3 * joints), rows, outputs)
+  function evaluateBase(batch: Rows, from: number, to: number): void {
+    const values = (to - from) * joints
+    if (outputs.length < values) {
+      outputs = new Float32Array(2 * values)
+      predicted = new Float64Array(2 * values)
+      slope = new Float32Array(2 * values)
+    }
+    kernels.errors(network, batch.handle, { from, to }, squares, outputs)
   }
 
-  function addToReference(learned: LearnedBias): void {
-    for (let k = 0; k < baseReference.length; k++) learned.reference[k] = baseReference[k] + learned.bias[k % joints]
+  function addToReference({ reference: sum, bias }: LearnedBias): void {
+    for (let k = 0, j = 0; k < sum.length; k++, j = j + 1 === joints ? 0 : j + 1) sum[k] = baseReference[k] + bias[j]
   }
 
-  function age(learned: Learned, time: number): void {
-    const { bias } = learned as LearnedBias
+  function letFade(learned: LearnedBias, time: number): void {
     if (time > learned.asOf) {
       const left = fade(share, time - learned.asOf)
-      for (let j = 0; j < joints; j++) bias[j] *= left
+      for (let j = 0; j < joints; j++) learned.bias[j] *= left
     }
     learned.asOf = time
-    addToReference(learned as LearnedBias)
   }
 
   function copy(from: Learned, into: Learned): void {
@@ -69,18 +69,14 @@ export function createBiasLearner(kernels: Kernels, { version, loss, settings }:
     into.asOf = from.asOf
   }
 
-  /** One step on rows start..start+used of the batch, whose base prediction lies in `outputs`. */
-  function step(learned: LearnedBias, batch: Rows, start: number, used: number): void {
-    const { x, y } = stepRows
-    for (let k = 0; k < used * 3 * joints; k++) x[k] = batch.x[start * 3 * joints + k]
-    for (let k = 0; k < used * joints; k++) {
-      y[k] = outputs[start * joints + k] + learned.bias[k % joints]
-      stepMeasured[k] = batch.measured[start * joints + k]
-    }
-    stepLoss.gradient(phi, { rows: used, x, measured: stepMeasured, predicted: y }, outputGradient)
-    biasGradient.fill(0)
-    for (let k = 0; k < used * joints; k++) biasGradient[k % joints] += outputGradient[k]
-    update.step(learned.bias, biasGradient, learned.memory, rate)
+  /** One step on rows from..to of the batch; the base's prediction of the batch lies in `outputs`. */
+  function step({ bias, memory }: LearnedBias, batch: Rows, from: number, to: number): void {
+    const values = (to - from) * joints
+    for (let k = 0; k < values; k++) predicted[k] = outputs[from * joints + k] + bias[k % joints]
+    kernels.predictionGradient(loss, batch.handle, { from, to }, predicted, slope, stepWeights)
+    gradient.fill(0)
+    for (let k = 0; k < values; k++) gradient[k % joints] += slope[k]
+    update.step(bias, gradient, memory, rate)
   }
 
   const base = make()
@@ -92,7 +88,7 @@ export function createBiasLearner(kernels: Kernels, { version, loss, settings }:
     giveBack: learned => void idle.push(learned as LearnedBias),
     predict(learned, batch, from, to, out) {
       const { bias } = learned as LearnedBias
-      evaluateBase(batch, from, to - from)
+      evaluateBase(batch, from, to)
       for (let row = from, k = 0; row < to; row++) {
         const left = batch.time[row] > learned.asOf ? fade(share, batch.time[row] - learned.asOf) : 1
         for (let j = 0; j < joints; j++, k++) out[row * joints + j] = outputs[k] + left * bias[j]
@@ -102,13 +98,16 @@ export function createBiasLearner(kernels: Kernels, { version, loss, settings }:
       copy(from, into)
       evaluateBase(batch, 0, rows)
       for (let start = 0; start < rows; start += rowsPerStep) {
-        const used = Math.min(rowsPerStep, rows - start)
-        age(into, batch.time[start + used - 1])
-        step(into as LearnedBias, batch, start, used)
+        const end = Math.min(start + rowsPerStep, rows)
+        letFade(into as LearnedBias, batch.time[end - 1])
+        step(into as LearnedBias, batch, start, end)
       }
       addToReference(into as LearnedBias)
     },
-    age,
+    age(learned, time) {
+      letFade(learned as LearnedBias, time)
+      addToReference(learned as LearnedBias)
+    },
     restart(from, into) {
       copy(from, into);
       (into as LearnedBias).memory.set(initialMemory)
@@ -122,13 +121,10 @@ export function createBiasLearner(kernels: Kernels, { version, loss, settings }:
       }
       return Math.sqrt(sum)
     },
-    weights(batch, predicted, out) {
-      if (batchX.length < batch.rows * 3 * joints) {
-        batchX = new Float64Array(batch.rows * 3 * joints)
-        batchLoss = kindOfLoss.create(lossShape, batch.rows)
-      }
-      for (let k = 0; k < batch.rows * 3 * joints; k++) batchX[k] = batch.x[k]
-      batchLoss.weights(phi, { rows: batch.rows, x: batchX, measured: batch.measured, predicted }, out)
+    weights(learned, batch, out) {
+      if (loss.name !== 'unstructured') return void kernels.meanWeights(loss, batch.handle, {}, out)
+      this.predict(learned, batch, 0, batch.rows, predicted)
+      kernels.predictionGradient(loss, batch.handle, {}, predicted, slope, out)
     },
     write(learned, bytes) {
       bytes.float64(learned.asOf)
@@ -141,6 +137,9 @@ export function createBiasLearner(kernels: Kernels, { version, loss, settings }:
       bytes.float64s((into as LearnedBias).memory)
       addToReference(into as LearnedBias)
     },
-    release: () => network.free(),
+    release() {
+      network.free()
+      loss.free()
+    },
   }
 }

@@ -11,7 +11,7 @@ import { createBiasLearner } from './bias-learner.ts'
 import { ByteReader, Bytes } from './bytes.ts'
 import { mostExceeding, reasons, worseJoint } from './guards.ts'
 import type { GuardTable } from './guards.ts'
-import type { Learned, Learner, LearnerFactory } from './learner.ts'
+import type { Learned, Learner, LearnerFactory, Rows } from './learner.ts'
 import { createNetworkLearner } from './network-learner.ts'
 import { createRows, createScales, fillRows } from './rows.ts'
 import type { Scales } from './rows.ts'
@@ -88,7 +88,7 @@ class Machine implements Adaptation {
   #tip: State
 
   // Work areas of prepare, overwritten by every batch.
-  readonly #rows = createRows()
+  readonly #rows: Rows
   #served = new Float64Array(0)
   #base = new Float64Array(0)
   #candidate = new Float64Array(0)
@@ -109,6 +109,7 @@ class Machine implements Adaptation {
     this.#predictor = createRowPredictor(kernels, version, limits)
     this.#learner = learners[settings.scheme](kernels, inputs)
     this.#window = new BatchWindow(joints)
+    this.#rows = createRows(kernels, joints)
     const share = (of: number) => Float64Array.from(limits.torque, (limit, j) => (of * limit) / normalisation.outputStd[j])
     this.#guard = {
       settings: settings.guard,
@@ -193,6 +194,7 @@ class Machine implements Adaptation {
   release(): void {
     this.#learner.release()
     this.#predictor.release()
+    this.#rows.handle.free()
   }
 
   checkpoint(): Uint8Array {
@@ -275,7 +277,7 @@ class Machine implements Adaptation {
       before: isFinite ? before : Number.MAX_VALUE, after: null,
       jointBefore: this.#rootMeans(servedSums, rows), jointAfter: null, weights: new Float64Array(joints), stepNorm: null, changedTo: null,
     }
-    if (isFinite) this.#learner.weights(this.#rows, this.#served, outcome.weights)
+    if (isFinite) this.#learner.weights(from, this.#rows, outcome.weights)
     else outcome.weights.fill(1)
     this.#judge(entry, next, outcome, { isFinite, isSmall, pause, errorRows })
     outcome.revision = next.revision

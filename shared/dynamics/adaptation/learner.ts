@@ -1,4 +1,4 @@
-import type { Kernels, NetworkHandle } from '../kernels/kernels.ts'
+import type { BatchHandle, Kernels, NetworkHandle } from '../kernels/kernels.ts'
 import type { AdaptationInputs } from './adaptation.ts'
 import type { Bytes, ByteReader } from './bytes.ts'
 
@@ -9,9 +9,10 @@ export interface Rows {
   time: Float64Array
   /** rows × 3n: normalised [position, velocity, acceleration]. */
   x: Float32Array
-  /** rows × n: measured torque in base standard deviations, in both precisions. */
+  /** rows × n: measured torque in base standard deviations. */
   measured: Float64Array
-  measured32: Float32Array
+  /** The same rows in kernel memory. */
+  readonly handle: BatchHandle
 }
 
 /**
@@ -22,8 +23,6 @@ export interface Learned {
   readonly network: NetworkHandle
   /** Scheme `bias`: base standard deviations at asOf, length n. */
   readonly bias: Float64Array | null
-  /** The update's own memory, if it has any. */
-  readonly memory: unknown
   /** Predicted torque on the reference states, states × n, base standard deviations. */
   readonly reference: Float64Array
   /** Time of the newest row it was served after, s; NaN before the first. */
@@ -48,8 +47,8 @@ export interface Learner {
   restart(from: Learned, into: Learned): void
   /** Euclidean norm of the difference; NaN or Infinity where a number is not finite. */
   distance(a: Learned, b: Learned): number
-  /** Mean loss weight per joint over the batch. */
-  weights(batch: Rows, predicted: Float64Array, out: Float64Array): void
+  /** Mean loss weight per joint over the batch, length n. */
+  weights(learned: Learned, batch: Rows, out: Float64Array): void
   write(learned: Learned, bytes: Bytes): void
   read(bytes: ByteReader, into: Learned): void
   release(): void

@@ -1,3 +1,4 @@
+import type { Kernels } from '../kernels/kernels.ts'
 import type { Normalisation } from '../version.ts'
 import type { BatchEntry } from './adaptation.ts'
 import type { Rows } from './learner.ts'
@@ -26,9 +27,10 @@ export function createScales({ inputMean, inputStd, outputMean, outputStd }: Nor
   }
 }
 
-export function createRows(): Rows {
+/** An empty work area; its handle has to be freed. */
+export function createRows(kernels: Kernels, joints: number): Rows {
   const nothing = new Float64Array(0)
-  return { rows: 0, time: nothing, x: new Float32Array(0), measured: nothing, measured32: new Float32Array(0) }
+  return { rows: 0, time: nothing, x: new Float32Array(0), measured: nothing, handle: kernels.createBatch(3 * joints, joints) }
 }
 
 /** Normalises a batch into the work area, which grows when it must. */
@@ -38,9 +40,8 @@ export function fillRows(entry: BatchEntry, scales: Scales, into: Rows): void {
   if (into.measured.length < rows * joints) {
     into.x = new Float32Array(rows * 3 * joints)
     into.measured = new Float64Array(rows * joints)
-    into.measured32 = new Float32Array(rows * joints)
   }
-  const { x, measured, measured32 } = into
+  const { x, measured } = into
   into.rows = rows
   into.time = entry.time
   for (let row = 0, at = 0; row < rows; row++) {
@@ -52,7 +53,7 @@ export function fillRows(entry: BatchEntry, scales: Scales, into: Rows): void {
       x[v + j] = (velocity[at] - inputMean[joints + j]) / inputStd[joints + j]
       x[a + j] = (acceleration[at] - inputMean[2 * joints + j]) / inputStd[2 * joints + j]
       measured[at] = (torque[at] - outputMean[j]) / outputStd[j]
-      measured32[at] = measured[at]
     }
   }
+  into.handle.loadNormalised(x, measured, rows)
 }
