@@ -1,94 +1,83 @@
-import type { NetworkShape } from '../network.ts'
+import type { LossName, LossShape } from '../losses/index.ts'
+import { firstTrainedLayer, type NetworkShape } from '../network.ts'
 import { checkLength, ShapeError } from '../shape-error.ts'
 import { Arena } from './arena.ts'
-import { wasm } from './kernels.generated.ts'
-import { layOut, readBlock, writeBlock, type PaddedNetwork } from './layout.ts'
+import { checkCount, checkRoom, LoadedBatch } from './batch.ts'
+import {
+  LoadedLoss, LoadedMoments, LoadedNetwork, LoadedNormalisation, lossNetwork, own, type BatchHandle, type LossHandle,
+  type MomentsHandle, type Motion, type NetworkHandle, type Normalisation, type NormalisationHandle,
+} from './handles.ts'
+import { layOut, padded, readBlock, type PaddedNetwork } from './layout.ts'
+import { instantiate, type KernelExports } from './module.ts'
+import { copyIn, copyOut, Scratch } from './scratch.ts'
+
+export type {
+  BatchHandle, LossHandle, MomentsHandle, Motion, NetworkHandle, Normalisation, NormalisationHandle,
+} from './handles.ts'
+
+/** What of a network is trained. */
+export type NetworkScheme = 'all' | 'last_layer'
+
+/** Rows `from` to before `to` of a batch; all of them when left out. */
+export interface RowRange {
+  readonly from?: number
+  readonly to?: number
+}
+
+/** How steps are taken. */
+export interface StepSettings extends RowRange {
+  readonly scheme: NetworkScheme
+  /** Consecutive steps of so many rows, in time order; the last one takes what is left. */
+  readonly rowsPerStep: number
+  /** Step size, positive. */
+  readonly rate: number
+  /** Adam's state, moved on in place; without it plain gradient descent. */
+  readonly moments?: MomentsHandle
+}
+
+/** What steps did. */
+export interface StepReport {
+  /** Number of steps. */
+  readonly steps: number
+  /** Mean over the rows of the loss, each before the step it was part of. */
+  readonly loss: number
+  /** Mean norm of the steps' gradients. */
+  readonly gradientNorm: number
+  /** Mean weight per joint over the rows, each before its step; see `Loss.weights`. */
+  readonly weights: Float64Array
+}
 
 /** Rows the kernels work on at a time; the constant of the same name in source/rows.ts. */
 const chunkRows = 32
 
-/** What the WebAssembly module exports; addresses are bytes, row strides are in the network's description. */
-interface Exports {
-  memory: WebAssembly.Memory
-  heapBase(): number
-  elementary(which: number, values: number, count: number, out: number): void
-  predictNormalised(
-    net: number, parameters: number, x: number, inputs: number, rows: number, work: number, y: number, outputs: number,
-  ): void
-  predictMotion(
-    net: number, parameters: number, position: number, velocity: number, acceleration: number, joints: number, scales: number,
-    rows: number, work: number, torque: number,
-  ): void
-}
-
-/** A network's parameters in kernel memory. Free it when it is no longer needed: nothing else will. */
-export interface NetworkHandle {
-  readonly shape: NetworkShape
-  /** Number of canonical parameters. */
-  readonly parameterCount: number
-  /** The parameters in canonical order, to the bit. */
-  read(out?: Float32Array): Float32Array
-  /** Replaces the parameters. @throws {ShapeError} not `parameterCount` values */
-  write(parameters: ArrayLike<number>): void
-  /** Another handle with the same parameters. */
-  clone(): NetworkHandle
-  /** Takes over the parameters of a network of the same shape. @throws {ShapeError} the shape differs */
-  copyFrom(other: NetworkHandle): void
-  /** Gives the memory back. Using the handle afterwards throws. */
-  free(): void
-}
-
-/** What turns motions into network inputs and outputs into torques; n joints. */
-export interface Normalisation {
-  /** 3n: position, velocity, acceleration; rad, rad/s, rad/s² (prismatic m, m/s, m/s²). */
-  readonly inputMean: ArrayLike<number>
-  readonly inputStd: ArrayLike<number>
-  /** n, N·m (prismatic N). */
-  readonly outputMean: ArrayLike<number>
-  readonly outputStd: ArrayLike<number>
-}
-
-/** A normalisation in kernel memory. */
-export interface NormalisationHandle {
-  readonly joints: number
-  free(): void
-}
-
-/** Where a caller writes f64 motions, to spare a copy: rows × joints each. Valid until the next call on the kernels. */
-export interface MotionArea {
-  readonly position: Float64Array
-  readonly velocity: Float64Array
-  readonly acceleration: Float64Array
-}
-
-const kindsOfElementary = { exp: 0, tanh: 1, softplus: 2, sigmoid: 3 } as const
-
-let compiled: WebAssembly.Module | undefined
+const numbersOfElementary = { exp: 0, tanh: 1, softplus: 2, sigmoid: 3 } as const
 
 /**
  * Instantiates the kernels with a memory of their own. Synchronous, quick after the first time, the same in Node, a worker
  * and a browser (whose content policy must allow 'wasm-unsafe-eval'). Results are the same to the bit in every instance.
  */
 export function createKernels(): Kernels {
-  compiled ??= new WebAssembly.Module(Uint8Array.from(atob(wasm), (character) => character.charCodeAt(0)))
-  return new Kernels(new WebAssembly.Instance(compiled, {}).exports as unknown as Exports)
+  return new Kernels(instantiate())
 }
 
-/** SIMD kernels in f32 and the memory that networks live in. Handles of one instance cannot be used with another. */
+/**
+ * SIMD kernels in f32 and the memory that networks live in. Handles belong to the instance that made them, and have to be
+ * freed. Nothing here is asynchronous, so one instance serves any number of adaptations.
+ */
 export class Kernels {
-  readonly #exports: Exports
+  readonly #exports: KernelExports
   readonly #arena: Arena
+  readonly #scratch: Scratch
   readonly #descriptions = new Map<string, { layout: PaddedNetwork; address: number }>()
-  /** Scratch areas, by use; grown when a call needs more. */
-  readonly #scratch = new Map<string | PaddedNetwork, { address: number; bytes: number }>()
 
-  /** @internal use createKernels */
-  constructor(exports: Exports) {
+  /** Use createKernels. */
+  constructor(exports: KernelExports) {
     this.#exports = exports
     this.#arena = new Arena(exports.memory, exports.heapBase())
+    this.#scratch = new Scratch(this.#arena)
   }
 
-  /** Bytes of kernel memory in use. */
+  /** Bytes of kernel memory in use, work areas included. */
   get usedBytes(): number {
     return this.#arena.usedBytes
   }
@@ -102,7 +91,29 @@ export class Kernels {
   loadNetwork(shape: NetworkShape, parameters: ArrayLike<number>): NetworkHandle {
     const { layout, address } = this.#describe(shape)
     checkLength('parameters', parameters.length, layout.parameterCount, `sizes ${shape.sizes.join('-')}`)
-    return new LoadedNetwork(this.#arena, layout, address, parameters)
+    const network = new LoadedNetwork(this.#arena, layout, address)
+    network.write(parameters)
+    return network
+  }
+
+  /** Adam's state before the first step, for networks of this one's shape. */
+  createMoments(network: NetworkHandle): MomentsHandle {
+    return new LoadedMoments(this.#arena, own(this.#arena, network, LoadedNetwork).layout)
+  }
+
+  /**
+   * Puts a loss into kernel memory.
+   *
+   * @param parameters  φ in the order of its kind, rounded to f32
+   * @throws {ShapeError} the number of parameters is another
+   */
+  loadLoss(name: LossName, shape: LossShape, parameters: ArrayLike<number>): LossHandle {
+    const network = lossNetwork(name, shape)
+    const net = network === undefined ? undefined : this.#describe(network)
+    checkLength('parameters', parameters.length, net?.layout.parameterCount ?? 0, `loss ${name}`)
+    const loss = new LoadedLoss(this.#arena, name, { ...shape }, net)
+    loss.write(parameters)
+    return loss
   }
 
   /**
@@ -116,6 +127,15 @@ export class Kernels {
   }
 
   /**
+   * An empty batch, to be loaded again and again; it grows with what is loaded.
+   *
+   * @param inputs  length of an input row (3n); joints: n
+   */
+  createBatch(inputs: number, joints: number): BatchHandle {
+    return new LoadedBatch(this.#arena, this.#exports, this.#scratch, inputs, joints)
+  }
+
+  /**
    * Evaluates a network on normalised rows. Row i of many equals row i alone to the bit.
    *
    * @param x  rows × inputs
@@ -123,30 +143,31 @@ export class Kernels {
    * @throws {ShapeError} x or out is too short for the rows
    */
   forward(network: NetworkHandle, x: ArrayLike<number>, rows: number, out: Float32Array): Float32Array {
-    const { layout, description, address } = loaded(network)
-    checkCount(rows)
-    checkRoom('x', x.length, rows * layout.inputs)
-    checkRoom('out', out.length, rows * layout.outputs)
+    const { layout, description, address } = own(this.#arena, network, LoadedNetwork)
     const inputCount = rows * layout.inputs
     const outputCount = rows * layout.outputs
-    const xAt = this.#room('x', 4 * inputCount)
-    const yAt = this.#room('y', 4 * outputCount)
+    checkCount(rows)
+    checkRoom('x', x.length, inputCount)
+    checkRoom('out', out.length, outputCount)
+    const xAt = this.#scratch.room('x', 4 * inputCount)
+    const yAt = this.#scratch.room('y', 4 * outputCount)
     const work = this.#workFor(layout)
-    this.#arena.f32.set(x.length === inputCount ? x : slice(x, inputCount), xAt / 4)
+    copyIn(x, inputCount, this.#arena.f32, xAt / 4)
     this.#exports.predictNormalised(description, address, xAt, layout.inputs, rows, work, yAt, layout.outputs)
     copyOut(this.#arena.f32, yAt / 4, outputCount, out)
     return out
   }
 
   /**
-   * Views that `predict` and its like read when they are given no arrays: fill them, then call. Spares one copy.
+   * Views that `predict` reads when it is given no motion: fill them, then call it. Spares one copy. Valid until the next
+   * other call on the kernels.
    *
    * @param rows  1 or more
    */
-  motionArea(joints: number, rows: number): MotionArea {
+  motionArea(joints: number, rows: number): { position: Float64Array; velocity: Float64Array; acceleration: Float64Array } {
     checkCount(rows)
     const count = rows * joints
-    const at = this.#room('motion', 24 * count) / 8
+    const at = this.#scratch.room('motion', 24 * count) / 8
     const { f64 } = this.#arena
     return {
       position: f64.subarray(at, at + count),
@@ -163,27 +184,208 @@ export class Kernels {
    * @throws {ShapeError} an array is too short, or network and normalisation are of different arms
    */
   predict(
-    network: NetworkHandle,
-    normalisation: NormalisationHandle,
-    motion: { position: ArrayLike<number>; velocity: ArrayLike<number>; acceleration: ArrayLike<number> } | undefined,
-    rows: number,
-    torque: Float64Array,
+    network: NetworkHandle, normalisation: NormalisationHandle, motion: Motion | undefined, rows: number, torque: Float64Array,
   ): Float64Array {
-    const { layout, description, address } = loaded(network)
-    const { joints, address: scales } = loadedNormalisation(normalisation)
+    const { layout, description, address } = own(this.#arena, network, LoadedNetwork)
+    const { joints, address: scales } = own(this.#arena, normalisation, LoadedNormalisation)
+    const count = rows * joints
     checkCount(rows)
     checkArm(layout, joints)
-    const count = rows * joints
     checkRoom('torque', torque.length, count)
-    const at = this.#room('motion', 24 * count)
-    const out = this.#room('torque', 8 * count)
+    const at = this.#scratch.room('motion', 24 * count)
+    const out = this.#scratch.room('torque', 8 * count)
     const work = this.#workFor(layout)
-    if (motion !== undefined) this.#writeMotion(motion, count, at)
-    this.#exports.predictMotion(
-      description, address, at, at + 8 * count, at + 16 * count, joints, scales, rows, work, out,
-    )
+    if (motion !== undefined) {
+      checkRoom('position', motion.position.length, count)
+      checkRoom('velocity', motion.velocity.length, count)
+      checkRoom('acceleration', motion.acceleration.length, count)
+      const { f64 } = this.#arena
+      copyIn(motion.position, count, f64, at / 8)
+      copyIn(motion.velocity, count, f64, at / 8 + count)
+      copyIn(motion.acceleration, count, f64, at / 8 + 2 * count)
+    }
+    this.#exports.predictMotion(description, address, at, at + 8 * count, at + 16 * count, joints, scales, rows, work, out)
     copyOut(this.#arena.f64, out / 8, count, torque)
     return torque
+  }
+
+  /**
+   * Mean squared error of a network per joint on rows of a batch, in base standard deviations, and its predictions.
+   *
+   * @param squares  out, length joints: mean over the rows of (measured − predicted)², summed in f64
+   * @param predicted  out, rows × joints, normalised, if wanted
+   * @throws {ShapeError} the network is of another arm, an array is too short, or the range is empty
+   */
+  errors(
+    network: NetworkHandle, batch: BatchHandle, range: RowRange, squares: Float64Array, predicted?: Float32Array,
+  ): Float64Array {
+    const { layout, description, address } = own(this.#arena, network, LoadedNetwork)
+    const rows = this.#rowsOf(batch, range)
+    const { x, measured, count, joints, width } = rows
+    checkNetwork(layout, rows)
+    checkRoom('squares', squares.length, joints)
+    if (predicted !== undefined) checkRoom('predicted', predicted.length, count * joints)
+    const sums = this.#clearedSums(joints)
+    const y = this.#scratch.room('y', count * width)
+    // Behind the input rows of that area, whose padding has to stay zero.
+    const work = this.#workFor(layout) + 4 * chunkRows * layout.inputStride
+    this.#exports.squaredErrors(description, address, x, measured, count, work, joints, y, sums)
+    for (let joint = 0; joint < joints; joint++) squares[joint] = this.#arena.f64[sums / 8 + joint] / count
+    if (predicted !== undefined) this.#gather(y, width, joints, count, predicted)
+    return squares
+  }
+
+  /**
+   * Steps a network through rows of a batch: forward, loss weights, backward and update, all in one call.
+   *
+   * @param network  changed in place: pass a copy when the step may be refused
+   * @throws {ShapeError} network, loss, batch and moments are not of one shape, or the range is empty
+   * @throws {RangeError} rate or rowsPerStep is not positive
+   */
+  step(network: NetworkHandle, loss: LossHandle, batch: BatchHandle, settings: StepSettings): StepReport {
+    const { layout, description, address } = own(this.#arena, network, LoadedNetwork)
+    const lossHandle = own(this.#arena, loss, LoadedLoss)
+    const moments = settings.moments === undefined ? undefined : own(this.#arena, settings.moments, LoadedMoments)
+    const rows = this.#rowsOf(batch, settings)
+    const { x, measured, count, joints } = rows
+    const { rate, rowsPerStep, scheme } = settings
+    checkNetwork(layout, rows)
+    checkLoss(loss.shape, rows)
+    if (moments !== undefined && moments.layout !== layout) throw new ShapeError('The moments are of a network of another shape.')
+    if (!(rate > 0)) throw new RangeError(`rate is ${rate}, expected a positive number.`)
+    if (!(Number.isInteger(rowsPerStep) && rowsPerStep > 0)) {
+      throw new RangeError(`rowsPerStep is ${rowsPerStep}, expected a positive integer.`)
+    }
+    const sums = this.#clearedSums(8 + 2 * padded(joints))
+    const gradient = this.#scratch.room('gradient', 4 * layout.blockCount)
+    const work = this.#scratch.room('step', this.#exports.stepWorkBytes(description, lossHandle.address))
+    this.#exports.applySteps(
+      description, address, lossHandle.address, x, measured, count, rowsPerStep, firstTrainedLayer(layout.shape, scheme), rate,
+      moments?.address ?? 0, gradient, work, sums,
+    )
+    const { f64 } = this.#arena
+    const steps = f64[sums / 8 + 2]
+    const terms = loss.name === 'unstructured' ? count : count * joints
+    return {
+      steps,
+      loss: f64[sums / 8] / terms,
+      gradientNorm: f64[sums / 8 + 1] / steps,
+      weights: this.#readWeights(sums, joints, new Float64Array(joints)),
+    }
+  }
+
+  /**
+   * Gradient of a loss over rows of a batch, as one step would take it.
+   *
+   * @param out  canonical order, overwritten; 0 where the scheme trains nothing
+   * @returns the loss
+   */
+  gradient(
+    network: NetworkHandle, loss: LossHandle, batch: BatchHandle, settings: RowRange & { readonly scheme: NetworkScheme },
+    out: Float32Array,
+  ): number {
+    const { layout, description, address } = own(this.#arena, network, LoadedNetwork)
+    const lossHandle = own(this.#arena, loss, LoadedLoss)
+    const rows = this.#rowsOf(batch, settings)
+    const { x, measured, count, joints } = rows
+    checkNetwork(layout, rows)
+    checkLoss(loss.shape, rows)
+    checkLength('out', out.length, layout.parameterCount, 'one value per parameter')
+    const sums = this.#clearedSums(8 + 2 * padded(joints))
+    const gradient = this.#scratch.room('gradient', 4 * layout.blockCount)
+    const work = this.#scratch.room('step', this.#exports.stepWorkBytes(description, lossHandle.address))
+    this.#arena.f32.fill(0, gradient / 4, gradient / 4 + layout.blockCount)
+    this.#exports.addGradient(
+      description, address, lossHandle.address, x, measured, count, firstTrainedLayer(layout.shape, settings.scheme), gradient,
+      work, sums,
+    )
+    readBlock(layout, this.#arena.f32, gradient / 4, out)
+    return this.#arena.f64[sums / 8] / (loss.name === 'unstructured' ? count : count * joints)
+  }
+
+  /**
+   * Mean loss weight of each joint over rows of a batch; see `Loss.weights`.
+   *
+   * @param network  whose prediction `unstructured` judges; other kinds don't need it
+   * @param out  length joints, overwritten
+   * @throws {ShapeError} loss, batch and network are not of one arm; or the range is empty
+   * @throws {TypeError} `unstructured` without a network
+   */
+  meanWeights(
+    loss: LossHandle, batch: BatchHandle, range: RowRange, out: Float64Array, network?: NetworkHandle,
+  ): Float64Array {
+    const rows = this.#rowsOf(batch, range)
+    checkLoss(loss.shape, rows)
+    checkRoom('out', out.length, rows.joints)
+    if (loss.name === 'unstructured') {
+      if (network === undefined) throw new TypeError('The weights of an unstructured loss depend on a network; give it.')
+      const { layout, description, address } = own(this.#arena, network, LoadedNetwork)
+      checkNetwork(layout, rows)
+      return this.#lossSums(loss, rows, { net: description, parameters: address, predicted: 0, slope: 0 }, out)
+    }
+    // Weights don't look at the prediction: the measured torque stands in for it, and errors of 0 cost nothing.
+    const slope = this.#scratch.room('slope', rows.count * rows.width)
+    return this.#lossSums(loss, rows, { net: 0, parameters: 0, predicted: rows.measured, slope }, out)
+  }
+
+  /**
+   * Slope of a loss in a prediction that is not a network's own, for schemes that add something to it.
+   *
+   * @param predicted  rows × joints, base standard deviations
+   * @param slope  out, rows × joints: ∂L/∂predicted, with the mean over these rows
+   * @param weights  out, length joints: mean weights over the rows
+   * @throws {ShapeError} an array is too short, or loss and batch are not of one arm
+   */
+  predictionGradient(
+    loss: LossHandle, batch: BatchHandle, range: RowRange, predicted: ArrayLike<number>, slope: Float32Array, weights: Float64Array,
+  ): void {
+    const rows = this.#rowsOf(batch, range)
+    const { count, joints, width } = rows
+    checkLoss(loss.shape, rows)
+    checkRoom('predicted', predicted.length, count * joints)
+    checkRoom('slope', slope.length, count * joints)
+    checkRoom('weights', weights.length, joints)
+    const dense = this.#scratch.room('x', 4 * count * joints)
+    // One area per width: its padding stays zero.
+    const y = this.#scratch.room(`predicted ${joints}`, count * width)
+    const out = this.#scratch.room('slope', count * width)
+    copyIn(predicted, count * joints, this.#arena.f32, dense / 4)
+    this.#exports.spread(dense, joints, count, y, width)
+    this.#lossSums(loss, rows, { net: 0, parameters: 0, predicted: y, slope: out }, weights)
+    this.#gather(out, width, joints, count, slope)
+  }
+
+  /**
+   * Loss weights of single rows, for showing them.
+   *
+   * @param range  rows of the batch; their measured torque is not read
+   * @param out  rows × joints, overwritten
+   * @throws {TypeError} the loss is `unstructured`, which has no weights
+   */
+  weightsOfRows(loss: LossHandle, batch: BatchHandle, range: RowRange, out: Float32Array): Float32Array {
+    if (loss.name === 'unstructured') throw new TypeError('An unstructured loss has no weights.')
+    const { address } = own(this.#arena, loss, LoadedLoss)
+    const rows = this.#rowsOf(batch, range)
+    const { x, xStride, count, joints, width } = rows
+    checkLoss(loss.shape, rows)
+    checkRoom('out', out.length, count * joints)
+    const weights = this.#scratch.room('slope', count * width)
+    const work = this.#scratch.room('loss', this.#lossWorkBytes(loss))
+    this.#exports.weightsOfRows(address, x, xStride, count, work, weights, width)
+    this.#gather(weights, width, joints, count, out)
+    return out
+  }
+
+  /**
+   * Euclidean distance between the parameters of two networks of one shape, summed in f64.
+   *
+   * @throws {ShapeError} the shapes differ
+   */
+  distance(one: NetworkHandle, other: NetworkHandle): number {
+    const a = own(this.#arena, one, LoadedNetwork)
+    const b = own(this.#arena, other, LoadedNetwork)
+    if (a.layout !== b.layout) throw new ShapeError('The networks are of different shapes.')
+    return Math.sqrt(this.#exports.squaredDistance(a.address, b.address, 4 * a.layout.blockCount))
   }
 
   /**
@@ -191,33 +393,18 @@ export class Kernels {
    *
    * @param out  overwritten, as long as values
    */
-  elementary(which: keyof typeof kindsOfElementary, values: Float32Array, out: Float32Array): Float32Array {
+  elementary(which: keyof typeof numbersOfElementary, values: Float32Array, out: Float32Array): Float32Array {
     checkLength('out', out.length, values.length, 'as long as values')
     const count = Math.ceil(values.length / 4) * 4
-    const from = this.#room('x', 4 * count)
-    const to = this.#room('y', 4 * count)
-    this.#arena.f32.set(values, from / 4)
-    this.#exports.elementary(kindsOfElementary[which], from, count, to)
+    const from = this.#scratch.room('x', 4 * count)
+    const to = this.#scratch.room('y', 4 * count)
+    copyIn(values, values.length, this.#arena.f32, from / 4)
+    this.#exports.elementary(numbersOfElementary[which], from, count, to)
     copyOut(this.#arena.f32, to / 4, values.length, out)
     return out
   }
 
-  #writeMotion(
-    motion: { position: ArrayLike<number>; velocity: ArrayLike<number>; acceleration: ArrayLike<number> },
-    count: number,
-    at: number,
-  ): void {
-    const { f64 } = this.#arena
-    let to = at / 8
-    for (const part of ['position', 'velocity', 'acceleration'] as const) {
-      const values = motion[part]
-      checkRoom(part, values.length, count)
-      if (count <= 64) for (let k = 0; k < count; k++) f64[to + k] = values[k]
-      else f64.set(values.length === count ? values : slice(values, count), to)
-      to += count
-    }
-  }
-
+  /** One description per shape; there are few shapes, so they are kept. */
   #describe(shape: NetworkShape): { layout: PaddedNetwork; address: number } {
     const key = `${shape.activation} ${shape.sizes.join('-')}`
     let known = this.#descriptions.get(key)
@@ -231,135 +418,72 @@ export class Kernels {
     return known
   }
 
-  /** Scratch for evaluation. One per layout: its padding was zero when made and the kernels write only beside it. */
+  /** Work area for evaluation, one per shape: the padding of its input rows was zero when made and is never written. */
   #workFor(layout: PaddedNetwork): number {
-    const bytes = 4 * chunkRows * (layout.inputStride + layout.outputStride + 2 * layout.widestStride)
-    return this.#room(layout, bytes)
+    return this.#scratch.room(layout, 4 * chunkRows * (layout.inputStride + layout.outputStride + 2 * layout.widestStride))
   }
 
-  /** A scratch area of at least `bytes`; what it held is lost when it has to grow. */
-  #room(use: string | PaddedNetwork, bytes: number): number {
-    const known = this.#scratch.get(use)
-    if (known !== undefined && known.bytes >= bytes) return known.address
-    if (known !== undefined) this.#arena.free(known.address)
-    const size = Math.max(4096, 2 ** Math.ceil(Math.log2(bytes)))
-    const address = this.#arena.allocate(size)
-    this.#scratch.set(use, { address, bytes: size })
-    return address
-  }
-}
-
-class LoadedNetwork implements NetworkHandle {
-  readonly layout: PaddedNetwork
-  readonly description: number
-  readonly #arena: Arena
-  #address: number
-
-  constructor(arena: Arena, layout: PaddedNetwork, description: number, parameters: ArrayLike<number> | undefined) {
-    this.#arena = arena
-    this.layout = layout
-    this.description = description
-    this.#address = arena.allocate(4 * layout.blockCount)
-    if (parameters !== undefined) writeBlock(layout, parameters, arena.f32, this.#address / 4)
+  #rowsOf(batch: BatchHandle, { from = 0, to = batch.rows }: RowRange): Rows {
+    const loaded = own(this.#arena, batch, LoadedBatch)
+    if (!(Number.isInteger(from) && Number.isInteger(to) && from >= 0 && from < to && to <= batch.rows)) {
+      throw new ShapeError(`Rows ${from} to ${to} of a batch of ${batch.rows}: expected a range of at least one row inside it.`)
+    }
+    const { inputs, joints, xStride, width } = loaded
+    return { x: loaded.x(from), measured: loaded.measured(from), count: to - from, inputs, joints, xStride, width }
   }
 
-  get address(): number {
-    if (this.#address === 0) throw new Error('This network was freed.')
-    return this.#address
+  #lossSums(
+    loss: LossHandle, { x, xStride, measured, width, count, joints }: Rows,
+    { net, parameters, predicted, slope }: { net: number; parameters: number; predicted: number; slope: number },
+    weights: Float64Array,
+  ): Float64Array {
+    const { address } = own(this.#arena, loss, LoadedLoss)
+    const sums = this.#clearedSums(8 + 2 * padded(joints))
+    const bytes = net === 0 ? this.#lossWorkBytes(loss) : this.#exports.stepWorkBytes(net, address)
+    const work = this.#scratch.room(net === 0 ? 'loss' : 'step', bytes)
+    this.#exports.addLossSums(net, parameters, address, x, xStride, measured, predicted, width, count, work, slope, sums)
+    return this.#readWeights(sums, joints, weights)
   }
 
-  get shape(): NetworkShape {
-    return this.layout.shape
+  /** Any network of the arm would do to ask for the room a loss needs. */
+  #lossWorkBytes(loss: LossHandle): number {
+    const { address: net } = this.#describe({ sizes: [loss.shape.inputs, loss.shape.joints], activation: 'relu' })
+    return this.#exports.stepWorkBytes(net, own(this.#arena, loss, LoadedLoss).address)
   }
 
-  get parameterCount(): number {
-    return this.layout.parameterCount
+  #clearedSums(count: number): number {
+    const at = this.#scratch.room('sums', 8 * count)
+    const { f64 } = this.#arena
+    for (let k = 0; k < count; k++) f64[at / 8 + k] = 0
+    return at
   }
 
-  read(out = new Float32Array(this.layout.parameterCount)): Float32Array {
-    checkLength('out', out.length, this.layout.parameterCount, 'one value per parameter')
-    readBlock(this.layout, this.#arena.f32, this.address / 4, out)
+  #readWeights(sums: number, joints: number, out: Float64Array): Float64Array {
+    const { f64 } = this.#arena
+    const at = sums / 8 + 8
+    for (let joint = 0; joint < joints; joint++) {
+      const plain = f64[at + padded(joints) + joint]
+      out[joint] = plain === 0 ? 1 : f64[at + joint] / plain
+    }
     return out
   }
 
-  write(parameters: ArrayLike<number>): void {
-    checkLength('parameters', parameters.length, this.layout.parameterCount, `sizes ${this.shape.sizes.join('-')}`)
-    writeBlock(this.layout, parameters, this.#arena.f32, this.address / 4)
-  }
-
-  clone(): NetworkHandle {
-    const copy = new LoadedNetwork(this.#arena, this.layout, this.description, undefined)
-    copy.copyFrom(this)
-    return copy
-  }
-
-  copyFrom(other: NetworkHandle): void {
-    const from = loaded(other)
-    if (from.layout !== this.layout) {
-      throw new ShapeError(`The other network has sizes ${other.shape.sizes.join('-')}, this one ${this.shape.sizes.join('-')}.`)
-    }
-    const start = from.address / 4
-    this.#arena.f32.copyWithin(this.address / 4, start, start + this.layout.blockCount)
-  }
-
-  free(): void {
-    this.#arena.free(this.address)
-    this.#address = 0
+  #gather(from: number, width: number, joints: number, rows: number, out: Float32Array): void {
+    const dense = this.#scratch.room('x', 4 * rows * joints)
+    this.#exports.gather(from, width, joints, rows, dense)
+    copyOut(this.#arena.f32, dense / 4, rows * joints, out)
   }
 }
 
-class LoadedNormalisation implements NormalisationHandle {
+/** Rows of a batch as the kernels are told of them. */
+interface Rows {
+  readonly x: number
+  readonly measured: number
+  readonly count: number
+  readonly inputs: number
   readonly joints: number
-  readonly #arena: Arena
-  #address: number
-
-  constructor(arena: Arena, { inputMean, inputStd, outputMean, outputStd }: Normalisation) {
-    const joints = outputMean.length
-    checkLength('outputStd', outputStd.length, joints, `${joints} joints`)
-    checkLength('inputMean', inputMean.length, 3 * joints, `${joints} joints`)
-    checkLength('inputStd', inputStd.length, 3 * joints, `${joints} joints`)
-    checkScales('input', inputMean, inputStd)
-    checkScales('output', outputMean, outputStd)
-    this.joints = joints
-    this.#arena = arena
-    this.#address = arena.allocate(8 * 8 * joints)
-    const at = this.#address / 8
-    arena.f64.set(inputMean, at)
-    arena.f64.set(inputStd, at + 3 * joints)
-    arena.f64.set(outputMean, at + 6 * joints)
-    arena.f64.set(outputStd, at + 7 * joints)
-  }
-
-  get address(): number {
-    if (this.#address === 0) throw new Error('This normalisation was freed.')
-    return this.#address
-  }
-
-  free(): void {
-    this.#arena.free(this.address)
-    this.#address = 0
-  }
-}
-
-function loaded(network: NetworkHandle): LoadedNetwork {
-  if (!(network instanceof LoadedNetwork)) throw new TypeError('Not a network that kernels.loadNetwork returned.')
-  return network
-}
-
-function loadedNormalisation(normalisation: NormalisationHandle): LoadedNormalisation {
-  if (!(normalisation instanceof LoadedNormalisation)) {
-    throw new TypeError('Not a normalisation that kernels.loadNormalisation returned.')
-  }
-  return normalisation
-}
-
-function checkScales(what: string, means: ArrayLike<number>, stds: ArrayLike<number>): void {
-  for (let k = 0; k < means.length; k++) {
-    if (!Number.isFinite(means[k])) throw new RangeError(`${what}Mean: value ${k} is ${means[k]}, expected a finite number.`)
-    if (!(stds[k] > 0 && Number.isFinite(stds[k]))) {
-      throw new RangeError(`${what}Std: value ${k} is ${stds[k]}, expected a positive number.`)
-    }
-  }
+  readonly xStride: number
+  readonly width: number
 }
 
 function checkArm(layout: PaddedNetwork, joints: number): void {
@@ -370,20 +494,14 @@ function checkArm(layout: PaddedNetwork, joints: number): void {
   )
 }
 
-function checkCount(rows: number): void {
-  if (!Number.isInteger(rows) || rows < 1) throw new ShapeError(`${rows} rows, expected a positive integer.`)
+function checkNetwork(layout: PaddedNetwork, { inputs, joints }: Rows): void {
+  if (layout.inputs === inputs && layout.outputs === joints) return
+  throw new ShapeError(
+    `The network takes ${layout.inputs} inputs and gives ${layout.outputs}; the batch has ${inputs} and ${joints}.`,
+  )
 }
 
-function checkRoom(what: string, found: number, needed: number): void {
-  if (found < needed) throw new ShapeError(`${what} has ${found} values, needs at least ${needed}.`)
-}
-
-function slice(values: ArrayLike<number>, count: number): ArrayLike<number> {
-  return ArrayBuffer.isView(values) ? (values as Float64Array).subarray(0, count) : Array.prototype.slice.call(values, 0, count)
-}
-
-/** A view costs more than copying a few values one by one. */
-function copyOut<T extends Float32Array | Float64Array>(memory: T, at: number, count: number, out: T): void {
-  if (count <= 64) for (let k = 0; k < count; k++) out[k] = memory[at + k]
-  else out.set(memory.subarray(at, at + count))
+function checkLoss(shape: LossShape, { inputs, joints }: Rows): void {
+  if (shape.inputs === inputs && shape.joints === joints) return
+  throw new ShapeError(`The loss is for ${shape.inputs} inputs and ${shape.joints} joints; the batch has ${inputs} and ${joints}.`)
 }

@@ -92,7 +92,9 @@ export function writeBlock(network: PaddedNetwork, canonical: ArrayLike<number>,
 }
 
 /** Padded block at `base` → canonical parameters. */
-export function readBlock(network: PaddedNetwork, memory: Float32Array, base: number, canonical: Float32Array): void {
+export function readBlock(
+  network: PaddedNetwork, memory: Float32Array, base: number, canonical: Float32Array | Float64Array,
+): void {
   let at = 0
   for (const { inputs, outputs, weights, biases, stride } of network.layers) {
     for (let row = 0; row <= inputs; row++) {

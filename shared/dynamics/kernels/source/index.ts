@@ -1,5 +1,8 @@
 import { exp4, sigmoid4, softplus4, tanh4 } from './elementary'
-export { predictMotion, predictNormalised } from './rows'
+export { metaGradient, metaGradientWorkBytes } from './meta-gradient'
+export { gather, normalise, normaliseMotion, predictMotion, predictNormalised, spread } from './rows'
+export { addGradient, addLossSums, applySteps, squaredErrors, stepWorkBytes, weightsOfRows } from './step'
+export { squaredDistance } from './updates'
 
 /** First address not used by the module itself. */
 export function heapBase(): usize {
