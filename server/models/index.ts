@@ -1,4 +1,7 @@
 import type { Sequelize } from 'sequelize'
+import { defineAdaptation } from './adaptation.ts'
+import { defineAdaptationCheckpoint } from './adaptation-checkpoint.ts'
+import { defineAdaptationLog } from './adaptation-log.ts'
 import { defineApiKey } from './api-key.ts'
 import { defineArm } from './arm.ts'
 import { defineAuditEvent } from './audit-event.ts'
@@ -23,6 +26,9 @@ export function defineModels(sequelize: Sequelize) {
     Session: defineSession(sequelize),
     ApiKey: defineApiKey(sequelize),
     AuditEvent: defineAuditEvent(sequelize),
+    Adaptation: defineAdaptation(sequelize),
+    AdaptationLog: defineAdaptationLog(sequelize),
+    AdaptationCheckpoint: defineAdaptationCheckpoint(sequelize),
     Arm: defineArm(sequelize),
     Recording: defineRecording(sequelize),
     Model: defineModel(sequelize),
