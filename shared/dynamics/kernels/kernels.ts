@@ -47,6 +47,34 @@ export interface StepReport {
   readonly weights: Float64Array
 }
 
+/** Sizes of an unrolled chain of inner steps; definitions in ../meta-gradient.ts. */
+export interface ChainSettings {
+  readonly scheme: NetworkScheme
+  readonly network: NetworkShape
+  readonly loss: LossName
+  readonly lossShape: LossShape
+  readonly steps: number
+  readonly rowsPerStep: number
+}
+
+/** A chain in kernel memory: write network and loss, load the batch, run. */
+export interface Chain {
+  /** θ_0 before a run, θ_K after it. */
+  readonly network: NetworkHandle
+  readonly loss: LossHandle
+  /** K + 1 consecutive batches of rowsPerStep rows. */
+  readonly batch: BatchHandle
+  /**
+   * Runs the steps and differentiates the outer error.
+   *
+   * @param rate  step size
+   * @param gradient  out: derivative with respect to φ, then with respect to ln(rate)
+   * @returns the outer error
+   */
+  run(rate: number, gradient: Float64Array): number
+  free(): void
+}
+
 /** Rows the kernels work on at a time; the constant of the same name in source/rows.ts. */
 const chunkRows = 32
 
@@ -389,6 +417,49 @@ export class Kernels {
   }
 
   /**
+   * Room for hypergradients of one chain shape; see kernels/meta-gradient.ts.
+   *
+   * @throws {ShapeError} network and loss are of different arms, or a size is not usable
+   */
+  createChain(settings: ChainSettings): Chain {
+    const { network: shape, lossShape, steps, rowsPerStep, scheme } = settings
+    const inputs = shape.sizes[0]
+    const joints = shape.sizes.at(-1)!
+    checkCount(steps)
+    checkCount(rowsPerStep)
+    checkLoss(lossShape, { inputs, joints })
+    const { layout, address: description } = this.#describe(shape)
+    const network = new LoadedNetwork(this.#arena, layout, description)
+    const lossNet = lossNetwork(settings.loss, lossShape)
+    const loss = new LoadedLoss(
+      this.#arena, settings.loss, { ...lossShape }, lossNet === undefined ? undefined : this.#describe(lossNet),
+    )
+    const batch = this.createBatch(inputs, joints)
+    const from = firstTrainedLayer(shape, scheme)
+    const phiGradient = loss.layout === undefined ? undefined : new LoadedNetwork(this.#arena, loss.layout, 0)
+
+    const run = (rate: number, gradient: Float64Array): number => {
+      checkLength('gradient', gradient.length, loss.parameterCount + 1, 'φ and the step size')
+      const { x, measured, count } = this.#rowsOf(batch, {})
+      checkLength('batch', count, (steps + 1) * rowsPerStep, `rows: ${steps} steps and one after them, of ${rowsPerStep}`)
+      const bytes = this.#exports.metaGradientWorkBytes(description, loss.address, steps, rowsPerStep)
+      const work = this.#scratch.room('chain', bytes)
+      const sums = this.#clearedSums(2)
+      if (phiGradient !== undefined) {
+        this.#arena.f32.fill(0, phiGradient.address / 4, phiGradient.address / 4 + phiGradient.layout.blockCount)
+      }
+      this.#exports.metaGradient(
+        description, network.address, loss.address, x, measured, steps, rowsPerStep, from, rate, work, phiGradient?.address ?? 0, sums,
+      )
+      if (phiGradient !== undefined) readBlock(phiGradient.layout, this.#arena.f32, phiGradient.address / 4, gradient)
+      gradient[loss.parameterCount] = this.#arena.f64[sums / 8 + 1]
+      return this.#arena.f64[sums / 8]
+    }
+    const free = () => [network, loss, batch, phiGradient].forEach((handle) => handle?.free())
+    return { network, loss, batch, run, free }
+  }
+
+  /**
    * The kernels' own exp, tanh, softplus or sigmoid of each value, in f32.
    *
    * @param out  overwritten, as long as values
@@ -501,7 +572,7 @@ function checkNetwork(layout: PaddedNetwork, { inputs, joints }: Rows): void {
   )
 }
 
-function checkLoss(shape: LossShape, { inputs, joints }: Rows): void {
+function checkLoss(shape: LossShape, { inputs, joints }: { inputs: number; joints: number }): void {
   if (shape.inputs === inputs && shape.joints === joints) return
-  throw new ShapeError(`The loss is for ${shape.inputs} inputs and ${shape.joints} joints; the batch has ${inputs} and ${joints}.`)
+  throw new ShapeError(`The loss is for ${shape.inputs} inputs and ${shape.joints} joints; the rows have ${inputs} and ${joints}.`)
 }
