@@ -5,11 +5,13 @@ export class Bytes {
   #length = 0
 
   uint32(value: number): void {
-    this.#view.setUint32(this.#room(4), value, true)
+    const at = this.#room(4)
+    this.#view.setUint32(at, value, true)
   }
 
   float64(value: number): void {
-    this.#view.setFloat64(this.#room(8), value, true)
+    const at = this.#room(8)
+    this.#view.setFloat64(at, value, true)
   }
 
   float64s(values: Float64Array): void {
@@ -32,6 +34,7 @@ export class Bytes {
     return this.#bytes.slice(0, this.#length)
   }
 
+  /** Room for `count` bytes more. Replaces the view when it grows, so it is asked for first. */
   #room(count: number): number {
     const at = this.#length
     this.#length += count

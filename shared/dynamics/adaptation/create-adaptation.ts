@@ -119,6 +119,7 @@ class Machine implements Adaptation {
       torqueChange: share(settings.guard.torqueChange),
       drift: share(settings.guard.drift),
       noiseSquared: Float64Array.from(noise, value => value * value),
+      floorSquared: Float64Array.from(noise, value => Math.max(value, settings.guard.toleranceFloor) ** 2),
     }
     const perJoint = () => new Float64Array(joints)
     this.#sums = { served: perJoint(), base: perJoint(), candidate: perJoint(), motion: perJoint() }

@@ -11,26 +11,28 @@ export interface GuardTable {
   /** Largest change and drift of predicted torque, base standard deviations, length n. */
   readonly torqueChange: Float64Array
   readonly drift: Float64Array
-  /** Squared noise, base standard deviations, length n. */
+  /** Squared noise of the torque, base standard deviations, length n. */
   readonly noiseSquared: Float64Array
+  /** Squared noise of a comparison with base, likewise: the larger of the torque's noise and the setting's. */
+  readonly floorSquared: Float64Array
 }
 
 /**
  * Whether one joint is worse than base: its root mean square error more than `tolerance` above base's, and the mean
- * squared errors further apart than the noise's. Without the second test, a joint on which base is all but perfect would
- * stop the others from learning.
+ * squared errors further apart than noise. Without the second test, a joint on which base is all but perfect would stop
+ * the others from learning: a whole network that follows a payload at high gain is never as quiet as base there.
  *
  * @param served, base  sums of squared errors over the same rows, base standard deviations
  */
-export function isWorse(served: number, base: number, rows: number, noiseSquared: number, tolerance: number): boolean {
+export function isWorse(served: number, base: number, rows: number, floorSquared: number, tolerance: number): boolean {
   const bound = (1 + tolerance) * (1 + tolerance) * base
-  return served > bound && served - base > rows * noiseSquared
+  return served > bound && served - base > rows * floorSquared
 }
 
 /** The first joint that isWorse, or −1. */
-export function worseJoint({ settings, noiseSquared }: GuardTable, served: Float64Array, base: Float64Array, rows: number): number {
+export function worseJoint({ settings, floorSquared }: GuardTable, served: Float64Array, base: Float64Array, rows: number): number {
   for (let j = 0; j < served.length; j++) {
-    if (isWorse(served[j], base[j], rows, noiseSquared[j], settings.tolerance)) return j
+    if (isWorse(served[j], base[j], rows, floorSquared[j], settings.tolerance)) return j
   }
   return -1
 }

@@ -23,6 +23,8 @@ export interface GuardSettings {
   readonly drift: number
   /** How much worse than base a joint's root mean square error may be on unseen data: 0.1 is 10 %. */
   readonly tolerance: number
+  /** What counts as noise when a joint is compared with base, base standard deviations: only an excess above it rejects. */
+  readonly toleranceFloor: number
   /** Least root mean square of velocity over the last second that the most moved joint must reach, in base standard deviations of velocity. */
   readonly excitation: number
   /** Longest pause between two rows, in sample periods, across which steps are taken. */
@@ -68,6 +70,7 @@ export const GUARD_FIELDS: Readonly<Record<keyof GuardSettings, GuardField>> = {
   torqueChange: { least: 0.001, most: 1, isInteger: false, unit: "share of the joint's torque limit", standard: () => 0.25 },
   drift: { least: 0.001, most: 2, isInteger: false, unit: "share of the joint's torque limit", standard: () => 0.5 },
   tolerance: { least: 0, most: 1, isInteger: false, unit: 'share', standard: () => 0.1 },
+  toleranceFloor: { least: 0, most: 10, isInteger: false, unit: 'base standard deviations', standard: () => 0.75 },
   excitation: { least: 0, most: 1, isInteger: false, unit: 'base standard deviations of velocity', standard: () => 0.05 },
   gapPeriods: { least: 1.5, most: 100, isInteger: false, unit: 'sample periods', standard: () => 5 },
   rejectionsBeforeFreeze: { least: 1, most: 1000, isInteger: true, unit: 'batches', standard: () => 20 },
