@@ -11,8 +11,9 @@ export function sgd(parameters: usize, gradient: usize, bytes: usize, rate: f32)
 
 const beta1: f64 = 0.9
 const beta2: f64 = 0.999
-// Below it a moment is set to 0. Decaying averages end up as subnormal numbers, on which arithmetic is a hundred times slower.
-const smallestMoment: f32 = 1e-35
+// Below it a moment is set to 0. Decaying averages, and their product with a small step size, end up as subnormal numbers, on
+// which arithmetic is a hundred times slower.
+const smallestMoment: f32 = 1e-30
 
 /** Bytes before the first moments: β1ᵗ and β2ᵗ as f64. */
 export const momentsHead: usize = 64
