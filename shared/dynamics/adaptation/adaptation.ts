@@ -62,7 +62,7 @@ export interface Reason {
 }
 
 export type ReasonCode =
-  | 'not_finite' | 'step_norm' | 'torque_change' | 'drift' | 'no_help' | 'worse_than_base'
+  | 'not_finite' | 'implausible' | 'step_norm' | 'torque_change' | 'drift' | 'no_help' | 'worse_than_base'
   | 'frozen' | 'gap' | 'excitation' | 'below_noise'
 
 /** Where an adaptation stands. */

@@ -9,7 +9,7 @@ import type {
 } from './adaptation.ts'
 import { createBiasLearner } from './bias-learner.ts'
 import { ByteReader, Bytes } from './bytes.ts'
-import { mostExceeding, reasons, worseJoint } from './guards.ts'
+import { createGuardTable, judgePlausibility, mostExceeding, reasons, worseJoint } from './guards.ts'
 import type { GuardTable } from './guards.ts'
 import type { Learned, Learner, LearnerFactory, Rows } from './learner.ts'
 import { createNetworkLearner } from './network-learner.ts'
@@ -97,7 +97,7 @@ class Machine implements Adaptation {
   constructor(kernels: Kernels, inputs: AdaptationInputs) {
     const { version, settings, limits, jointNames, units, loss } = inputs
     checkVersion(version)
-    const { joints, normalisation, noise } = version.description
+    const { joints, normalisation } = version.description
     checkLength('jointNames', jointNames.length, joints, `${joints} joints`)
     checkLength('units', units.length, joints, `${joints} joints`)
     if (loss !== 'mse' && loss.description.joints !== joints) {
@@ -110,17 +110,7 @@ class Machine implements Adaptation {
     this.#learner = learners[settings.scheme](kernels, inputs)
     this.#window = new BatchWindow(joints)
     this.#rows = createRows(kernels, joints)
-    const share = (of: number) => Float64Array.from(limits.torque, (limit, j) => (of * limit) / normalisation.outputStd[j])
-    this.#guard = {
-      settings: settings.guard,
-      jointNames,
-      units,
-      outputStd: this.#scales.outputStd,
-      torqueChange: share(settings.guard.torqueChange),
-      drift: share(settings.guard.drift),
-      noiseSquared: Float64Array.from(noise, value => value * value),
-      floorSquared: Float64Array.from(noise, value => Math.max(value, settings.guard.toleranceFloor) ** 2),
-    }
+    this.#guard = createGuardTable(inputs)
     const perJoint = () => new Float64Array(joints)
     this.#sums = { served: perJoint(), base: perJoint(), candidate: perJoint(), motion: perJoint() }
     const { base } = this.#learner
@@ -264,12 +254,9 @@ class Machine implements Adaptation {
     const pause = this.#longestPause(entry, next)
     const isSmall = rows < HOLD_OUT_ROWS
     this.#sumMotion(rows, motion)
-    let errorRows = 0
-    if (isSmall && isFinite) {
-      this.#learner.predict(this.#learner.base, this.#rows, 0, rows, this.#base)
-      this.#sumErrors(this.#base, 0, rows, baseSums)
-      errorRows = rows
-    }
+    this.#learner.predict(this.#learner.base, this.#rows, 0, rows, this.#base)
+    this.#sumErrors(this.#base, 0, rows, baseSums)
+    const errorRows = isSmall && isFinite ? rows : 0
     if (isFinite) this.#enterWindow(next, entry.time[0], now, errorRows, rows)
     next.lastTime = now
 
@@ -280,15 +267,15 @@ class Machine implements Adaptation {
     }
     if (isFinite) this.#learner.weights(from, this.#rows, outcome.weights)
     else outcome.weights.fill(1)
-    this.#judge(entry, next, outcome, { isFinite, isSmall, pause, errorRows })
+    this.#judge(entry, next, outcome, { isFinite, isSmall, pause })
     outcome.revision = next.revision
     return outcome
   }
 
-  /** The order of the checks is part of what an adaptation is: frozen, gap, finite, worse than base, excitation, noise, the step's own. */
+  /** The order of the checks is part of what an adaptation is: frozen, gap, finite, plausible, worse than base, motion, noise, step. */
   #judge(
     entry: BatchEntry, next: State, outcome: Writable<BatchOutcome>,
-    given: { isFinite: boolean; isSmall: boolean; pause: number; errorRows: number },
+    given: { isFinite: boolean; isSmall: boolean; pause: number },
   ): void {
     const { settings } = this.#guard
     const { mode } = this.#tip
@@ -296,6 +283,11 @@ class Machine implements Adaptation {
     const longest = settings.gapPeriods * this.#tipPeriod(next)
     if (given.pause > longest) return void (outcome.reasons = [reasons.gap(given.pause, longest)])
     if (!given.isFinite) return this.#reject(next, outcome, [reasons.notFinite('The prediction error')])
+    const implausible = judgePlausibility(this.#guard, entry.torque, this.#base, entry.rows, this.#scales.outputMean)
+    if (implausible) {
+      next.windowEnd--
+      return this.#reject(next, outcome, [implausible])
+    }
     const isProven = given.isSmall && this.#window.isFull(next.windowSince, next.lastTime)
     if (isProven) {
       const worse = this.#judgeWindow(entry, next)
@@ -324,7 +316,7 @@ class Machine implements Adaptation {
     if (broken.length > 0) {
       this.#letGo(candidate)
       // What this batch measured may be wrong: it does not count when the served state is judged.
-      if (trained === rows) next.windowEnd--
+      next.windowEnd--
       return this.#reject(next, outcome, broken)
     }
     this.#learner.age(candidate, time[rows - 1])
@@ -366,7 +358,6 @@ class Machine implements Adaptation {
     const before = meanOf(served, count)
     const after = meanOf(candidate, count)
     if (!(after < before)) found.push(reasons.noHelp(finiteOrMost(after), before))
-    this.#learner.predict(this.#learner.base, this.#rows, from, rows, this.#base)
     this.#sumErrors(this.#base, from, rows, base)
     const joint = worseJoint(this.#guard, candidate, base, count)
     if (joint >= 0) {

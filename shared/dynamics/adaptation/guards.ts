@@ -1,4 +1,4 @@
-import type { Reason, ReasonCode } from './adaptation.ts'
+import type { AdaptationInputs, Reason, ReasonCode } from './adaptation.ts'
 import type { GuardSettings } from './settings.ts'
 
 /** What the guards know of the arm and the version, made ready once. n joints. */
@@ -8,6 +8,10 @@ export interface GuardTable {
   readonly units: readonly string[]
   /** N·m per base standard deviation, length n. */
   readonly outputStd: Float64Array
+  /** Largest plausible magnitude of measured torque, N·m, length n. */
+  readonly plausibleTorque: Float64Array
+  /** One over the torque limit, length n: puts joints on one scale. */
+  readonly inverseLimit: Float64Array
   /** Largest change and drift of predicted torque, base standard deviations, length n. */
   readonly torqueChange: Float64Array
   readonly drift: Float64Array
@@ -35,6 +39,66 @@ export function worseJoint({ settings, floorSquared }: GuardTable, served: Float
     if (isWorse(served[j], base[j], rows, floorSquared[j], settings.tolerance)) return j
   }
   return -1
+}
+
+/** A measured torque beyond this many times the joint's limit is a fault of the sensor, of the units or of the order of joints. */
+const PLAUSIBLE_LIMITS = 2
+
+/** Least cosine between measured and predicted torque. Payloads of 4 kg on a simulated arm reach −0.35; a flipped sign, −0.95. */
+const LEAST_COSINE = -0.5
+
+/** Torques below this many times their noise say nothing of their sign. */
+const TELLING_NOISE = 10
+
+/** The guards' table for an arm and a version. */
+export function createGuardTable({ version, settings, limits, jointNames, units }: AdaptationInputs): GuardTable {
+  const { normalisation, noise } = version.description
+  const outputStd = Float64Array.from(normalisation.outputStd)
+  const share = (of: number) => limits.torque.map((limit, j) => (of * limit) / outputStd[j])
+  return {
+    settings: settings.guard,
+    jointNames,
+    units,
+    outputStd,
+    plausibleTorque: limits.torque.map(limit => PLAUSIBLE_LIMITS * limit),
+    inverseLimit: limits.torque.map(limit => 1 / limit),
+    torqueChange: share(settings.guard.torqueChange),
+    drift: share(settings.guard.drift),
+    noiseSquared: Float64Array.from(noise, value => value * value),
+    floorSquared: Float64Array.from(noise, value => Math.max(value, settings.guard.toleranceFloor) ** 2),
+  }
+}
+
+/**
+ * Whether measured torque can be what it says: within twice the joints' limits, and not opposed to the base version's
+ * prediction, as it is when a sign convention is wrong. The first reason against it, or null.
+ *
+ * @param measured  rows × n, N·m
+ * @param base  the base version's prediction, rows × n, base standard deviations
+ */
+export function judgePlausibility(
+  table: GuardTable, measured: Float64Array, base: Float64Array, rows: number, outputMean: Float64Array,
+): Reason | null {
+  const { plausibleTorque, inverseLimit, outputStd, noiseSquared } = table
+  const joints = outputStd.length
+  let product = 0
+  let measuredSquared = 0
+  let baseSquared = 0
+  let noise = 0
+  for (let k = 0, j = 0; k < rows * joints; k++, j = j + 1 === joints ? 0 : j + 1) {
+    const torque = measured[k]
+    if (torque > plausibleTorque[j] || torque < -plausibleTorque[j]) return reasons.beyondLimit(table, j, torque)
+    const given = torque * inverseLimit[j]
+    const expected = (base[k] * outputStd[j] + outputMean[j]) * inverseLimit[j]
+    product += given * expected
+    measuredSquared += given * given
+    baseSquared += expected * expected
+    noise += noiseSquared[j] * outputStd[j] * outputStd[j] * inverseLimit[j] * inverseLimit[j]
+  }
+  const telling = TELLING_NOISE * TELLING_NOISE * noise
+  if (measuredSquared < telling || baseSquared < telling) return null
+  const cosine = product / Math.sqrt(measuredSquared * baseSquared)
+  return cosine < LEAST_COSINE ? reasons.opposed(cosine) : null
 }
 
 /** Index into `states` of the joint that exceeds its bound the most on any reference state, or −1. */
@@ -65,6 +129,15 @@ function reason(code: ReasonCode, detail: string, joint: number | null, found: n
 export const reasons = {
   notFinite: (what: string): Reason =>
     reason('not_finite', `${what} is not a finite number, so nothing can be learned from this batch.`, null, null, null),
+
+  beyondLimit: (table: GuardTable, joint: number, found: number): Reason =>
+    reason('implausible', `${table.jointNames[joint]}: a measured torque of ${shown(found)} ${table.units[joint]} is beyond ` +
+      `${shown(table.plausibleTorque[joint])} ${table.units[joint]}, twice the joint's limit; check sensor, unit and order of joints.`,
+      joint, found, table.plausibleTorque[joint]),
+
+  opposed: (found: number): Reason =>
+    reason('implausible', `Measured torque runs against what the base version predicts (cosine ${shown(found)}, least ` +
+      `${shown(LEAST_COSINE)}); check the sign convention and the order of joints.`, null, found, LEAST_COSINE),
 
   stepNorm: (found: number, bound: number): Reason =>
     reason('step_norm', `The step would change the adapted numbers by ${shown(found)}, more than ${shown(bound)}.`, null, found, bound),

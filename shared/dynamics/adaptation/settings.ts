@@ -65,10 +65,10 @@ export interface GuardField {
 export const GUARD_FIELDS: Readonly<Record<keyof GuardSettings, GuardField>> = {
   stepNorm: {
     least: 1e-6, most: 1000, isInteger: false, unit: 'parameters (all, last_layer), base standard deviations (bias)',
-    standard: scheme => (scheme === 'bias' ? 3 : 3),
+    standard: scheme => (scheme === 'bias' ? 30 : 5),
   },
-  torqueChange: { least: 0.001, most: 1, isInteger: false, unit: "share of the joint's torque limit", standard: () => 0.25 },
-  drift: { least: 0.001, most: 2, isInteger: false, unit: "share of the joint's torque limit", standard: () => 0.5 },
+  torqueChange: { least: 0.001, most: 1, isInteger: false, unit: "share of the joint's torque limit", standard: () => 0.5 },
+  drift: { least: 0.001, most: 2, isInteger: false, unit: "share of the joint's torque limit", standard: (_, { kind }) => (kind === 'adam' ? 2 : 0.75) },
   tolerance: { least: 0, most: 1, isInteger: false, unit: 'share', standard: () => 0.1 },
   toleranceFloor: { least: 0, most: 10, isInteger: false, unit: 'base standard deviations', standard: () => 0.75 },
   excitation: { least: 0, most: 1, isInteger: false, unit: 'base standard deviations of velocity', standard: () => 0.05 },
