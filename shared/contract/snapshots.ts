@@ -79,11 +79,11 @@ export type WireLossDescription = {
   hidden: number
 }
 
-/** What of a loss's snapshot the loss itself says; scheme and update are told apart from its shape. */
-export function lossToWire({ description, parameters }: LossVersion): Pick<
-  Schemas['LossSnapshot'],
-  'kind' | 'base_checksum' | 'scheme' | 'update' | 'description' | 'parameters'
-> {
+/** What of a loss's snapshot the loss itself says. */
+export type WireLoss = Pick<Schemas['LossSnapshot'], 'kind' | 'base_checksum' | 'scheme' | 'update' | 'description' | 'parameters'>
+
+/** The loss in the contract's words. */
+export function lossToWire({ description, parameters }: LossVersion): WireLoss {
   const { kind, positive, joints, hidden, baseChecksum, scheme, update } = description
   const shape: WireLossDescription = { positive, joints, hidden }
   return {
@@ -101,9 +101,7 @@ export function lossToWire({ description, parameters }: LossVersion): Pick<
  *
  * @throws {ShapeError} a part is missing, unknown, of the wrong size or not finite; names it
  */
-export function lossFromWire(
-  given: Pick<Schemas['LossSnapshot'], 'kind' | 'base_checksum' | 'scheme' | 'update' | 'description' | 'parameters'>,
-): LossVersion {
+export function lossFromWire(given: WireLoss): LossVersion {
   const shape = partsOf('description', given.description, ['positive', 'joints', 'hidden'])
   const { kind, rate, rows_per_step: rowsPerStep = 4, fade = 1 } = given.update
   if (rate === undefined) throw new ShapeError('update.rate is missing: a loss is learned together with its rate.')
