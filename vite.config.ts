@@ -11,6 +11,7 @@ export default defineConfig({
     root: '.',
     include: ['tests/**/*.test.ts', 'tests/**/*.test.tsx'],
     environment: 'node',
+    globalSetup: ['tests/support/global-setup.ts'],
     // Two cores: one file at a time per worker keeps the database and the browser from starving each other.
     maxWorkers: 2,
     testTimeout: 30_000,

@@ -18,7 +18,7 @@ function escapePointer(segment: string): string {
 
 function sentence(error: ErrorObject): string {
   const p = error.params as Record<string, unknown>
-  const found = show(error.data)
+  const found = isSecret(error.instancePath) ? 'a value' : show(error.data)
   switch (error.keyword) {
     case 'required':
       return `"${String(p.missingProperty)}" is missing. Add it.`
@@ -60,6 +60,10 @@ function sentence(error: ErrorObject): string {
     default:
       return `It ${error.message ?? 'does not fit the contract'}.`
   }
+}
+
+function isSecret(pointer: string): boolean {
+  return /\/(?:password|current|new|secret)$/.test(pointer)
 }
 
 function oneOfSentence(error: ErrorObject): string {

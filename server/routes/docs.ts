@@ -1,0 +1,11 @@
+import { Router } from 'express'
+import type { OpenAPIV3_1 } from 'openapi-types'
+import swaggerUi from 'swagger-ui-express'
+
+/** Swagger UI, with its files from this server, never from elsewhere. */
+export function docsRoutes(document: object): Router {
+  const router = Router()
+  const shown = document as OpenAPIV3_1.Document
+  router.use('/docs', swaggerUi.serve, swaggerUi.setup(shown, { customSiteTitle: 'Heftwise API', swaggerOptions: { validatorUrl: null, persistAuthorization: false } }))
+  return router
+}

@@ -1,0 +1,38 @@
+import { Refusal } from '../../shared/contract/problems.ts'
+
+/** What a list is asked for. */
+export interface PageRequest {
+  readonly cursor?: string
+  readonly limit: number
+}
+
+export interface Page<T> {
+  readonly items: readonly T[]
+  readonly nextCursor: string | null
+}
+
+/** Where a page ends, opaque to clients: the sort values of its last row. */
+export function encodeCursor(position: readonly (string | number)[]): string {
+  return Buffer.from(JSON.stringify(position)).toString('base64url')
+}
+
+/** @throws {Refusal} invalid-request: not a cursor of ours with so many values */
+export function decodeCursor(cursor: string, length: number): (string | number)[] {
+  try {
+    const position = JSON.parse(Buffer.from(cursor, 'base64url').toString('utf8')) as unknown
+    if (Array.isArray(position) && position.length === length && position.every((value) => typeof value === 'string' || typeof value === 'number')) {
+      return position
+    }
+  } catch {
+    // Told below.
+  }
+  const detail = 'This is no cursor of this list. Take next_cursor from the page before, unchanged, or leave it out for the first page.'
+  throw new Refusal('invalid-request', `cursor: ${detail}`, { errors: [{ pointer: 'cursor', detail }] })
+}
+
+/** From one row more than asked for: the page, and where the next one begins. */
+export function pageOf<Row, T>(rows: readonly Row[], limit: number, positionOf: (row: Row) => readonly (string | number)[], item: (row: Row) => T): Page<T> {
+  const shown = rows.slice(0, limit)
+  const last = shown.at(-1)
+  return { items: shown.map(item), nextCursor: rows.length > limit && last !== undefined ? encodeCursor(positionOf(last)) : null }
+}
