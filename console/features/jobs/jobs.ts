@@ -1,4 +1,4 @@
-import { mutationOptions, queryOptions, type QueryClient } from '@tanstack/react-query'
+import { keepPreviousData, mutationOptions, queryOptions, type QueryClient } from '@tanstack/react-query'
 import type { BodyOf, Schemas } from '../../../sdk/index.ts'
 import { heftwise } from '../../lib/client.ts'
 import { everything } from '../../lib/everything.ts'
@@ -29,7 +29,7 @@ export const curveOptions = (id: string, ended: boolean) =>
     queryKey: ['jobs', id, 'curve', ended],
     queryFn: ({ signal }) => heftwise.jobs.curve(id, { signal }),
     refetchInterval: ended ? false : 2_000,
-    placeholderData: (before: Schemas['JobCurve'] | undefined) => before,
+    placeholderData: keepPreviousData,
   })
 
 const refreshed = (client: QueryClient) => ({ onSettled: () => client.invalidateQueries({ queryKey: ['jobs'] }) })

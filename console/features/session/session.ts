@@ -25,11 +25,13 @@ export const sessionOptions = queryOptions({
   refetchOnWindowFocus: 'always',
 })
 
+const notSession = { predicate: (query: { queryKey: readonly unknown[] }) => query.queryKey[0] !== sessionKey[0] }
+
 export const signInOptions = (client: QueryClient) =>
   mutationOptions({
     mutationFn: async (body: BodyOf<'signIn'>) => entered(await heftwise.session.signIn(body)),
     onSuccess: (session) => {
-      client.clear()
+      client.removeQueries(notSession)
       client.setQueryData(sessionKey, session)
     },
   })
@@ -39,17 +41,18 @@ export const signOutOptions = (client: QueryClient) =>
     mutationFn: () => heftwise.session.signOut(),
     onSuccess: () => {
       setCsrfToken(null)
-      client.clear()
       client.setQueryData(sessionKey, null)
+      client.removeQueries(notSession)
     },
   })
 
+/** Nothing of the former team may stay on screen. */
 export const chooseTeamOptions = (client: QueryClient) =>
   mutationOptions({
     mutationFn: async (team: string) => entered(await heftwise.session.chooseTeam(team)),
     onSuccess: (session) => {
-      client.clear()
       client.setQueryData(sessionKey, session)
+      void client.resetQueries(notSession)
     },
   })
 

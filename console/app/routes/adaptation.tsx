@@ -1,0 +1,267 @@
+import { useQuery, useQueryClient } from '@tanstack/react-query'
+import { useState, type ReactNode } from 'react'
+import { useParams } from 'react-router-dom'
+import { Button, TextLink } from '../../components/button.tsx'
+import { LoadBarKey } from '../../components/load-bar.tsx'
+import { LoadStrip } from '../../components/load-strip.tsx'
+import { Facts, Page, Section } from '../../components/page.tsx'
+import { Caution, Empty, Failed, Skeleton, SkeletonRows } from '../../components/states.tsx'
+import { TimeAgo } from '../../components/time-ago.tsx'
+import { adaptationOptions, historyOptions, rowsOptions, type Adaptation, type Command, type LogEntry } from '../../features/adaptations/adaptations.ts'
+import { CommandDialog, PromoteDialog } from '../../features/adaptations/command-dialog.tsx'
+import { ErrorChart } from '../../features/adaptations/error-chart.tsx'
+import { GuardPanel } from '../../features/adaptations/guard-panel.tsx'
+import { attentionOf, healthOf, lossName, schemeNames, type Health } from '../../features/adaptations/health.ts'
+import { HealthStamp } from '../../features/adaptations/health-stamp.tsx'
+import { JointTable } from '../../features/adaptations/joint-table.tsx'
+import { eventWords } from '../../features/adaptations/log.ts'
+import { LogSection } from '../../features/adaptations/log-table.tsx'
+import { VerdictStamp } from '../../features/adaptations/verdict-stamp.tsx'
+import { useBlocked, useMay } from '../../features/session/session.ts'
+import { counted, significant } from '../../lib/numbers.ts'
+import { paths } from '../../lib/paths.ts'
+import { robotTime, span, useNow } from '../../lib/times.ts'
+import { useUrlState } from '../../lib/url-state.ts'
+
+export function Component() {
+  const { adaptation: id } = useParams()
+  const adaptation = useQuery(adaptationOptions(id!))
+  const now = useNow()
+  if (!adaptation.data) {
+    return (
+      <Page title="Adaptation" above={{ to: paths.adaptations(), label: 'Adaptations' }}>
+        {adaptation.isError ? <Failed what="This adaptation could not be read" error={adaptation.error} retry={() => void adaptation.refetch()} /> : <SkeletonRows rows={8} label="Loading the adaptation" />}
+      </Page>
+    )
+  }
+  const { data } = adaptation
+  const health = healthOf(data, now)
+  return (
+    <Page
+      title={data.robot}
+      above={{ to: paths.adaptations(), label: 'Adaptations' }}
+      state={<HealthStamp health={health} />}
+      actions={<Acts adaptation={data} />}
+      facts={
+        <>
+          <TextLink to={paths.model(data.model, { version: data.version })}>
+            {data.model} {data.version}
+          </TextLink>
+          , loss {lossName(data.loss)}, {schemeNames[data.scheme]}, {data.update.kind}. Serves revision <span className="num text-ink">{data.revision}</span>;{' '}
+          {data.last_batch === null ? 'no batch heard yet.' : <>last heard <TimeAgo at={data.last_batch.at} className="text-ink" />.</>}
+        </>
+      }
+    >
+      <div className="flex flex-col gap-2 empty:hidden">
+        {adaptation.isError && <Banner tone="load">The service has not answered for {span(now - adaptation.dataUpdatedAt)}. What you see is from then; the robot may be elsewhere by now.</Banner>}
+        <Attention adaptation={data} health={health} />
+      </div>
+      <Live adaptation={data} />
+      <LogSection id={data.id} ended={data.state === 'ended'} />
+    </Page>
+  )
+}
+
+function Banner({ tone, children }: { tone: 'load' | 'stop'; children: ReactNode }) {
+  return (
+    <p role="status" className={`border-l-4 px-3 py-2 ${tone === 'stop' ? 'border-stop bg-stop-wash' : 'border-load-fill bg-load-wash'}`}>
+      {children}
+    </p>
+  )
+}
+
+function Attention({ adaptation, health }: { adaptation: Adaptation; health: Health }) {
+  const words = attentionOf(adaptation, health)
+  if (adaptation.state === 'ended') return <Banner tone="load">It has ended {adaptation.ended_at !== null && <TimeAgo at={adaptation.ended_at} />}; it serves and takes nothing more. Its log stays.</Banner>
+  if (words === undefined) return null
+  return (
+    <Banner tone={health.state === 'frozen' ? 'stop' : 'load'}>
+      {words}
+      {health.state === 'frozen' && (
+        <>
+          {' '}
+          (<TimeAgo at={health.at} />)
+        </>
+      )}
+    </Banner>
+  )
+}
+
+function Acts({ adaptation }: { adaptation: Adaptation }) {
+  const [act, setAct] = useState<Command | 'promote'>()
+  const freeze = useBlocked('freeze', 'freeze adaptations')
+  const resume = useBlocked('resume', 'resume adaptations')
+  const reset = useBlocked('reset', 'reset adaptations')
+  const end = useBlocked('adapt', 'end adaptations')
+  const mayPromote = useMay('build')
+  const close = () => setAct(undefined)
+  const untouched = adaptation.revision === 0 ? 'It still serves its base version; there is nothing to take.' : undefined
+  return (
+    <>
+      {adaptation.state === 'adapting' && (
+        <Button look="stop" blocked={freeze} onClick={() => setAct('freeze')}>
+          Freeze…
+        </Button>
+      )}
+      {adaptation.state === 'frozen' && (
+        <Button look="primary" blocked={resume} onClick={() => setAct('resume')}>
+          Resume…
+        </Button>
+      )}
+      {adaptation.state !== 'ended' && (
+        <Button blocked={reset ?? untouched} onClick={() => setAct('reset')}>
+          Reset…
+        </Button>
+      )}
+      {mayPromote && (
+        <Button blocked={untouched} onClick={() => setAct('promote')}>
+          Promote…
+        </Button>
+      )}
+      {adaptation.state !== 'ended' && (
+        <Button look="stop" blocked={end} onClick={() => setAct('end')}>
+          End…
+        </Button>
+      )}
+      {act === 'promote' && <PromoteDialog adaptation={adaptation} onClose={close} />}
+      {act !== undefined && act !== 'promote' && <CommandDialog adaptation={adaptation} command={act} onClose={close} />}
+    </>
+  )
+}
+
+const windows = [
+  { value: '50', label: '50' },
+  { value: '150', label: '150' },
+  { value: '600', label: '600' },
+]
+
+function Live({ adaptation }: { adaptation: Adaptation }) {
+  const url = useUrlState()
+  const ended = adaptation.state === 'ended'
+  const history = useQuery(historyOptions(useQueryClient(), adaptation.id, ended))
+  const shown = Number(url.get('newest')) || 150
+  if (history.isPending) return <Skeleton className="h-80 w-full" />
+  if (!history.data) return <Failed what="The log could not be read" error={history.error} retry={() => void history.refetch()} />
+  const entries = history.data.slice(-shown)
+  const batches = entries.filter((entry) => entry.entry === 'batch')
+  if (batches.length === 0)
+    return (
+      <>
+        <Empty title="No batch yet">It serves version {adaptation.version} unchanged until its controller posts what the arm did; the first batch carries sequence {adaptation.next_sequence}.</Empty>
+        <ContextSection adaptation={adaptation} history={history.data} />
+      </>
+    )
+  const selected = Number(url.get('batch')) || undefined
+  return (
+    <>
+      <Section
+        title="Error per batch"
+        note="mean squared, in base standard deviations"
+        actions={
+          <fieldset className="flex items-center gap-1 text-12 text-soft">
+            <legend className="sr-only">How many entries are shown</legend>
+            newest
+            {windows.map((each) => (
+              <button
+                key={each.value}
+                type="button"
+                aria-pressed={shown === Number(each.value)}
+                onClick={() => url.set({ newest: each.value === '150' ? undefined : each.value })}
+                className="num min-h-7 rounded-2 px-2 hover:bg-sunken aria-pressed:bg-ink aria-pressed:text-paper"
+              >
+                {each.label}
+              </button>
+            ))}
+          </fieldset>
+        }
+      >
+        <ErrorChart entries={entries} frozenNow={adaptation.state === 'frozen'} selected={selected} onSelect={(position) => url.set({ batch: String(position) }, { push: true })} />
+      </Section>
+      <BatchView adaptation={adaptation} history={history.data} selected={selected} />
+      <div className="grid gap-x-12 gap-y-8 lg:grid-cols-[3fr_2fr]">
+        <Section title="Guards">
+          <GuardPanel adaptation={adaptation} history={batches} />
+        </Section>
+        <ContextSection adaptation={adaptation} history={history.data} />
+      </div>
+    </>
+  )
+}
+
+/** The newest batch, or the one chosen: its joints at an instant, and over its time. */
+function BatchView({ adaptation, history, selected }: { adaptation: Adaptation; history: LogEntry[]; selected: number | undefined }) {
+  const url = useUrlState()
+  const batches = history.filter((entry) => entry.entry === 'batch')
+  const position = selected ?? batches.at(-1)!.position
+  const batch = batches.find((entry) => entry.position === position)
+  const rows = useQuery(rowsOptions(adaptation.id, position))
+  const [instant, setInstant] = useState<{ position: number; row: number }>()
+  const last = (rows.data?.time.length ?? 1) - 1
+  const row = instant?.position === rows.data?.position ? Math.min(instant?.row ?? last, last) : last
+  const until = batches.slice(0, batch === undefined ? undefined : batches.indexOf(batch) + 1)
+  return (
+    <>
+      <Section
+        title={selected === undefined ? 'Joints, newest batch' : `Joints, batch ${batch?.sequence ?? ''}`}
+        note={batch && <span className="inline-flex flex-wrap items-baseline gap-x-3">{batch.verdict && <VerdictStamp verdict={batch.verdict} />}{batch.reasons?.map((reason) => reason.detail).join(' ')}</span>}
+        actions={
+          selected === undefined ? (
+            <LoadBarKey />
+          ) : (
+            <Button onClick={() => url.set({ batch: undefined })}>Follow the newest</Button>
+          )
+        }
+      >
+        {rows.isError && <Failed what="The rows of this batch could not be read" error={rows.error} retry={() => void rows.refetch()} />}
+        <JointTable joints={adaptation.joint_names} rows={rows.data} row={row} batch={batch} history={until} />
+      </Section>
+      {rows.data && rows.data.time.length > 1 && (
+        <Section
+          title="Over the batch"
+          note={`${counted(rows.data.time.length, 'row')}; the table above shows ${robotTime(rows.data.time[row]!)} s, ${row === last ? 'the newest row' : `row ${row + 1}`}`}
+        >
+          <LoadStrip
+            joints={rows.data.joint_names.map((name, index) => ({ name, unit: rows.data.unit[index]!, limit: rows.data.torque_limits[index]! }))}
+            time={rows.data.time}
+            predicted={rows.data.predicted}
+            measured={rows.data.torque}
+            row={row}
+            onRow={(next) => setInstant({ position: rows.data.position, row: next })}
+          />
+          <div className="mt-3">
+            <Caution>A predicted torque is advisory. Keep the controller’s own torque, speed and collision limits active.</Caution>
+          </div>
+        </Section>
+      )}
+    </>
+  )
+}
+
+const contextNames = { tool: 'Tool', payload_class: 'Payload class', firmware: 'Firmware', friction_setting: 'Friction setting' } as const
+
+function ContextSection({ adaptation, history }: { adaptation: Adaptation; history: LogEntry[] }) {
+  const event = history.findLast((entry) => entry.entry === 'event')
+  const context = Object.entries(contextNames).flatMap(([name, label]): [string, ReactNode][] => {
+    const value = adaptation.context[name as keyof typeof contextNames]
+    return value === undefined ? [] : [[label, value]]
+  })
+  const { update } = adaptation
+  const settings = [update.kind, update.rate !== undefined && `step size ${significant(update.rate)}`, update.rows_per_step !== undefined && `${counted(update.rows_per_step, 'row')} a step`, update.fade !== undefined && `fades to ${significant(update.fade)} in 1 s`]
+  return (
+    <Section title="Context">
+      <Facts
+        items={[
+          ['Robot', adaptation.robot],
+          ...context,
+          ['Last event', event ? <>{eventWords(event)}, <TimeAgo at={event.at} /></> : 'none'],
+          ['Changes', schemeNames[adaptation.scheme]],
+          ['Update', settings.filter(Boolean).join(', ')],
+          ['State as of', adaptation.as_of === null ? 'no accepted row yet' : <span><span className="num">{robotTime(adaptation.as_of)}</span> s on the robot’s clock{adaptation.valid_until !== null && <>, valid until <span className="num">{robotTime(adaptation.valid_until)}</span> s</>}</span>],
+          ['Started', <>{adaptation.created_by}, <TimeAgo at={adaptation.created_at} /></>],
+          ['Id', <code className="text-12 break-all">{adaptation.id}</code>],
+        ]}
+      />
+      <p className="mt-3 text-12 text-soft">Another tool, payload class, firmware or friction setting needs an adaptation of its own; gripping and releasing within the class are events of this one.</p>
+    </Section>
+  )
+}
