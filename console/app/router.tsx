@@ -13,7 +13,10 @@ import { Shell } from './shell.tsx'
 
 export function createRouter(client: QueryClient) {
   /** Starts what a page needs while its code is still on the way; the page itself shows loading and failure. */
-  const page = (load: () => Promise<{ Component: ComponentType }>, start: (args: LoaderFunctionArgs) => Promise<unknown>[] = () => []): RouteObject => ({
+  const page = (
+    load: () => Promise<{ Component: ComponentType }>,
+    start: (args: LoaderFunctionArgs) => Promise<unknown>[] = () => [],
+  ): RouteObject => ({
     lazy: { Component: async () => (await load()).Component },
     loader: async (args) => {
       const session = await client.query({ ...sessionOptions, staleTime: 'static' })
@@ -39,27 +42,76 @@ export function createRouter(client: QueryClient) {
             {
               ErrorBoundary: BrokenPage,
               children: [
-                { index: true, ...page(() => import('./routes/overview.tsx'), () => [client.query(adaptationsOptions), client.query(modelsOptions), client.query(jobsOptions)]) } as RouteObject,
-                { path: 'adaptations', ...page(() => import('./routes/adaptations.tsx'), () => [client.query(adaptationsOptions)]) },
+                {
+                  index: true,
+                  ...page(
+                    () => import('./routes/overview.tsx'),
+                    () => [client.query(adaptationsOptions), client.query(modelsOptions), client.query(jobsOptions)],
+                  ),
+                } as RouteObject,
+                {
+                  path: 'adaptations',
+                  ...page(
+                    () => import('./routes/adaptations.tsx'),
+                    () => [client.query(adaptationsOptions)],
+                  ),
+                },
                 {
                   path: 'adaptations/:adaptation',
                   ...page(
                     () => import('./routes/adaptation.tsx'),
-                    ({ params }) => [client.query(adaptationOptions(params.adaptation!)), client.query(historyOptions(client, params.adaptation!, false))],
+                    ({ params }) => [
+                      client.query(adaptationOptions(params.adaptation!)),
+                      client.query(historyOptions(client, params.adaptation!, false)),
+                    ],
                   ),
                 },
-                { path: 'models', ...page(() => import('./routes/models.tsx'), () => [client.query(modelsOptions)]) },
+                {
+                  path: 'models',
+                  ...page(
+                    () => import('./routes/models.tsx'),
+                    () => [client.query(modelsOptions)],
+                  ),
+                },
                 {
                   path: 'models/:model',
                   ...page(
                     () => import('./routes/model.tsx'),
-                    ({ params }) => [client.query(modelOptions(params.model!)), client.query(versionsOptions(params.model!)), client.query(releasesOptions(params.model!))],
+                    ({ params }) => [
+                      client.query(modelOptions(params.model!)),
+                      client.query(versionsOptions(params.model!)),
+                      client.query(releasesOptions(params.model!)),
+                    ],
                   ),
                 },
-                { path: 'recordings', ...page(() => import('./routes/recordings.tsx'), () => [client.query(recordingsOptions)]) },
-                { path: 'jobs', ...page(() => import('./routes/jobs.tsx'), () => [client.query(jobsOptions)]) },
-                { path: 'jobs/:job', ...page(() => import('./routes/job.tsx'), ({ params }) => [client.query(jobOptions(params.job!))]) },
-                { path: 'keys', ...page(() => import('./routes/keys.tsx'), () => [client.query(keysOptions)]) },
+                {
+                  path: 'recordings',
+                  ...page(
+                    () => import('./routes/recordings.tsx'),
+                    () => [client.query(recordingsOptions)],
+                  ),
+                },
+                {
+                  path: 'jobs',
+                  ...page(
+                    () => import('./routes/jobs.tsx'),
+                    () => [client.query(jobsOptions)],
+                  ),
+                },
+                {
+                  path: 'jobs/:job',
+                  ...page(
+                    () => import('./routes/job.tsx'),
+                    ({ params }) => [client.query(jobOptions(params.job!))],
+                  ),
+                },
+                {
+                  path: 'keys',
+                  ...page(
+                    () => import('./routes/keys.tsx'),
+                    () => [client.query(keysOptions)],
+                  ),
+                },
                 { path: '*', ...page(() => import('./routes/not-found.tsx')) },
               ],
             },

@@ -53,23 +53,39 @@ export function Shell() {
   const [narrowRail, setNarrowRail] = useState(() => recall(railKey) === 'narrow')
   const [drawer, setDrawer] = useState(false)
   if (session.isPending) return <Boot />
-  if (!session.data) return <Navigate to={paths.signIn(location.pathname === '/' ? undefined : location.pathname + location.search)} replace />
+  if (!session.data)
+    return <Navigate to={paths.signIn(location.pathname === '/' ? undefined : location.pathname + location.search)} replace />
   const fold = () => {
     remember(railKey, narrowRail ? null : 'narrow')
     setNarrowRail(!narrowRail)
   }
   return (
     <div className="flex min-h-dvh">
-      <a href="#content" className="sr-only z-50 bg-ink px-4 py-2 text-paper focus:not-sr-only focus:fixed focus:top-2 focus:left-2">
+      <a
+        href="#content"
+        className="sr-only z-50 bg-ink px-4 py-2 text-paper focus:not-sr-only focus:fixed focus:top-2 focus:left-2"
+      >
         Skip to the content
       </a>
-      <div className={`sticky top-0 flex h-dvh shrink-0 flex-col border-r border-line max-md:hidden ${narrowRail ? 'w-14' : 'w-48'}`}>
+      <div
+        className={`sticky top-0 flex h-dvh shrink-0 flex-col border-r border-line max-md:hidden ${narrowRail ? 'w-14' : 'w-48'}`}
+      >
         <NavLink to={paths.overview()} aria-label="Heftwise, overview" className="flex h-12 items-center gap-2.5 px-4">
           <Mark className="size-6 shrink-0" />
-          {!narrowRail && <span className="text-16 font-semibold" style={{ fontStretch: '118%' }}>Heftwise</span>}
+          {!narrowRail && (
+            <span className="text-16 font-semibold" style={{ fontStretch: '118%' }}>
+              Heftwise
+            </span>
+          )}
         </NavLink>
         <Sections session={session.data} narrow={narrowRail} />
-        <button type="button" onClick={fold} aria-expanded={!narrowRail} aria-label={narrowRail ? 'Unfold the sections' : 'Fold the sections'} className="mt-auto flex h-10 items-center gap-3 px-5 text-12 text-soft hover:text-ink">
+        <button
+          type="button"
+          onClick={fold}
+          aria-expanded={!narrowRail}
+          aria-label={narrowRail ? 'Unfold the sections' : 'Fold the sections'}
+          className="mt-auto flex h-10 items-center gap-3 px-5 text-12 text-soft hover:text-ink"
+        >
           <Icon name={narrowRail ? 'right' : 'left'} />
           {!narrowRail && 'Fold'}
         </button>
@@ -98,7 +114,9 @@ function Sections({ session, narrow, onChoose }: { session: Session; narrow: boo
         if (allowed.length === 0) return null
         return (
           <div key={group}>
-            <p className={narrow ? 'mx-4 mb-1 border-t border-line' : 'px-4 pb-1 text-12 text-soft'}>{narrow ? <span className="sr-only">{group}</span> : group}</p>
+            <p className={narrow ? 'mx-4 mb-1 border-t border-line' : 'px-4 pb-1 text-12 text-soft'}>
+              {narrow ? <span className="sr-only">{group}</span> : group}
+            </p>
             <ul>
               {allowed.map((entry) => (
                 <li key={entry.to}>
@@ -128,7 +146,13 @@ function SectionLink({ entry, narrow, onChoose }: { entry: Entry; narrow: boolea
       {!narrow && entry.label}
     </NavLink>
   )
-  return narrow ? <Tooltip text={entry.label} side="right">{link}</Tooltip> : link
+  return narrow ? (
+    <Tooltip text={entry.label} side="right">
+      {link}
+    </Tooltip>
+  ) : (
+    link
+  )
 }
 
 function TopLine({ session, onMenu }: { session: Session; onMenu: () => void }) {
@@ -159,7 +183,11 @@ function TeamName({ session }: { session: Session }) {
     <Menu
       align="start"
       trigger={
-        <button type="button" aria-label={`Team ${session.team.name}; choose another`} className="flex min-w-0 items-center gap-1 font-semibold hover:text-live">
+        <button
+          type="button"
+          aria-label={`Team ${session.team.name}; choose another`}
+          className="flex min-w-0 items-center gap-1 font-semibold hover:text-live"
+        >
           <span className="truncate">{session.team.name}</span>
           <Icon name="down" className="size-3" />
         </button>
@@ -168,7 +196,14 @@ function TeamName({ session }: { session: Session }) {
       <MenuChoice
         label="Team"
         value={session.team.id}
-        options={session.teams.map((team) => ({ value: team.id, label: <span>{team.name} <span className="text-12 text-soft">{team.role}</span></span> }))}
+        options={session.teams.map((team) => ({
+          value: team.id,
+          label: (
+            <span>
+              {team.name} <span className="text-12 text-soft">{team.role}</span>
+            </span>
+          ),
+        }))}
         onChange={(team) => choose.mutate(team, { onSuccess: () => void navigate(paths.overview()) })}
       />
     </Menu>
@@ -181,7 +216,11 @@ function ArmInView() {
   const now = useNow()
   const arms = useQuery(armsOptions)
   const models = useQuery(modelsOptions)
-  const adaptation = useQuery({ ...adaptationOptions(params.adaptation ?? ''), enabled: params.adaptation !== undefined, refetchInterval: false })
+  const adaptation = useQuery({
+    ...adaptationOptions(params.adaptation ?? ''),
+    enabled: params.adaptation !== undefined,
+    refetchInterval: false,
+  })
   const [chosen, setChosen] = useState(() => recall(armKey) ?? undefined)
   const shownModel = params.model ?? adaptation.data?.model
   const all = models.data?.items ?? []
@@ -199,7 +238,11 @@ function ArmInView() {
         <Menu
           align="start"
           trigger={
-            <button type="button" aria-label={`Arm in view: ${arm}; choose another`} className="flex items-center gap-1 hover:text-live">
+            <button
+              type="button"
+              aria-label={`Arm in view: ${arm}; choose another`}
+              className="flex items-center gap-1 hover:text-live"
+            >
               {name}
               <Icon name="down" className="size-3" />
             </button>
@@ -229,7 +272,9 @@ function ArmInView() {
                   {model.name} {model.live_version}
                 </span>
               </Stamp>
-              {model.live_since !== null && <span className="text-12 whitespace-nowrap text-soft">live for {span(now - Date.parse(model.live_since))}</span>}
+              {model.live_since !== null && (
+                <span className="text-12 whitespace-nowrap text-soft">live for {span(now - Date.parse(model.live_since))}</span>
+              )}
             </>
           )}
         </NavLink>
@@ -245,7 +290,11 @@ function PersonMenu({ session }: { session: Session }) {
   return (
     <Menu
       trigger={
-        <button type="button" aria-label={`${name}: theme, sign out`} className="flex h-8 items-center gap-1.5 rounded-2 px-1.5 hover:bg-sunken max-md:h-10">
+        <button
+          type="button"
+          aria-label={`${name}: theme, sign out`}
+          className="flex h-8 items-center gap-1.5 rounded-2 px-1.5 hover:bg-sunken max-md:h-10"
+        >
           <span aria-hidden="true" className="num grid size-6 place-items-center border border-edge text-11">
             {initials(name)}
           </span>
@@ -260,7 +309,16 @@ function PersonMenu({ session }: { session: Session }) {
         <span className="block">{session.role}</span>
       </MenuLabel>
       <MenuLine />
-      <MenuChoice label="Theme" value={theme} onChange={setTheme} options={[{ value: 'system', label: themed('system', 'As the system') }, { value: 'light', label: themed('light', 'Light') }, { value: 'dark', label: themed('dark', 'Dark') }]} />
+      <MenuChoice
+        label="Theme"
+        value={theme}
+        onChange={setTheme}
+        options={[
+          { value: 'system', label: themed('system', 'As the system') },
+          { value: 'light', label: themed('light', 'Light') },
+          { value: 'dark', label: themed('dark', 'Dark') },
+        ]}
+      />
       <MenuLine />
       <MenuItem icon="signOut" onSelect={() => signOut.mutate()}>
         Sign out
@@ -279,5 +337,10 @@ function themed(icon: IconName, label: string): ReactNode {
 }
 
 function initials(name: string): string {
-  return name.split(/\s+/).map((part) => part[0] ?? '').slice(0, 2).join('').toUpperCase()
+  return name
+    .split(/\s+/)
+    .map((part) => part[0] ?? '')
+    .slice(0, 2)
+    .join('')
+    .toUpperCase()
 }

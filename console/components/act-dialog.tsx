@@ -25,7 +25,19 @@ const shortest = 3
 const longest = 500
 
 /** For acts that change what an arm will do: names the act, the target and the consequence, and takes a reason that is kept. */
-export function ActDialog({ onClose, title, consequence, act, destructive = false, reasonHint, pending, error, onAct, blocked, children }: ActDialogProps) {
+export function ActDialog({
+  onClose,
+  title,
+  consequence,
+  act,
+  destructive = false,
+  reasonHint,
+  pending,
+  error,
+  onAct,
+  blocked,
+  children,
+}: ActDialogProps) {
   const [reason, setReason] = useState('')
   const [tried, setTried] = useState(false)
   const tooShort = reason.trim().length < shortest

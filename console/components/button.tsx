@@ -6,8 +6,10 @@ import { Tooltip } from './tooltip.tsx'
 type Look = 'primary' | 'plain' | 'stop' | 'quiet'
 
 const looks: Record<Look, string> = {
-  primary: 'bg-live text-on-live border-live hover:brightness-110 aria-disabled:bg-transparent aria-disabled:text-soft aria-disabled:border-line',
-  plain: 'border-edge text-ink hover:border-ink hover:bg-sunken aria-disabled:text-soft aria-disabled:border-line aria-disabled:hover:bg-transparent',
+  primary:
+    'bg-live text-on-live border-live hover:brightness-110 aria-disabled:bg-transparent aria-disabled:text-soft aria-disabled:border-line',
+  plain:
+    'border-edge text-ink hover:border-ink hover:bg-sunken aria-disabled:text-soft aria-disabled:border-line aria-disabled:hover:bg-transparent',
   stop: 'border-stop text-stop hover:bg-stop hover:text-on-stop aria-disabled:text-soft aria-disabled:border-line aria-disabled:hover:bg-transparent',
   quiet: 'border-transparent text-ink hover:bg-sunken aria-disabled:text-soft aria-disabled:hover:bg-transparent',
 }
@@ -23,7 +25,17 @@ interface ButtonProps extends Omit<ComponentProps<'button'>, 'disabled'> {
   pending?: boolean
 }
 
-export function Button({ look = 'plain', icon, blocked, pending = false, children, className = '', onClick, type = 'button', ...rest }: ButtonProps) {
+export function Button({
+  look = 'plain',
+  icon,
+  blocked,
+  pending = false,
+  children,
+  className = '',
+  onClick,
+  type = 'button',
+  ...rest
+}: ButtonProps) {
   const button = (
     <button
       {...rest}
@@ -44,15 +56,36 @@ export function Button({ look = 'plain', icon, blocked, pending = false, childre
 }
 
 /** A sign without a word on it, whose word is in `label`. */
-export function IconButton({ label, icon, className = '', ...rest }: { label: string; icon: IconName } & Omit<ComponentProps<'button'>, 'children'>) {
+export function IconButton({
+  label,
+  icon,
+  className = '',
+  ...rest
+}: { label: string; icon: IconName } & Omit<ComponentProps<'button'>, 'children'>) {
   return (
-    <button type="button" {...rest} aria-label={label} title={label} className={`inline-grid size-8 place-items-center rounded-2 text-soft hover:bg-sunken hover:text-ink max-md:size-10 ${className}`}>
+    <button
+      type="button"
+      {...rest}
+      aria-label={label}
+      title={label}
+      className={`inline-grid size-8 place-items-center rounded-2 text-soft hover:bg-sunken hover:text-ink max-md:size-10 ${className}`}
+    >
       <Icon name={icon} />
     </button>
   )
 }
 
-export function ButtonLink({ to, look = 'plain', icon, children }: { to: string; look?: Look; icon?: IconName; children: ReactNode }) {
+export function ButtonLink({
+  to,
+  look = 'plain',
+  icon,
+  children,
+}: {
+  to: string
+  look?: Look
+  icon?: IconName
+  children: ReactNode
+}) {
   return (
     <Link to={to} className={`${shape} ${looks[look]}`}>
       {icon && <Icon name={icon} />}
@@ -64,7 +97,10 @@ export function ButtonLink({ to, look = 'plain', icon, children }: { to: string;
 /** A link in running text or a table. */
 export function TextLink({ to, children, className = '' }: { to: string; children: ReactNode; className?: string }) {
   return (
-    <Link to={to} className={`underline decoration-edge decoration-1 underline-offset-3 hover:decoration-2 hover:decoration-ink ${className}`}>
+    <Link
+      to={to}
+      className={`underline decoration-edge decoration-1 underline-offset-3 hover:decoration-2 hover:decoration-ink ${className}`}
+    >
       {children}
     </Link>
   )

@@ -7,9 +7,16 @@ export function CopyButton({ text, label = 'Copy' }: { text: string; label?: str
   return (
     <Button
       icon={outcome === 'copied' ? 'check' : 'copy'}
-      onClick={() => navigator.clipboard.writeText(text).then(() => setOutcome('copied'), () => setOutcome('refused'))}
+      onClick={() =>
+        navigator.clipboard.writeText(text).then(
+          () => setOutcome('copied'),
+          () => setOutcome('refused'),
+        )
+      }
     >
-      <span aria-live="polite">{outcome === 'copied' ? 'Copied' : outcome === 'refused' ? 'Select it and copy by hand' : label}</span>
+      <span aria-live="polite">
+        {outcome === 'copied' ? 'Copied' : outcome === 'refused' ? 'Select it and copy by hand' : label}
+      </span>
     </Button>
   )
 }

@@ -29,7 +29,15 @@ interface DataTableProps<T> {
 }
 
 /** A list that sorts and pages; both live in the address. On a narrow screen each row becomes a block of named values. */
-export function DataTable<T>({ label, columns, rows, rowKey, sort: standard = '', pageSize = 25, complete = true }: DataTableProps<T>) {
+export function DataTable<T>({
+  label,
+  columns,
+  rows,
+  rowKey,
+  sort: standard = '',
+  pageSize = 25,
+  complete = true,
+}: DataTableProps<T>) {
   const url = useUrlState()
   const sort = url.get('sort') ?? standard
   const falling = sort.startsWith('-')
@@ -73,14 +81,20 @@ export function DataTable<T>({ label, columns, rows, rowKey, sort: standard = ''
         </thead>
         <tbody role="rowgroup" className="max-md:block max-md:border-t max-md:border-edge">
           {shown.map((row) => (
-            <tr role="row" key={rowKey(row)} className="border-b border-line hover:bg-surface max-md:flex max-md:flex-col max-md:gap-1 max-md:py-3">
+            <tr
+              role="row"
+              key={rowKey(row)}
+              className="border-b border-line hover:bg-surface max-md:flex max-md:flex-col max-md:gap-1 max-md:py-3"
+            >
               {columns.map((each, index) => (
                 <td
                   role="cell"
                   key={each.id}
                   data-label={each.title}
                   className={`py-2.5 pr-4 align-top last:pr-0 max-md:grid max-md:grid-cols-[7rem_1fr] max-md:items-baseline max-md:p-0 max-md:text-left ${
-                    index > 0 ? 'max-md:before:text-12 max-md:before:text-soft max-md:before:content-[attr(data-label)]' : 'max-md:block'
+                    index > 0
+                      ? 'max-md:before:text-12 max-md:before:text-soft max-md:before:content-[attr(data-label)]'
+                      : 'max-md:block'
                   } ${each.right ? 'text-right' : ''} ${each.minor ? 'max-md:hidden' : ''}`}
                 >
                   <div className="min-w-0">{each.cell(row)}</div>
@@ -97,13 +111,21 @@ export function DataTable<T>({ label, columns, rows, rowKey, sort: standard = ''
         </span>
         {pages > 1 && (
           <nav aria-label={`Pages of ${label}`} className="ml-auto flex items-center gap-2">
-            <Button icon="left" blocked={page === 1 ? 'This is the first page.' : undefined} onClick={() => url.set({ page: page === 2 ? undefined : String(page - 1) }, { push: true })}>
+            <Button
+              icon="left"
+              blocked={page === 1 ? 'This is the first page.' : undefined}
+              onClick={() => url.set({ page: page === 2 ? undefined : String(page - 1) }, { push: true })}
+            >
               Back
             </Button>
             <span className="num">
               {page} of {pages}
             </span>
-            <Button icon="right" blocked={page === pages ? 'This is the last page.' : undefined} onClick={() => url.set({ page: String(page + 1) }, { push: true })}>
+            <Button
+              icon="right"
+              blocked={page === pages ? 'This is the last page.' : undefined}
+              onClick={() => url.set({ page: String(page + 1) }, { push: true })}
+            >
               Next
             </Button>
           </nav>
@@ -118,7 +140,10 @@ function comparison<T>(by: (row: T) => number | string | null, falling: boolean)
     const left = by(a)
     const right = by(b)
     if (left === null || right === null) return left === right ? 0 : left === null ? 1 : -1
-    const order = typeof left === 'number' && typeof right === 'number' ? left - right : String(left).localeCompare(String(right), undefined, { numeric: true })
+    const order =
+      typeof left === 'number' && typeof right === 'number'
+        ? left - right
+        : String(left).localeCompare(String(right), undefined, { numeric: true })
     return falling ? -order : order
   }
 }

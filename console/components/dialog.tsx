@@ -47,12 +47,25 @@ export function Dialog({ open, onClose, title, description, children, held = fal
 }
 
 /** A panel that slides over the page's left edge, for the sections on a narrow screen. */
-export function Drawer({ open, onClose, title, children }: { open: boolean; onClose: () => void; title: string; children: ReactNode }) {
+export function Drawer({
+  open,
+  onClose,
+  title,
+  children,
+}: {
+  open: boolean
+  onClose: () => void
+  title: string
+  children: ReactNode
+}) {
   return (
     <Primitive.Root open={open} onOpenChange={(next) => !next && onClose()}>
       <Primitive.Portal>
         <Primitive.Overlay className="fixed inset-0 z-40" style={{ backgroundColor: 'rgb(0 0 0 / 0.45)' }} />
-        <Primitive.Content aria-describedby={undefined} className="fixed inset-y-0 left-0 z-50 flex w-64 max-w-[85vw] flex-col overflow-y-auto border-r border-edge bg-paper">
+        <Primitive.Content
+          aria-describedby={undefined}
+          className="fixed inset-y-0 left-0 z-50 flex w-64 max-w-[85vw] flex-col overflow-y-auto border-r border-edge bg-paper"
+        >
           <div className="flex items-center justify-between py-2 pr-2 pl-4">
             <Primitive.Title className="text-14 font-semibold">{title}</Primitive.Title>
             <Primitive.Close asChild>

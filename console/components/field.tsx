@@ -7,7 +7,12 @@ interface FieldProps {
   label: string
   hint?: ReactNode
   error?: string | undefined
-  children: (props: { id: string; 'aria-describedby': string | undefined; 'aria-invalid': true | undefined; className: string }) => ReactNode
+  children: (props: {
+    id: string
+    'aria-describedby': string | undefined
+    'aria-invalid': true | undefined
+    className: string
+  }) => ReactNode
 }
 
 /** A label, its control, a hint and what is wrong with it, tied together for everyone. */
@@ -19,7 +24,12 @@ export function Field({ label, hint, error, children }: FieldProps) {
       <label htmlFor={id} className="font-semibold">
         {label}
       </label>
-      {children({ id, 'aria-describedby': described || undefined, 'aria-invalid': error === undefined ? undefined : true, className: box })}
+      {children({
+        id,
+        'aria-describedby': described || undefined,
+        'aria-invalid': error === undefined ? undefined : true,
+        className: box,
+      })}
       {hint !== undefined && (
         <p id={`${id}-hint`} className="text-12 text-soft">
           {hint}
@@ -42,7 +52,13 @@ export function TextField({ label, hint, error, ...input }: Omit<FieldProps, 'ch
   )
 }
 
-export function SelectField({ label, hint, error, children, ...select }: Omit<FieldProps, 'children'> & ComponentProps<'select'>) {
+export function SelectField({
+  label,
+  hint,
+  error,
+  children,
+  ...select
+}: Omit<FieldProps, 'children'> & ComponentProps<'select'>) {
   return (
     <Field label={label} hint={hint} error={error}>
       {(props) => (
@@ -63,11 +79,25 @@ export function TextArea({ label, hint, error, ...area }: Omit<FieldProps, 'chil
 }
 
 /** A filter above a list: its label is read out and stands inside the control's first choice. */
-export function Filter({ label, value, onChange, options }: { label: string; value: string | undefined; onChange: (value: string | undefined) => void; options: { value: string; label: string }[] }) {
+export function Filter({
+  label,
+  value,
+  onChange,
+  options,
+}: {
+  label: string
+  value: string | undefined
+  onChange: (value: string | undefined) => void
+  options: { value: string; label: string }[]
+}) {
   return (
     <label className="inline-flex items-center gap-2 text-12 text-soft">
       {label}
-      <select className={`${box} w-auto max-w-48`} value={value ?? ''} onChange={(event) => onChange(event.target.value || undefined)}>
+      <select
+        className={`${box} w-auto max-w-48`}
+        value={value ?? ''}
+        onChange={(event) => onChange(event.target.value || undefined)}
+      >
         <option value="">any</option>
         {options.map((option) => (
           <option key={option.value} value={option.value}>
@@ -79,11 +109,24 @@ export function Filter({ label, value, onChange, options }: { label: string; val
   )
 }
 
-export function Search({ label, value, onChange }: { label: string; value: string | undefined; onChange: (value: string | undefined) => void }) {
+export function Search({
+  label,
+  value,
+  onChange,
+}: {
+  label: string
+  value: string | undefined
+  onChange: (value: string | undefined) => void
+}) {
   return (
     <label className="inline-flex items-center gap-2 text-12 text-soft">
       {label}
-      <input type="search" className={`${box} w-48`} value={value ?? ''} onChange={(event) => onChange(event.target.value || undefined)} />
+      <input
+        type="search"
+        className={`${box} w-48`}
+        value={value ?? ''}
+        onChange={(event) => onChange(event.target.value || undefined)}
+      />
     </label>
   )
 }

@@ -55,24 +55,45 @@ export function LoadBar({ load, scale = false }: { load: Load; scale?: boolean }
       <div role="img" aria-label={words} title={words} className="relative h-4">
         <span className="absolute inset-x-0 top-1/2 h-0.5 -translate-y-1/2 bg-line" />
         {[-1, 1].map((side) => (
-          <span key={side} className="absolute top-1/2 h-2.5 w-px -translate-x-1/2 -translate-y-1/2 bg-soft" style={{ left: `${place(side * load.limit, load.limit)}%` }} />
+          <span
+            key={side}
+            className="absolute top-1/2 h-2.5 w-px -translate-x-1/2 -translate-y-1/2 bg-soft"
+            style={{ left: `${place(side * load.limit, load.limit)}%` }}
+          />
         ))}
         {load.predicted != null && (
           <>
             <span className="absolute top-1/2 h-2 -translate-y-1/2 bg-live" style={spread(zero, place(calm, load.limit))} />
             {Math.abs(load.predicted) > Math.abs(calm) && (
-              <span className="hatch-load absolute top-1/2 h-2 -translate-y-1/2" style={spread(place(calm, load.limit), place(load.predicted, load.limit))} />
+              <span
+                className="hatch-load absolute top-1/2 h-2 -translate-y-1/2"
+                style={spread(place(calm, load.limit), place(load.predicted, load.limit))}
+              />
             )}
-            {clamped && <span className="absolute top-1/2 h-4 w-1 -translate-x-1/2 -translate-y-1/2 bg-stop" style={{ left: `${place(sign * load.limit, load.limit)}%` }} />}
+            {clamped && (
+              <span
+                className="absolute top-1/2 h-4 w-1 -translate-x-1/2 -translate-y-1/2 bg-stop"
+                style={{ left: `${place(sign * load.limit, load.limit)}%` }}
+              />
+            )}
           </>
         )}
         <span className="absolute top-1/2 h-3 w-px -translate-x-1/2 -translate-y-1/2 bg-soft" style={{ left: `${zero}%` }} />
-        {load.measured != null && <span className="absolute top-1/2 h-4 w-0.5 -translate-x-1/2 -translate-y-1/2 bg-ink" style={{ left: `${place(load.measured, load.limit)}%` }} />}
+        {load.measured != null && (
+          <span
+            className="absolute top-1/2 h-4 w-0.5 -translate-x-1/2 -translate-y-1/2 bg-ink"
+            style={{ left: `${place(load.measured, load.limit)}%` }}
+          />
+        )}
       </div>
       {scale && (
         <div aria-hidden="true" className="num relative h-4 text-11 text-soft">
           {[-1, 0, 1].map((side) => (
-            <span key={side} className={`absolute whitespace-nowrap ${side < 0 ? '' : '-translate-x-1/2'} ${side > 0 ? '!-translate-x-full' : ''}`} style={{ left: side < 0 ? 0 : side > 0 ? '100%' : `${zero}%` }}>
+            <span
+              key={side}
+              className={`absolute whitespace-nowrap ${side < 0 ? '' : '-translate-x-1/2'} ${side > 0 ? '!-translate-x-full' : ''}`}
+              style={{ left: side < 0 ? 0 : side > 0 ? '100%' : `${zero}%` }}
+            >
               {side === 0 ? '0' : significant(side * load.limit)}
             </span>
           ))}

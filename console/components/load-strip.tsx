@@ -48,7 +48,16 @@ export function LoadStrip({ joints, time, predicted, measured, row, onRow }: Loa
       aria-valuetext={`row ${row + 1} of ${time.length}, ${robotTime(time[row]!)} s`}
       className="cursor-crosshair touch-pan-y select-none"
       onKeyDown={(event) => {
-        const steps: Record<string, number> = { ArrowLeft: -1, ArrowDown: -1, ArrowRight: 1, ArrowUp: 1, PageDown: -10, PageUp: 10, Home: -Infinity, End: Infinity }
+        const steps: Record<string, number> = {
+          ArrowLeft: -1,
+          ArrowDown: -1,
+          ArrowRight: 1,
+          ArrowUp: 1,
+          PageDown: -10,
+          PageUp: 10,
+          Home: -Infinity,
+          End: Infinity,
+        }
         const step = steps[event.key]
         if (step === undefined) return
         event.preventDefault()
@@ -60,21 +69,40 @@ export function LoadStrip({ joints, time, predicted, measured, row, onRow }: Loa
       <svg width={width} height={height} aria-hidden="true" className="block overflow-visible">
         {joints.map((joint, index) => {
           const middle = index * lane + lane / 2
-          const most = Math.max(...predicted.map((values) => Math.abs(values[index]!)), ...measured.map((values) => Math.abs(values[index]!)), joint.limit * 1e-3)
+          const most = Math.max(
+            ...predicted.map((values) => Math.abs(values[index]!)),
+            ...measured.map((values) => Math.abs(values[index]!)),
+            joint.limit * 1e-3,
+          )
           const y = (value: number) => middle - (value / most) * (lane / 2 - 3)
           const high = joint.limit * highLoad
-          const outline = (rows: number[][]) => rows.map((values, at) => `${at === 0 ? 'M' : 'L'}${x(at).toFixed(1)} ${y(values[index]!).toFixed(1)}`).join('')
+          const outline = (rows: number[][]) =>
+            rows.map((values, at) => `${at === 0 ? 'M' : 'L'}${x(at).toFixed(1)} ${y(values[index]!).toFixed(1)}`).join('')
           return (
             <g key={joint.name}>
               <text x={0} y={middle + 4} className="fill-ink text-12">
                 {narrow ? joint.name.slice(0, 9) : joint.name.slice(0, 14)}
               </text>
               <line x1={left} x2={left + inner} y1={middle} y2={middle} className="stroke-line" />
-              <path d={`${outline(predicted)}L${x(time.length - 1)} ${middle}L${left} ${middle}Z`} className="fill-live" fillOpacity={0.28} />
+              <path
+                d={`${outline(predicted)}L${x(time.length - 1)} ${middle}L${left} ${middle}Z`}
+                className="fill-live"
+                fillOpacity={0.28}
+              />
               <path d={outline(predicted)} fill="none" className="stroke-live" strokeWidth={1} />
               <path d={outline(measured)} fill="none" className="stroke-ink" strokeWidth={1.25} />
               {most > high &&
-                [-high, high].map((value) => <line key={value} x1={left} x2={left + inner} y1={y(value)} y2={y(value)} className="stroke-load" strokeDasharray="2 3" />)}
+                [-high, high].map((value) => (
+                  <line
+                    key={value}
+                    x1={left}
+                    x2={left + inner}
+                    y1={y(value)}
+                    y2={y(value)}
+                    className="stroke-load"
+                    strokeDasharray="2 3"
+                  />
+                ))}
               {!narrow && (
                 <text x={width} y={middle + 4} textAnchor="end" className="num fill-soft text-11">
                   ±{significant(most)} {joint.unit}

@@ -2,12 +2,25 @@ import * as Primitive from '@radix-ui/react-dropdown-menu'
 import type { ReactElement, ReactNode } from 'react'
 import { Icon, type IconName } from './icon.tsx'
 
-export function Menu({ trigger, children, align = 'end' }: { trigger: ReactElement; children: ReactNode; align?: 'start' | 'end' }) {
+export function Menu({
+  trigger,
+  children,
+  align = 'end',
+}: {
+  trigger: ReactElement
+  children: ReactNode
+  align?: 'start' | 'end'
+}) {
   return (
     <Primitive.Root modal={false}>
       <Primitive.Trigger asChild>{trigger}</Primitive.Trigger>
       <Primitive.Portal>
-        <Primitive.Content align={align} sideOffset={4} collisionPadding={8} className="z-50 min-w-52 border border-edge bg-surface py-1">
+        <Primitive.Content
+          align={align}
+          sideOffset={4}
+          collisionPadding={8}
+          className="z-50 min-w-52 border border-edge bg-surface py-1"
+        >
           {children}
         </Primitive.Content>
       </Primitive.Portal>
@@ -28,7 +41,17 @@ export function MenuItem({ icon, onSelect, children }: { icon?: IconName; onSele
 }
 
 /** One of several, with a check mark on the one in force. */
-export function MenuChoice<T extends string>({ label, value, options, onChange }: { label: string; value: T; options: { value: T; label: ReactNode }[]; onChange: (value: T) => void }) {
+export function MenuChoice<T extends string>({
+  label,
+  value,
+  options,
+  onChange,
+}: {
+  label: string
+  value: T
+  options: { value: T; label: ReactNode }[]
+  onChange: (value: T) => void
+}) {
   return (
     <Primitive.RadioGroup value={value} onValueChange={(next) => onChange(next as T)}>
       <MenuLabel>{label}</MenuLabel>

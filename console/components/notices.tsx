@@ -20,7 +20,11 @@ export function NoticeProvider({ children }: { children: ReactNode }) {
   return (
     <NoticeContext value={say}>
       {children}
-      <div role="status" aria-live="polite" className="pointer-events-none fixed inset-x-0 bottom-4 z-50 flex justify-center px-4">
+      <div
+        role="status"
+        aria-live="polite"
+        className="pointer-events-none fixed inset-x-0 bottom-4 z-50 flex justify-center px-4"
+      >
         {notice && (
           <p key={notice.number} className="flex items-center gap-2 rounded-2 bg-ink px-4 py-2 text-paper">
             <Icon name="check" />

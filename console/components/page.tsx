@@ -38,7 +38,19 @@ export function Page({ title, state, above, facts, actions, children }: PageProp
   )
 }
 
-export function Section({ title, note, actions, children, className = '' }: { title: string; note?: ReactNode; actions?: ReactNode; children: ReactNode; className?: string }) {
+export function Section({
+  title,
+  note,
+  actions,
+  children,
+  className = '',
+}: {
+  title: string
+  note?: ReactNode
+  actions?: ReactNode
+  children: ReactNode
+  className?: string
+}) {
   return (
     <section aria-label={title} className={`min-w-0 ${className}`}>
       <div className="mb-2 flex flex-wrap items-baseline gap-x-3 gap-y-1">

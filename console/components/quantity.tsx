@@ -13,7 +13,11 @@ interface QuantityProps {
 export function Quantity({ value, unit, digits = 3, className = '', missing = '–' }: QuantityProps) {
   if (value === null || value === undefined) return <span className={`num text-soft ${className}`}>{missing}</span>
   return (
-    <data value={value} title={unit === undefined ? String(value) : `${value} ${unit}`} className={`whitespace-nowrap ${className}`}>
+    <data
+      value={value}
+      title={unit === undefined ? String(value) : `${value} ${unit}`}
+      className={`whitespace-nowrap ${className}`}
+    >
       {significant(value, digits)}
       {unit !== undefined && <span className="ml-[0.4em] text-[0.857em] text-soft">{unit}</span>}
     </data>

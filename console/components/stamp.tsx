@@ -2,7 +2,13 @@ import type { ReactNode } from 'react'
 
 export type Tone = 'live' | 'load' | 'stop' | 'soft' | 'ink'
 
-const tones: Record<Tone, string> = { live: 'text-live', load: 'text-load', stop: 'text-stop', soft: 'text-soft', ink: 'text-ink' }
+const tones: Record<Tone, string> = {
+  live: 'text-live',
+  load: 'text-load',
+  stop: 'text-stop',
+  soft: 'text-soft',
+  ink: 'text-ink',
+}
 
 /** Each state has a mark of its own shape, so that it can be told apart without its colour. */
 const marks = {

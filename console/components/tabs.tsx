@@ -7,7 +7,17 @@ interface Tab {
   content: ReactNode
 }
 
-export function Tabs({ label, value, onChange, tabs }: { label: string; value: string; onChange: (value: string) => void; tabs: Tab[] }) {
+export function Tabs({
+  label,
+  value,
+  onChange,
+  tabs,
+}: {
+  label: string
+  value: string
+  onChange: (value: string) => void
+  tabs: Tab[]
+}) {
   return (
     <Primitive.Root value={value} onValueChange={onChange}>
       <Primitive.List aria-label={label} className="flex gap-6 border-b border-line">

@@ -21,10 +21,18 @@ export function failureOf(error: unknown): Failure {
     }
   }
   if (error instanceof TimeoutError) {
-    return { ...none, title: 'No answer in time', detail: 'The request may or may not have taken effect. Look at the state before you repeat it.' }
+    return {
+      ...none,
+      title: 'No answer in time',
+      detail: 'The request may or may not have taken effect. Look at the state before you repeat it.',
+    }
   }
   if (error instanceof ConnectionError) {
-    return { ...none, title: 'The service can’t be reached', detail: 'Check the network, then try again. Robots keep the state they have.' }
+    return {
+      ...none,
+      title: 'The service can’t be reached',
+      detail: 'Check the network, then try again. Robots keep the state they have.',
+    }
   }
   return { ...none, title: 'This page failed', detail: error instanceof Error ? error.message : String(error) }
 }

@@ -20,7 +20,9 @@ export function significant(value: number, digits = 3): string {
 
 /** An integer in groups of three, set apart by thin spaces. */
 export function grouped(value: number): string {
-  return String(value).replace(/\B(?=(\d{3})+$)/g, '\u2009').replace('-', '−')
+  return String(value)
+    .replace(/\B(?=(\d{3})+$)/g, '\u2009')
+    .replace('-', '−')
 }
 
 export function percent(share: number, digits = 0): string {

@@ -4,7 +4,10 @@ import { useSearchParams } from 'react-router-dom'
 type Change = Record<string, string | undefined>
 
 /** Filters, sort and page live in the address, so they survive a reload and can be sent to somebody. */
-export function useUrlState(): { get: (name: string) => string | undefined; set: (change: Change, options?: { push?: boolean }) => void } {
+export function useUrlState(): {
+  get: (name: string) => string | undefined
+  set: (change: Change, options?: { push?: boolean }) => void
+} {
   const [parameters, setParameters] = useSearchParams()
   const get = (name: string) => parameters.get(name) ?? undefined
   const set = useCallback(

@@ -7,7 +7,14 @@ import { LoadStrip } from '../../components/load-strip.tsx'
 import { Facts, Page, Section } from '../../components/page.tsx'
 import { Caution, Empty, Failed, Skeleton, SkeletonRows } from '../../components/states.tsx'
 import { TimeAgo } from '../../components/time-ago.tsx'
-import { adaptationOptions, historyOptions, rowsOptions, type Adaptation, type Command, type LogEntry } from '../../features/adaptations/adaptations.ts'
+import {
+  adaptationOptions,
+  historyOptions,
+  rowsOptions,
+  type Adaptation,
+  type Command,
+  type LogEntry,
+} from '../../features/adaptations/adaptations.ts'
 import { CommandDialog, PromoteDialog } from '../../features/adaptations/command-dialog.tsx'
 import { ErrorChart } from '../../features/adaptations/error-chart.tsx'
 import { GuardPanel } from '../../features/adaptations/guard-panel.tsx'
@@ -30,7 +37,11 @@ export function Component() {
   if (!adaptation.data) {
     return (
       <Page title="Adaptation" above={{ to: paths.adaptations(), label: 'Adaptations' }}>
-        {adaptation.isError ? <Failed what="This adaptation could not be read" error={adaptation.error} retry={() => void adaptation.refetch()} /> : <SkeletonRows rows={8} label="Loading the adaptation" />}
+        {adaptation.isError ? (
+          <Failed what="This adaptation could not be read" error={adaptation.error} retry={() => void adaptation.refetch()} />
+        ) : (
+          <SkeletonRows rows={8} label="Loading the adaptation" />
+        )}
       </Page>
     )
   }
@@ -47,13 +58,25 @@ export function Component() {
           <TextLink to={paths.model(data.model, { version: data.version })}>
             {data.model} {data.version}
           </TextLink>
-          , loss {lossName(data.loss)}, {schemeNames[data.scheme]}, {data.update.kind}. Serves revision <span className="num text-ink">{data.revision}</span>;{' '}
-          {data.last_batch === null ? 'no batch heard yet.' : <>last heard <TimeAgo at={data.last_batch.at} className="text-ink" />.</>}
+          , loss {lossName(data.loss)}, {schemeNames[data.scheme]}, {data.update.kind}. Serves revision{' '}
+          <span className="num text-ink">{data.revision}</span>;{' '}
+          {data.last_batch === null ? (
+            'no batch heard yet.'
+          ) : (
+            <>
+              last heard <TimeAgo at={data.last_batch.at} className="text-ink" />.
+            </>
+          )}
         </>
       }
     >
       <div className="flex flex-col gap-2 empty:hidden">
-        {adaptation.isError && <Banner tone="load">The service has not answered for {span(now - adaptation.dataUpdatedAt)}. What you see is from then; the robot may be elsewhere by now.</Banner>}
+        {adaptation.isError && (
+          <Banner tone="load">
+            The service has not answered for {span(now - adaptation.dataUpdatedAt)}. What you see is from then; the robot may be
+            elsewhere by now.
+          </Banner>
+        )}
         <Attention adaptation={data} health={health} />
       </div>
       <Live adaptation={data} />
@@ -64,7 +87,10 @@ export function Component() {
 
 function Banner({ tone, children }: { tone: 'load' | 'stop'; children: ReactNode }) {
   return (
-    <p role="status" className={`border-l-4 px-3 py-2 ${tone === 'stop' ? 'border-stop bg-stop-wash' : 'border-load-fill bg-load-wash'}`}>
+    <p
+      role="status"
+      className={`border-l-4 px-3 py-2 ${tone === 'stop' ? 'border-stop bg-stop-wash' : 'border-load-fill bg-load-wash'}`}
+    >
       {children}
     </p>
   )
@@ -72,7 +98,13 @@ function Banner({ tone, children }: { tone: 'load' | 'stop'; children: ReactNode
 
 function Attention({ adaptation, health }: { adaptation: Adaptation; health: Health }) {
   const words = attentionOf(adaptation, health)
-  if (adaptation.state === 'ended') return <Banner tone="load">It has ended {adaptation.ended_at !== null && <TimeAgo at={adaptation.ended_at} />}; it serves and takes nothing more. Its log stays.</Banner>
+  if (adaptation.state === 'ended')
+    return (
+      <Banner tone="load">
+        It has ended {adaptation.ended_at !== null && <TimeAgo at={adaptation.ended_at} />}; it serves and takes nothing more. Its
+        log stays.
+      </Banner>
+    )
   if (words === undefined) return null
   return (
     <Banner tone={health.state === 'frozen' ? 'stop' : 'load'}>
@@ -147,7 +179,10 @@ function Live({ adaptation }: { adaptation: Adaptation }) {
   if (batches.length === 0)
     return (
       <>
-        <Empty title="No batch yet">It serves version {adaptation.version} unchanged until its controller posts what the arm did; the first batch carries sequence {adaptation.next_sequence}.</Empty>
+        <Empty title="No batch yet">
+          It serves version {adaptation.version} unchanged until its controller posts what the arm did; the first batch carries
+          sequence {adaptation.next_sequence}.
+        </Empty>
         <ContextSection adaptation={adaptation} history={history.data} />
       </>
     )
@@ -175,7 +210,12 @@ function Live({ adaptation }: { adaptation: Adaptation }) {
           </fieldset>
         }
       >
-        <ErrorChart entries={entries} frozenNow={adaptation.state === 'frozen'} selected={selected} onSelect={(position) => url.set({ batch: String(position) }, { push: true })} />
+        <ErrorChart
+          entries={entries}
+          frozenNow={adaptation.state === 'frozen'}
+          selected={selected}
+          onSelect={(position) => url.set({ batch: String(position) }, { push: true })}
+        />
       </Section>
       <BatchView adaptation={adaptation} history={history.data} selected={selected} />
       <div className="grid gap-x-12 gap-y-8 lg:grid-cols-[3fr_2fr]">
@@ -189,7 +229,15 @@ function Live({ adaptation }: { adaptation: Adaptation }) {
 }
 
 /** The newest batch, or the one chosen: its joints at an instant, and over its time. */
-function BatchView({ adaptation, history, selected }: { adaptation: Adaptation; history: LogEntry[]; selected: number | undefined }) {
+function BatchView({
+  adaptation,
+  history,
+  selected,
+}: {
+  adaptation: Adaptation
+  history: LogEntry[]
+  selected: number | undefined
+}) {
   const url = useUrlState()
   const batches = history.filter((entry) => entry.entry === 'batch')
   const position = selected ?? batches.at(-1)!.position
@@ -203,7 +251,14 @@ function BatchView({ adaptation, history, selected }: { adaptation: Adaptation; 
     <>
       <Section
         title={selected === undefined ? 'Joints, newest batch' : `Joints, batch ${batch?.sequence ?? ''}`}
-        note={batch && <span className="inline-flex flex-wrap items-baseline gap-x-3">{batch.verdict && <VerdictStamp verdict={batch.verdict} />}{batch.reasons?.map((reason) => reason.detail).join(' ')}</span>}
+        note={
+          batch && (
+            <span className="inline-flex flex-wrap items-baseline gap-x-3">
+              {batch.verdict && <VerdictStamp verdict={batch.verdict} />}
+              {batch.reasons?.map((reason) => reason.detail).join(' ')}
+            </span>
+          )
+        }
         actions={
           selected === undefined ? (
             <LoadBarKey />
@@ -212,7 +267,9 @@ function BatchView({ adaptation, history, selected }: { adaptation: Adaptation; 
           )
         }
       >
-        {rows.isError && <Failed what="The rows of this batch could not be read" error={rows.error} retry={() => void rows.refetch()} />}
+        {rows.isError && (
+          <Failed what="The rows of this batch could not be read" error={rows.error} retry={() => void rows.refetch()} />
+        )}
         <JointTable joints={adaptation.joint_names} rows={rows.data} row={row} batch={batch} history={until} />
       </Section>
       {rows.data && rows.data.time.length > 1 && (
@@ -221,7 +278,11 @@ function BatchView({ adaptation, history, selected }: { adaptation: Adaptation; 
           note={`${counted(rows.data.time.length, 'row')}; the table above shows ${robotTime(rows.data.time[row]!)} s, ${row === last ? 'the newest row' : `row ${row + 1}`}`}
         >
           <LoadStrip
-            joints={rows.data.joint_names.map((name, index) => ({ name, unit: rows.data.unit[index]!, limit: rows.data.torque_limits[index]! }))}
+            joints={rows.data.joint_names.map((name, index) => ({
+              name,
+              unit: rows.data.unit[index]!,
+              limit: rows.data.torque_limits[index]!,
+            }))}
             time={rows.data.time}
             predicted={rows.data.predicted}
             measured={rows.data.torque}
@@ -229,7 +290,9 @@ function BatchView({ adaptation, history, selected }: { adaptation: Adaptation; 
             onRow={(next) => setInstant({ position: rows.data.position, row: next })}
           />
           <div className="mt-3">
-            <Caution>A predicted torque is advisory. Keep the controller’s own torque, speed and collision limits active.</Caution>
+            <Caution>
+              A predicted torque is advisory. Keep the controller’s own torque, speed and collision limits active.
+            </Caution>
           </div>
         </Section>
       )}
@@ -237,7 +300,12 @@ function BatchView({ adaptation, history, selected }: { adaptation: Adaptation; 
   )
 }
 
-const contextNames = { tool: 'Tool', payload_class: 'Payload class', firmware: 'Firmware', friction_setting: 'Friction setting' } as const
+const contextNames = {
+  tool: 'Tool',
+  payload_class: 'Payload class',
+  firmware: 'Firmware',
+  friction_setting: 'Friction setting',
+} as const
 
 function ContextSection({ adaptation, history }: { adaptation: Adaptation; history: LogEntry[] }) {
   const event = history.findLast((entry) => entry.entry === 'event')
@@ -246,22 +314,58 @@ function ContextSection({ adaptation, history }: { adaptation: Adaptation; histo
     return value === undefined ? [] : [[label, value]]
   })
   const { update } = adaptation
-  const settings = [update.kind, update.rate !== undefined && `step size ${significant(update.rate)}`, update.rows_per_step !== undefined && `${counted(update.rows_per_step, 'row')} a step`, update.fade !== undefined && `fades to ${significant(update.fade)} in 1 s`]
+  const settings = [
+    update.kind,
+    update.rate !== undefined && `step size ${significant(update.rate)}`,
+    update.rows_per_step !== undefined && `${counted(update.rows_per_step, 'row')} a step`,
+    update.fade !== undefined && `fades to ${significant(update.fade)} in 1 s`,
+  ]
   return (
     <Section title="Context">
       <Facts
         items={[
           ['Robot', adaptation.robot],
           ...context,
-          ['Last event', event ? <>{eventWords(event)}, <TimeAgo at={event.at} /></> : 'none'],
+          [
+            'Last event',
+            event ? (
+              <>
+                {eventWords(event)}, <TimeAgo at={event.at} />
+              </>
+            ) : (
+              'none'
+            ),
+          ],
           ['Changes', schemeNames[adaptation.scheme]],
           ['Update', settings.filter(Boolean).join(', ')],
-          ['State as of', adaptation.as_of === null ? 'no accepted row yet' : <span><span className="num">{robotTime(adaptation.as_of)}</span> s on the robot’s clock{adaptation.valid_until !== null && <>, valid until <span className="num">{robotTime(adaptation.valid_until)}</span> s</>}</span>],
-          ['Started', <>{adaptation.created_by}, <TimeAgo at={adaptation.created_at} /></>],
+          [
+            'State as of',
+            adaptation.as_of === null ? (
+              'no accepted row yet'
+            ) : (
+              <span>
+                <span className="num">{robotTime(adaptation.as_of)}</span> s on the robot’s clock
+                {adaptation.valid_until !== null && (
+                  <>
+                    , valid until <span className="num">{robotTime(adaptation.valid_until)}</span> s
+                  </>
+                )}
+              </span>
+            ),
+          ],
+          [
+            'Started',
+            <>
+              {adaptation.created_by}, <TimeAgo at={adaptation.created_at} />
+            </>,
+          ],
           ['Id', <code className="text-12 break-all">{adaptation.id}</code>],
         ]}
       />
-      <p className="mt-3 text-12 text-soft">Another tool, payload class, firmware or friction setting needs an adaptation of its own; gripping and releasing within the class are events of this one.</p>
+      <p className="mt-3 text-12 text-soft">
+        Another tool, payload class, firmware or friction setting needs an adaptation of its own; gripping and releasing within
+        the class are events of this one.
+      </p>
     </Section>
   )
 }

@@ -30,12 +30,20 @@ const columns: Column<Row>[] = [
         <TextLink to={paths.adaptation(adaptation.id)} className="font-semibold break-words">
           {adaptation.robot}
         </TextLink>
-        <span className="block text-12 text-soft">{[adaptation.context.tool, adaptation.context.payload_class].filter(Boolean).join(', ')}</span>
+        <span className="block text-12 text-soft">
+          {[adaptation.context.tool, adaptation.context.payload_class].filter(Boolean).join(', ')}
+        </span>
       </>
     ),
   },
   { id: 'state', title: 'State', by: ({ health }) => urgency(health), cell: ({ health }) => <HealthStamp health={health} /> },
-  { id: 'error', title: 'Error now', right: true, by: ({ adaptation }) => adaptation.last_batch?.error?.before ?? null, cell: ({ adaptation }) => <Quantity value={adaptation.last_batch?.error?.before} missing="no batch yet" /> },
+  {
+    id: 'error',
+    title: 'Error now',
+    right: true,
+    by: ({ adaptation }) => adaptation.last_batch?.error?.before ?? null,
+    cell: ({ adaptation }) => <Quantity value={adaptation.last_batch?.error?.before} missing="no batch yet" />,
+  },
   {
     id: 'model',
     title: 'Model, loss',
@@ -49,9 +57,33 @@ const columns: Column<Row>[] = [
       </>
     ),
   },
-  { id: 'revision', title: 'Revision', right: true, minor: true, by: ({ adaptation }) => adaptation.revision, cell: ({ adaptation }) => <span className="num">{adaptation.revision}</span> },
-  { id: 'heard', title: 'Last heard', by: ({ adaptation }) => adaptation.last_batch?.at ?? null, cell: ({ adaptation }) => (adaptation.last_batch === null ? <span className="text-soft">never</span> : <TimeAgo at={adaptation.last_batch.at} />) },
-  { id: 'started', title: 'Started', minor: true, by: ({ adaptation }) => adaptation.created_at, cell: ({ adaptation }) => <><TimeAgo at={adaptation.created_at} /><span className="block text-12 text-soft">{adaptation.created_by}</span></> },
+  {
+    id: 'revision',
+    title: 'Revision',
+    right: true,
+    minor: true,
+    by: ({ adaptation }) => adaptation.revision,
+    cell: ({ adaptation }) => <span className="num">{adaptation.revision}</span>,
+  },
+  {
+    id: 'heard',
+    title: 'Last heard',
+    by: ({ adaptation }) => adaptation.last_batch?.at ?? null,
+    cell: ({ adaptation }) =>
+      adaptation.last_batch === null ? <span className="text-soft">never</span> : <TimeAgo at={adaptation.last_batch.at} />,
+  },
+  {
+    id: 'started',
+    title: 'Started',
+    minor: true,
+    by: ({ adaptation }) => adaptation.created_at,
+    cell: ({ adaptation }) => (
+      <>
+        <TimeAgo at={adaptation.created_at} />
+        <span className="block text-12 text-soft">{adaptation.created_by}</span>
+      </>
+    ),
+  },
 ]
 
 export function Component() {
@@ -64,7 +96,12 @@ export function Component() {
   const filtered = state !== undefined || model !== undefined || text !== undefined
   const rows = (adaptations.data?.items ?? [])
     .map((adaptation) => ({ adaptation, health: healthOf(adaptation, now) }))
-    .filter(({ adaptation, health }) => (state === undefined || health.state === state) && (model === undefined || adaptation.model === model) && (text === undefined || matches(adaptation, text)))
+    .filter(
+      ({ adaptation, health }) =>
+        (state === undefined || health.state === state) &&
+        (model === undefined || adaptation.model === model) &&
+        (text === undefined || matches(adaptation, text)),
+    )
   const models = [...new Set(adaptations.data?.items.map((adaptation) => adaptation.model))].sort()
   return (
     <Page title="Adaptations">
@@ -73,20 +110,44 @@ export function Component() {
       ) : !adaptations.data ? (
         <Failed what="The adaptations could not be read" error={adaptations.error} retry={() => void adaptations.refetch()} />
       ) : adaptations.data.items.length === 0 ? (
-        <Empty title="No adaptation yet" action={<a className="underline underline-offset-3" href={paths.docs()}>How to start one</a>}>
+        <Empty
+          title="No adaptation yet"
+          action={
+            <a className="underline underline-offset-3" href={paths.docs()}>
+              How to start one
+            </a>
+          }
+        >
           A robot’s controller starts one with its key (scope adapt) and posts what the arm did, batch by batch.
         </Empty>
       ) : (
         <div>
           <div className="mb-4 flex flex-wrap gap-x-6 gap-y-2">
-            <Filter label="State" value={state} onChange={(value) => url.set({ state: value, page: undefined })} options={states.map((value) => ({ value, label: value }))} />
-            <Filter label="Model" value={model} onChange={(value) => url.set({ model: value, page: undefined })} options={models.map((value) => ({ value, label: value }))} />
+            <Filter
+              label="State"
+              value={state}
+              onChange={(value) => url.set({ state: value, page: undefined })}
+              options={states.map((value) => ({ value, label: value }))}
+            />
+            <Filter
+              label="Model"
+              value={model}
+              onChange={(value) => url.set({ model: value, page: undefined })}
+              options={models.map((value) => ({ value, label: value }))}
+            />
             <Search label="Robot, tool, payload" value={text} onChange={(value) => url.set({ text: value, page: undefined })} />
           </div>
           {rows.length === 0 && filtered ? (
             <Empty title="No adaptation fits these filters" action={<TextLink to={paths.adaptations()}>Show all</TextLink>} />
           ) : (
-            <DataTable label="Adaptations" columns={columns} rows={rows} rowKey={({ adaptation }) => adaptation.id} sort="state" complete={adaptations.data.complete} />
+            <DataTable
+              label="Adaptations"
+              columns={columns}
+              rows={rows}
+              rowKey={({ adaptation }) => adaptation.id}
+              sort="state"
+              complete={adaptations.data.complete}
+            />
           )}
         </div>
       )}

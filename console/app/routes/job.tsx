@@ -23,7 +23,11 @@ export function Component() {
   if (!job.data) {
     return (
       <Page title="Job" above={{ to: paths.jobs(), label: 'Jobs' }}>
-        {job.isError ? <Failed what="This job could not be read" error={job.error} retry={() => void job.refetch()} /> : <SkeletonRows rows={6} label="Loading the job" />}
+        {job.isError ? (
+          <Failed what="This job could not be read" error={job.error} retry={() => void job.refetch()} />
+        ) : (
+          <SkeletonRows rows={6} label="Loading the job" />
+        )}
       </Page>
     )
   }
@@ -59,15 +63,31 @@ export function Component() {
           <Facts
             items={[
               ['Made', <Result key="result" job={data} />],
-              ['Asked for', <>{data.created_by}, <TimeAgo at={data.created_at} /></>],
+              [
+                'Asked for',
+                <>
+                  {data.created_by}, <TimeAgo at={data.created_at} />
+                </>,
+              ],
               ['Started', data.started_at === null ? 'not yet' : <TimeAgo at={data.started_at} />],
               ['Ended', data.ended_at === null ? 'not yet' : <TimeAgo at={data.ended_at} />],
-              ...(data.started_at !== null && data.ended_at !== null ? ([['Took', span(Date.parse(data.ended_at) - Date.parse(data.started_at))]] as [string, ReactNode][]) : []),
+              ...(data.started_at !== null && data.ended_at !== null
+                ? ([['Took', span(Date.parse(data.ended_at) - Date.parse(data.started_at))]] as [string, ReactNode][])
+                : []),
             ]}
           />
         </Section>
         <Section title="Asked for" note="with defaults filled in">
-          <Facts items={Object.entries(data.parameters).filter(([name]) => name !== 'kind').map(([name, value]) => [name.replaceAll('_', ' '), <span key={name} className="num">{shown(value)}</span>])} />
+          <Facts
+            items={Object.entries(data.parameters)
+              .filter(([name]) => name !== 'kind')
+              .map(([name, value]) => [
+                name.replaceAll('_', ' '),
+                <span key={name} className="num">
+                  {shown(value)}
+                </span>,
+              ])}
+          />
         </Section>
       </div>
       {cancelling && <CancelJobDialog job={data} onClose={() => setCancelling(false)} />}
@@ -76,14 +96,27 @@ export function Component() {
 }
 
 function shown(value: unknown): string {
-  if (Array.isArray(value)) return value.length > 6 || value.some((each) => typeof each === 'string') ? counted(value.length, 'entry', 'entries') : value.join(', ')
+  if (Array.isArray(value))
+    return value.length > 6 || value.some((each) => typeof each === 'string')
+      ? counted(value.length, 'entry', 'entries')
+      : value.join(', ')
   return value !== null && typeof value === 'object' ? JSON.stringify(value) : String(value)
 }
 
 function Result({ job }: { job: Job }) {
   const { result } = job
-  if (result?.model !== undefined) return <TextLink to={paths.model(result.model, { version: result.version })}>version {result.version} of {result.model}</TextLink>
-  if (result?.loss !== undefined) return <>version {result.version} of loss {result.loss}</>
+  if (result?.model !== undefined)
+    return (
+      <TextLink to={paths.model(result.model, { version: result.version })}>
+        version {result.version} of {result.model}
+      </TextLink>
+    )
+  if (result?.loss !== undefined)
+    return (
+      <>
+        version {result.version} of loss {result.loss}
+      </>
+    )
   return job.state === 'running' || job.state === 'queued' ? <>nothing yet</> : <>nothing</>
 }
 
@@ -97,9 +130,19 @@ function Curves({ id, kind, ended }: { id: string; kind: Job['kind']; ended: boo
       ) : !curve.data ? (
         <Failed what="The curves could not be read" error={curve.error} retry={() => void curve.refetch()} />
       ) : points === 0 ? (
-        <p className="border-y border-line py-3 text-soft">{ended ? 'It ended before a first point.' : 'The first point comes with the first step.'}</p>
+        <p className="border-y border-line py-3 text-soft">
+          {ended ? 'It ended before a first point.' : 'The first point comes with the first step.'}
+        </p>
       ) : (
-        <LineChart label={`Training curves of the ${jobKinds[kind].toLowerCase()}`} xName={kind === 'fit' ? 'epoch' : 'update'} yName="error" series={curve.data.series.map(({ name, points: each }) => ({ name: name.replaceAll('_', ' '), points: each as [number, number][] }))} />
+        <LineChart
+          label={`Training curves of the ${jobKinds[kind].toLowerCase()}`}
+          xName={kind === 'fit' ? 'epoch' : 'update'}
+          yName="error"
+          series={curve.data.series.map(({ name, points: each }) => ({
+            name: name.replaceAll('_', ' '),
+            points: each as [number, number][],
+          }))}
+        />
       )}
     </Section>
   )

@@ -38,12 +38,23 @@ const columns: Column<Job>[] = [
     width: '10rem',
     cell: (job) => (
       <span className="flex items-center gap-3">
-        <ProgressBar value={job.progress} label={`Progress of the ${jobKinds[job.kind].toLowerCase()} of ${subjectOf(job)}`} ended={hasEnded(job)} />
+        <ProgressBar
+          value={job.progress}
+          label={`Progress of the ${jobKinds[job.kind].toLowerCase()} of ${subjectOf(job)}`}
+          ended={hasEnded(job)}
+        />
         <span className="num w-12 text-right text-12">{percent(job.progress)}</span>
       </span>
     ),
   },
-  { id: 'took', title: 'Took', right: true, minor: true, by: duration, cell: (job) => <span className="num">{duration(job) === null ? '–' : span(duration(job)!)}</span> },
+  {
+    id: 'took',
+    title: 'Took',
+    right: true,
+    minor: true,
+    by: duration,
+    cell: (job) => <span className="num">{duration(job) === null ? '–' : span(duration(job)!)}</span>,
+  },
   { id: 'by', title: 'By', minor: true, by: (job) => job.created_by, cell: (job) => job.created_by },
   { id: 'at', title: 'Asked for', by: (job) => job.created_at, cell: (job) => <TimeAgo at={job.created_at} /> },
 ]
@@ -59,7 +70,10 @@ export function Component() {
   const kind = oneOf(url.get('kind'), kinds)
   const text = url.get('text')
   const rows = (jobs.data?.items ?? []).filter(
-    (job) => (state === undefined || job.state === state) && (kind === undefined || job.kind === kind) && (text === undefined || `${subjectOf(job)} ${job.created_by}`.toLowerCase().includes(text.toLowerCase())),
+    (job) =>
+      (state === undefined || job.state === state) &&
+      (kind === undefined || job.kind === kind) &&
+      (text === undefined || `${subjectOf(job)} ${job.created_by}`.toLowerCase().includes(text.toLowerCase())),
   )
   return (
     <Page title="Jobs" facts="Fitting makes a version of a model, meta-training a version of a loss.">
@@ -68,17 +82,45 @@ export function Component() {
       ) : !jobs.data ? (
         <Failed what="The jobs could not be read" error={jobs.error} retry={() => void jobs.refetch()} />
       ) : jobs.data.items.length === 0 ? (
-        <Empty title="No job yet" action={<a className="underline underline-offset-3" href={paths.docs()}>Jobs in the API</a>}>
+        <Empty
+          title="No job yet"
+          action={
+            <a className="underline underline-offset-3" href={paths.docs()}>
+              Jobs in the API
+            </a>
+          }
+        >
           Once recordings are there, ask for a fitting through the API: its progress, curves and result are shown here.
         </Empty>
       ) : (
         <div>
           <div className="mb-4 flex flex-wrap gap-x-6 gap-y-2">
-            <Filter label="State" value={state} onChange={(value) => url.set({ state: value, page: undefined })} options={states.map((value) => ({ value, label: value }))} />
-            <Filter label="Kind" value={kind} onChange={(value) => url.set({ kind: value, page: undefined })} options={kinds.map((value) => ({ value, label: jobKinds[value].toLowerCase() }))} />
+            <Filter
+              label="State"
+              value={state}
+              onChange={(value) => url.set({ state: value, page: undefined })}
+              options={states.map((value) => ({ value, label: value }))}
+            />
+            <Filter
+              label="Kind"
+              value={kind}
+              onChange={(value) => url.set({ kind: value, page: undefined })}
+              options={kinds.map((value) => ({ value, label: jobKinds[value].toLowerCase() }))}
+            />
             <Search label="Model, loss, person" value={text} onChange={(value) => url.set({ text: value, page: undefined })} />
           </div>
-          {rows.length === 0 ? <Empty title="No job fits these filters" action={<TextLink to={paths.jobs()}>Show all</TextLink>} /> : <DataTable label="Jobs" columns={columns} rows={rows} rowKey={(job) => job.id} sort="-at" complete={jobs.data.complete} />}
+          {rows.length === 0 ? (
+            <Empty title="No job fits these filters" action={<TextLink to={paths.jobs()}>Show all</TextLink>} />
+          ) : (
+            <DataTable
+              label="Jobs"
+              columns={columns}
+              rows={rows}
+              rowKey={(job) => job.id}
+              sort="-at"
+              complete={jobs.data.complete}
+            />
+          )}
         </div>
       )}
     </Page>

@@ -7,7 +7,13 @@ import { Stamp } from '../../components/stamp.tsx'
 import { Empty, Failed, SkeletonRows } from '../../components/states.tsx'
 import { Tabs } from '../../components/tabs.tsx'
 import { TimeAgo } from '../../components/time-ago.tsx'
-import { formerVersions, modelOptions, releasesOptions, versionsOptions, type ModelWithEtag } from '../../features/models/models.ts'
+import {
+  formerVersions,
+  modelOptions,
+  releasesOptions,
+  versionsOptions,
+  type ModelWithEtag,
+} from '../../features/models/models.ts'
 import { ReleaseDialog, RollBackDialog } from '../../features/models/release-dialog.tsx'
 import { ReleaseHistory } from '../../features/models/release-history.tsx'
 import { VersionDetails } from '../../features/models/version-details.tsx'
@@ -28,7 +34,11 @@ export function Component() {
   if (!model.data) {
     return (
       <Page title={name!} above={{ to: paths.models(), label: 'Models' }}>
-        {model.isError ? <Failed what={`Model ${name} could not be read`} error={model.error} retry={() => void model.refetch()} /> : <SkeletonRows rows={6} label="Loading the model" />}
+        {model.isError ? (
+          <Failed what={`Model ${name} could not be read`} error={model.error} retry={() => void model.refetch()} />
+        ) : (
+          <SkeletonRows rows={6} label="Loading the model" />
+        )}
       </Page>
     )
   }
@@ -58,17 +68,31 @@ export function Component() {
     >
       <Versions model={data} releaseBlocked={releaseBlocked} onRelease={(version) => setAct({ kind: 'release', version })} />
       {act?.kind === 'release' && <ReleaseDialog model={data} version={act.version} onClose={() => setAct(undefined)} />}
-      {act?.kind === 'rollback' && releases.data && <RollBackDialog model={data} releases={releases.data.items} onClose={() => setAct(undefined)} />}
+      {act?.kind === 'rollback' && releases.data && (
+        <RollBackDialog model={data} releases={releases.data.items} onClose={() => setAct(undefined)} />
+      )}
     </Page>
   )
 }
 
 function ModelStamp({ model }: { model: ModelWithEtag }) {
-  if (model.archived_at !== null) return <Stamp tone="soft" mark="bar">archived</Stamp>
-  if (model.live_version === null) return <Stamp tone="soft" mark="ring">nothing live</Stamp>
+  if (model.archived_at !== null)
+    return (
+      <Stamp tone="soft" mark="bar">
+        archived
+      </Stamp>
+    )
+  if (model.live_version === null)
+    return (
+      <Stamp tone="soft" mark="ring">
+        nothing live
+      </Stamp>
+    )
   return (
     <span className="inline-flex items-baseline gap-3">
-      <Stamp tone="live" mark="dot">version {model.live_version} live</Stamp>
+      <Stamp tone="live" mark="dot">
+        version {model.live_version} live
+      </Stamp>
       {model.live_since !== null && (
         <span className="text-12 text-soft">
           since <TimeAgo at={model.live_since} />
@@ -78,7 +102,15 @@ function ModelStamp({ model }: { model: ModelWithEtag }) {
   )
 }
 
-function Versions({ model, releaseBlocked, onRelease }: { model: ModelWithEtag; releaseBlocked: string | undefined; onRelease: (version: number) => void }) {
+function Versions({
+  model,
+  releaseBlocked,
+  onRelease,
+}: {
+  model: ModelWithEtag
+  releaseBlocked: string | undefined
+  onRelease: (version: number) => void
+}) {
   const url = useUrlState()
   const versions = useQuery(versionsOptions(model.name))
   const releases = useQuery(releasesOptions(model.name))
@@ -105,9 +137,18 @@ function Versions({ model, releaseBlocked, onRelease }: { model: ModelWithEtag; 
             ) : !versions.data ? (
               <Failed what="The versions could not be read" error={versions.error} retry={() => void versions.refetch()} />
             ) : all.length === 0 ? (
-              <Empty title="No version yet">Fit one on recordings of the arm (a job), import one, or promote an adapted state. A version can be released once it is there.</Empty>
+              <Empty title="No version yet">
+                Fit one on recordings of the arm (a job), import one, or promote an adapted state. A version can be released once
+                it is there.
+              </Empty>
             ) : (
-              <VersionList model={model} versions={all} complete={versions.data.complete} releaseBlocked={releaseBlocked} onRelease={onRelease} />
+              <VersionList
+                model={model}
+                versions={all}
+                complete={versions.data.complete}
+                releaseBlocked={releaseBlocked}
+                onRelease={onRelease}
+              />
             ),
           },
           {

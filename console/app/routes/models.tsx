@@ -38,19 +38,54 @@ const columns: Column<Model>[] = [
     by: (model) => states.indexOf(stateOf(model)),
     cell: (model) => {
       const state = stateOf(model)
-      if (state === 'archived') return <Stamp tone="soft" mark="bar">archived</Stamp>
-      return state === 'live' ? <Stamp tone="live" mark="dot">version {model.live_version}</Stamp> : <Stamp tone="soft" mark="ring">nothing live</Stamp>
+      if (state === 'archived')
+        return (
+          <Stamp tone="soft" mark="bar">
+            archived
+          </Stamp>
+        )
+      return state === 'live' ? (
+        <Stamp tone="live" mark="dot">
+          version {model.live_version}
+        </Stamp>
+      ) : (
+        <Stamp tone="soft" mark="ring">
+          nothing live
+        </Stamp>
+      )
     },
   },
-  { id: 'since', title: 'Since', by: (model) => model.live_since, cell: (model) => (model.live_since === null ? <span className="text-soft">–</span> : <TimeAgo at={model.live_since} />) },
+  {
+    id: 'since',
+    title: 'Since',
+    by: (model) => model.live_since,
+    cell: (model) => (model.live_since === null ? <span className="text-soft">–</span> : <TimeAgo at={model.live_since} />),
+  },
   {
     id: 'newest',
     title: 'Newest version',
     right: true,
     by: (model) => model.newest_version,
-    cell: (model) => (model.newest_version === null ? <span className="text-soft">none</span> : <TextLink to={paths.model(model.name, { version: model.newest_version })} className="num">{model.newest_version}</TextLink>),
+    cell: (model) =>
+      model.newest_version === null ? (
+        <span className="text-soft">none</span>
+      ) : (
+        <TextLink to={paths.model(model.name, { version: model.newest_version })} className="num">
+          {model.newest_version}
+        </TextLink>
+      ),
   },
-  { id: 'made', title: 'Made', minor: true, by: (model) => model.created_at, cell: (model) => <>{model.created_by}, <TimeAgo at={model.created_at} /></> },
+  {
+    id: 'made',
+    title: 'Made',
+    minor: true,
+    by: (model) => model.created_at,
+    cell: (model) => (
+      <>
+        {model.created_by}, <TimeAgo at={model.created_at} />
+      </>
+    ),
+  },
 ]
 
 export function Component() {
@@ -61,7 +96,10 @@ export function Component() {
   const text = url.get('text')
   const all = models.data?.items ?? []
   const rows = all.filter(
-    (model) => (state === undefined ? model.archived_at === null : stateOf(model) === state) && (arm === undefined || model.arm === arm) && (text === undefined || `${model.name} ${model.description}`.toLowerCase().includes(text.toLowerCase())),
+    (model) =>
+      (state === undefined ? model.archived_at === null : stateOf(model) === state) &&
+      (arm === undefined || model.arm === arm) &&
+      (text === undefined || `${model.name} ${model.description}`.toLowerCase().includes(text.toLowerCase())),
   )
   const arms = [...new Set(all.map((model) => model.arm))].sort()
   return (
@@ -71,20 +109,44 @@ export function Component() {
       ) : !models.data ? (
         <Failed what="The models could not be read" error={models.error} retry={() => void models.refetch()} />
       ) : all.length === 0 ? (
-        <Empty title="No model yet" action={<a className="underline underline-offset-3" href={paths.docs()}>Models in the API</a>}>
+        <Empty
+          title="No model yet"
+          action={
+            <a className="underline underline-offset-3" href={paths.docs()}>
+              Models in the API
+            </a>
+          }
+        >
           Describe the arm and start a model of it through the API; upload recordings, and fit a first version.
         </Empty>
       ) : (
         <div>
           <div className="mb-4 flex flex-wrap gap-x-6 gap-y-2">
-            <Filter label="State" value={state} onChange={(value) => url.set({ state: value, page: undefined })} options={states.map((value) => ({ value, label: value }))} />
-            <Filter label="Arm" value={arm} onChange={(value) => url.set({ arm: value, page: undefined })} options={arms.map((value) => ({ value, label: value }))} />
+            <Filter
+              label="State"
+              value={state}
+              onChange={(value) => url.set({ state: value, page: undefined })}
+              options={states.map((value) => ({ value, label: value }))}
+            />
+            <Filter
+              label="Arm"
+              value={arm}
+              onChange={(value) => url.set({ arm: value, page: undefined })}
+              options={arms.map((value) => ({ value, label: value }))}
+            />
             <Search label="Name" value={text} onChange={(value) => url.set({ text: value, page: undefined })} />
           </div>
           {rows.length === 0 ? (
             <Empty title="No model fits these filters" action={<TextLink to={paths.models()}>Show all</TextLink>} />
           ) : (
-            <DataTable label="Models" columns={columns} rows={rows} rowKey={(model) => model.id} sort="name" complete={models.data.complete} />
+            <DataTable
+              label="Models"
+              columns={columns}
+              rows={rows}
+              rowKey={(model) => model.id}
+              sort="name"
+              complete={models.data.complete}
+            />
           )}
         </div>
       )}

@@ -32,19 +32,41 @@ export function Component() {
 function Robots() {
   const adaptations = useQuery(adaptationsOptions)
   const now = useNow()
-  if (adaptations.isPending) return <Section title="Robots"><SkeletonRows rows={6} label="Loading adaptations" /></Section>
-  if (!adaptations.data) return <Section title="Robots"><Failed what="The adaptations could not be read" error={adaptations.error} retry={() => void adaptations.refetch()} /></Section>
+  if (adaptations.isPending)
+    return (
+      <Section title="Robots">
+        <SkeletonRows rows={6} label="Loading adaptations" />
+      </Section>
+    )
+  if (!adaptations.data)
+    return (
+      <Section title="Robots">
+        <Failed what="The adaptations could not be read" error={adaptations.error} retry={() => void adaptations.refetch()} />
+      </Section>
+    )
   const running = adaptations.data.items
     .filter((adaptation) => adaptation.state !== 'ended')
     .map((adaptation) => ({ adaptation, health: healthOf(adaptation, now) }))
-    .sort((a, b) => urgency(a.health) - urgency(b.health) || a.adaptation.robot.localeCompare(b.adaptation.robot, undefined, { numeric: true }))
+    .sort(
+      (a, b) =>
+        urgency(a.health) - urgency(b.health) ||
+        a.adaptation.robot.localeCompare(b.adaptation.robot, undefined, { numeric: true }),
+    )
   const asking = running.filter(({ health }) => health.state !== 'adapting')
   const ended = adaptations.data.items.length - running.length
   if (running.length === 0)
     return (
       <Section title="Robots">
-        <Empty title="No robot is adapting" action={<a className="underline underline-offset-3" href={paths.docs()}>How to start one</a>}>
-          A robot’s controller starts an adaptation of the live version with its key (scope adapt), then posts what the arm did, batch by batch. It shows up here at once.
+        <Empty
+          title="No robot is adapting"
+          action={
+            <a className="underline underline-offset-3" href={paths.docs()}>
+              How to start one
+            </a>
+          }
+        >
+          A robot’s controller starts an adaptation of the live version with its key (scope adapt), then posts what the arm did,
+          batch by batch. It shows up here at once.
           {ended > 0 && ` ${counted(ended, 'adaptation has', 'adaptations have')} ended.`}
         </Empty>
       </Section>
@@ -60,7 +82,10 @@ function Robots() {
         ) : (
           <ul className="border-t border-edge">
             {asking.map(({ adaptation, health }) => (
-              <li key={adaptation.id} className={`flex flex-wrap items-baseline gap-x-4 gap-y-1 border-b border-line border-l-4 py-2.5 pl-3 ${health.state === 'frozen' ? 'border-l-stop' : 'border-l-load-fill'}`}>
+              <li
+                key={adaptation.id}
+                className={`flex flex-wrap items-baseline gap-x-4 gap-y-1 border-b border-line border-l-4 py-2.5 pl-3 ${health.state === 'frozen' ? 'border-l-stop' : 'border-l-load-fill'}`}
+              >
                 <TextLink to={paths.adaptation(adaptation.id)} className="font-semibold">
                   {adaptation.robot}
                 </TextLink>
@@ -71,7 +96,11 @@ function Robots() {
           </ul>
         )}
       </Section>
-      <Section title="Robots" note={`${counted(running.length, 'adaptation')} running`} actions={<TextLink to={paths.adaptations()}>all adaptations</TextLink>}>
+      <Section
+        title="Robots"
+        note={`${counted(running.length, 'adaptation')} running`}
+        actions={<TextLink to={paths.adaptations()}>all adaptations</TextLink>}
+      >
         <RobotList robots={running} />
       </Section>
     </>
@@ -82,7 +111,8 @@ function Unreached({ since }: { since: number }) {
   const now = useNow()
   return (
     <p role="alert" className="border-l-4 border-load-fill bg-load-wash px-3 py-2">
-      The service has not answered for {span(now - since)}. What you see is from <span title={exact(new Date(since).toISOString())}>then</span>; it goes on by itself once the service answers.
+      The service has not answered for {span(now - since)}. What you see is from{' '}
+      <span title={exact(new Date(since).toISOString())}>then</span>; it goes on by itself once the service answers.
     </p>
   )
 }
@@ -108,8 +138,18 @@ function LiveVersions() {
                 </TextLink>
                 <span className="num text-12 text-soft">{model.arm}</span>
                 <span className="ml-auto flex items-baseline gap-3">
-                  {model.live_version === null ? <Stamp tone="soft" mark="ring">nothing live</Stamp> : <Stamp tone="live" mark="dot">version {model.live_version}</Stamp>}
-                  {model.live_since !== null && <TimeAgo at={model.live_since} className="min-w-20 text-right text-12 text-soft" />}
+                  {model.live_version === null ? (
+                    <Stamp tone="soft" mark="ring">
+                      nothing live
+                    </Stamp>
+                  ) : (
+                    <Stamp tone="live" mark="dot">
+                      version {model.live_version}
+                    </Stamp>
+                  )}
+                  {model.live_since !== null && (
+                    <TimeAgo at={model.live_since} className="min-w-20 text-right text-12 text-soft" />
+                  )}
                 </span>
               </li>
             ))}
@@ -137,7 +177,11 @@ function RunningJobs() {
           None is running.{' '}
           {latest && (
             <span className="text-soft">
-              Last: <TextLink to={paths.job(latest.id)}>{jobKinds[latest.kind].toLowerCase()} of {subjectOf(latest)}</TextLink>, {latest.state} {latest.ended_at !== null && <TimeAgo at={latest.ended_at} />}
+              Last:{' '}
+              <TextLink to={paths.job(latest.id)}>
+                {jobKinds[latest.kind].toLowerCase()} of {subjectOf(latest)}
+              </TextLink>
+              , {latest.state} {latest.ended_at !== null && <TimeAgo at={latest.ended_at} />}
             </span>
           )}
         </p>
@@ -155,7 +199,10 @@ function RunningJobs() {
                   <span className="num">{percent(job.progress)}</span>
                 </span>
               </div>
-              <ProgressBar value={job.progress} label={`Progress of the ${jobKinds[job.kind].toLowerCase()} of ${subjectOf(job)}`} />
+              <ProgressBar
+                value={job.progress}
+                label={`Progress of the ${jobKinds[job.kind].toLowerCase()} of ${subjectOf(job)}`}
+              />
             </li>
           ))}
         </ul>

@@ -37,7 +37,11 @@ export function Component() {
           {parameters.has('next') && <p className="mt-1 text-soft">You will come back to where you were.</p>}
           <SignInForm />
           <p className="mt-10 text-12 text-soft">
-            Programs don’t sign in: they carry an API key. What they can ask for is described in the <a href={paths.docs()} className="underline underline-offset-3">API’s documentation</a>.
+            Programs don’t sign in: they carry an API key. What they can ask for is described in the{' '}
+            <a href={paths.docs()} className="underline underline-offset-3">
+              API’s documentation
+            </a>
+            .
           </p>
         </div>
       </div>
@@ -60,15 +64,38 @@ function SignInForm() {
       onSubmit={(event) => {
         event.preventDefault()
         setTried(true)
-        if (email.trim() !== '' && password !== '' && !signIn.isPending && wait === 0) signIn.mutate({ email: email.trim(), password })
+        if (email.trim() !== '' && password !== '' && !signIn.isPending && wait === 0)
+          signIn.mutate({ email: email.trim(), password })
       }}
     >
-      <TextField label="E-mail" type="email" name="email" autoComplete="username" autoFocus value={email} onChange={(event) => setEmail(event.target.value)} error={tried && email.trim() === '' ? 'Your e-mail address is needed.' : undefined} />
+      <TextField
+        label="E-mail"
+        type="email"
+        name="email"
+        autoComplete="username"
+        autoFocus
+        value={email}
+        onChange={(event) => setEmail(event.target.value)}
+        error={tried && email.trim() === '' ? 'Your e-mail address is needed.' : undefined}
+      />
       <Field label="Password" error={tried && password === '' ? 'Your password is needed.' : undefined}>
         {(props) => (
           <span className="relative block">
-            <input {...props} type={shown ? 'text' : 'password'} name="password" autoComplete="current-password" value={password} onChange={(event) => setPassword(event.target.value)} className={`${props.className} pr-20`} />
-            <button type="button" aria-pressed={shown} onClick={() => setShown(!shown)} className="absolute inset-y-0 right-1 px-2 text-12 font-semibold text-soft hover:text-ink">
+            <input
+              {...props}
+              type={shown ? 'text' : 'password'}
+              name="password"
+              autoComplete="current-password"
+              value={password}
+              onChange={(event) => setPassword(event.target.value)}
+              className={`${props.className} pr-20`}
+            />
+            <button
+              type="button"
+              aria-pressed={shown}
+              onClick={() => setShown(!shown)}
+              className="absolute inset-y-0 right-1 px-2 text-12 font-semibold text-soft hover:text-ink"
+            >
               {shown ? 'Hide' : 'Show'}
               <span className="sr-only"> password</span>
             </button>
@@ -76,7 +103,13 @@ function SignInForm() {
         )}
       </Field>
       {signIn.error && <InlineFailure error={signIn.error} />}
-      <Button type="submit" look="primary" pending={signIn.isPending} blocked={wait > 0 ? 'Too many tries.' : undefined} className="mt-1 min-h-10">
+      <Button
+        type="submit"
+        look="primary"
+        pending={signIn.isPending}
+        blocked={wait > 0 ? 'Too many tries.' : undefined}
+        className="mt-1 min-h-10"
+      >
         {signIn.isPending ? 'Signing in…' : wait > 0 ? `Again in ${span(wait)}` : 'Sign in'}
       </Button>
     </form>
@@ -118,7 +151,10 @@ function Plate() {
             </div>
           ))}
         </div>
-        <p className="mt-6 text-12 text-soft">An invented arm at one instant. The bar is what was predicted, the upright mark what was measured, the ticks are the joint’s limits.</p>
+        <p className="mt-6 text-12 text-soft">
+          An invented arm at one instant. The bar is what was predicted, the upright mark what was measured, the ticks are the
+          joint’s limits.
+        </p>
       </div>
     </div>
   )

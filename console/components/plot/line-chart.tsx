@@ -21,7 +21,11 @@ export function LineChart({ series, label, xName, yName }: { series: Series[]; l
   const narrow = width < 480
   const right = narrow ? 8 : edge.right
   const x = linearScale(xs[0] ?? 0, xs.at(-1) ?? 1, edge.left, Math.max(edge.left + 1, width - right), narrow ? 4 : 8)
-  const y = errorScale(drawn.flatMap((each) => each.points.map((point) => point[1])), height - edge.bottom, edge.top)
+  const y = errorScale(
+    drawn.flatMap((each) => each.points.map((point) => point[1])),
+    height - edge.bottom,
+    edge.top,
+  )
   const readAt = at === undefined ? undefined : xs[Math.min(at, xs.length - 1)]
   const ends = spacedEnds(drawn.map((each) => y.place(each.points.at(-1)![1])))
 
@@ -38,7 +42,12 @@ export function LineChart({ series, label, xName, yName }: { series: Series[]; l
         aria-valuetext={readout(readAt ?? xs.at(-1))}
         onPointerMove={(event) => {
           const left = event.clientX - frame.current!.getBoundingClientRect().left
-          setAt(xs.reduce((best, value, index) => (Math.abs(x.place(value) - left) < Math.abs(x.place(xs[best]!) - left) ? index : best), 0))
+          setAt(
+            xs.reduce(
+              (best, value, index) => (Math.abs(x.place(value) - left) < Math.abs(x.place(xs[best]!) - left) ? index : best),
+              0,
+            ),
+          )
         }}
         onPointerLeave={() => setAt(undefined)}
         onKeyDown={(event) => {
@@ -59,14 +68,22 @@ export function LineChart({ series, label, xName, yName }: { series: Series[]; l
             </g>
           ))}
           {x.ticks.map((tick) => (
-            <text key={tick} x={x.place(tick)} y={height - edge.bottom + 16} textAnchor="middle" className="num fill-soft text-11">
+            <text
+              key={tick}
+              x={x.place(tick)}
+              y={height - edge.bottom + 16}
+              textAnchor="middle"
+              className="num fill-soft text-11"
+            >
               {significant(tick, 3)}
             </text>
           ))}
           {drawn.map((each, index) => (
             <g key={each.name}>
               <path
-                d={each.points.map(([px, py], point) => `${point === 0 ? 'M' : 'L'}${x.place(px).toFixed(1)} ${y.place(py).toFixed(1)}`).join('')}
+                d={each.points
+                  .map(([px, py], point) => `${point === 0 ? 'M' : 'L'}${x.place(px).toFixed(1)} ${y.place(py).toFixed(1)}`)
+                  .join('')}
                 fill="none"
                 strokeWidth={1.5}
                 strokeDasharray={dashes[index % dashes.length]}
@@ -79,7 +96,16 @@ export function LineChart({ series, label, xName, yName }: { series: Series[]; l
               )}
             </g>
           ))}
-          {readAt !== undefined && <line x1={x.place(readAt)} x2={x.place(readAt)} y1={edge.top} y2={height - edge.bottom} className="stroke-ink" strokeDasharray="1 2" />}
+          {readAt !== undefined && (
+            <line
+              x1={x.place(readAt)}
+              x2={x.place(readAt)}
+              y1={edge.top}
+              y2={height - edge.bottom}
+              className="stroke-ink"
+              strokeDasharray="1 2"
+            />
+          )}
         </svg>
       </div>
       <figcaption className="flex flex-wrap gap-x-6 text-12 text-soft">

@@ -7,7 +7,11 @@ export interface Scale {
 /** Where values of [from, to] lie on [start, end]. */
 export function linearScale(from: number, to: number, start: number, end: number, count = 5): Scale {
   const width = to - from || 1
-  return { kind: 'linear', place: (value) => start + ((value - from) / width) * (end - start), ticks: roundTicks(from, to, count) }
+  return {
+    kind: 'linear',
+    place: (value) => start + ((value - from) / width) * (end - start),
+    ticks: roundTicks(from, to, count),
+  }
 }
 
 /** The same by powers of ten; values at or below 0 stand at the lower edge. */
@@ -25,7 +29,8 @@ export function logScale(from: number, to: number, start: number, end: number): 
 function decadesBetween(from: number, to: number): number[] {
   const ticks: number[] = []
   for (let power = Math.floor(Math.log10(from)); power <= Math.ceil(Math.log10(to)); power++)
-    for (const step of [1, 2, 5]) if (step * 10 ** power >= from * 0.999 && step * 10 ** power <= to * 1.001) ticks.push(step * 10 ** power)
+    for (const step of [1, 2, 5])
+      if (step * 10 ** power >= from * 0.999 && step * 10 ** power <= to * 1.001) ticks.push(step * 10 ** power)
   return ticks
 }
 
@@ -45,6 +50,7 @@ export function roundTicks(from: number, to: number, count: number): number[] {
   const power = 10 ** Math.floor(Math.log10(rough))
   const step = [1, 2, 5, 10].map((each) => each * power).find((each) => each >= rough)!
   const ticks: number[] = []
-  for (let tick = Math.ceil(from / step - 1e-9) * step; tick <= to + step * 1e-9; tick += step) ticks.push(Math.abs(tick) < step * 1e-9 ? 0 : tick)
+  for (let tick = Math.ceil(from / step - 1e-9) * step; tick <= to + step * 1e-9; tick += step)
+    ticks.push(Math.abs(tick) < step * 1e-9 ? 0 : tick)
   return ticks
 }

@@ -37,7 +37,11 @@ export const historyOptions = (client: QueryClient, id: string, ended: boolean) 
       const found: LogEntry[] = []
       let cursor: string | undefined
       do {
-        const page = await heftwise.adaptations.log(id, { cursor, limit: newestKnown > 0 && cursor === undefined ? 10 : pageLimit, signal })
+        const page = await heftwise.adaptations.log(id, {
+          cursor,
+          limit: newestKnown > 0 && cursor === undefined ? 10 : pageLimit,
+          signal,
+        })
         found.push(...page.items.filter((entry) => entry.position > newestKnown))
         cursor = page.items.some((entry) => entry.position <= newestKnown) ? undefined : (page.next_cursor ?? undefined)
       } while (cursor !== undefined && found.length < kept)
@@ -69,7 +73,11 @@ export const rowsOptions = (id: string, position: number) =>
     placeholderData: keepPreviousData,
   })
 
-export const logOptions = (id: string, query: Pick<QueryOf<'listAdaptationLog'>, 'cursor' | 'entry' | 'verdict'>, live: boolean) =>
+export const logOptions = (
+  id: string,
+  query: Pick<QueryOf<'listAdaptationLog'>, 'cursor' | 'entry' | 'verdict'>,
+  live: boolean,
+) =>
   queryOptions({
     queryKey: ['adaptations', id, 'log', query],
     queryFn: ({ signal }) => heftwise.adaptations.log(id, { ...query, limit: 25, signal }),

@@ -44,7 +44,8 @@ function words(command: Command, { robot, revision, model, version, state }: Ada
       return {
         title: `End the adaptation of ${robot}`,
         act: 'End it',
-        consequence: 'It serves nothing and takes nothing from now on: the controller’s next request is refused and its fallback takes over. This can’t be undone. Its log stays.',
+        consequence:
+          'It serves nothing and takes nothing from now on: the controller’s next request is refused and its fallback takes over. This can’t be undone. Its log stays.',
         done: `The adaptation of ${robot} has ended.`,
         destructive: true,
       }
@@ -52,11 +53,20 @@ function words(command: Command, { robot, revision, model, version, state }: Ada
 }
 
 const cautions: Partial<Record<Command, string>> = {
-  resume: 'An adapting model can move a machine that can injure. Be sure why it was frozen, and keep the controller’s own torque, speed and collision limits active.',
+  resume:
+    'An adapting model can move a machine that can injure. Be sure why it was frozen, and keep the controller’s own torque, speed and collision limits active.',
   reset: 'Torques change at once, and the arm may be gripping something. Reset at standstill where you can.',
 }
 
-export function CommandDialog({ adaptation, command, onClose }: { adaptation: Adaptation; command: Command; onClose: () => void }) {
+export function CommandDialog({
+  adaptation,
+  command,
+  onClose,
+}: {
+  adaptation: Adaptation
+  command: Command
+  onClose: () => void
+}) {
   const client = useQueryClient()
   const say = useNotice()
   const run = useMutation(commandOptions(client, adaptation.id))

@@ -37,7 +37,12 @@ export function ErrorChart({ entries, frozenNow, selected, onSelect }: ErrorChar
   const batches = useMemo(() => entries.filter((entry) => entry.entry === 'batch' && entry.error), [entries])
   const axis = height - bottom
   const y = useMemo(
-    () => errorScale(batches.flatMap(({ error }) => [error!.before, ...(error!.after === null ? [] : [error!.after])]), axis - 6, top),
+    () =>
+      errorScale(
+        batches.flatMap(({ error }) => [error!.before, ...(error!.after === null ? [] : [error!.after])]),
+        axis - 6,
+        top,
+      ),
     [batches, axis],
   )
   const at = cursor === undefined ? undefined : batches.find((entry) => entry.position === cursor)
@@ -47,7 +52,10 @@ export function ErrorChart({ entries, frozenNow, selected, onSelect }: ErrorChar
 
   const nearest = (event: React.PointerEvent) => {
     const position = first + ((event.clientX - frame.current!.getBoundingClientRect().left - left) / inner) * length
-    return batches.reduce<LogEntry | undefined>((best, entry) => (!best || Math.abs(entry.position - position) < Math.abs(best.position - position) ? entry : best), undefined)
+    return batches.reduce<LogEntry | undefined>(
+      (best, entry) => (!best || Math.abs(entry.position - position) < Math.abs(best.position - position) ? entry : best),
+      undefined,
+    )
   }
 
   return (
@@ -68,7 +76,14 @@ export function ErrorChart({ entries, frozenNow, selected, onSelect }: ErrorChar
         onBlur={() => setCursor(undefined)}
         onKeyDown={(event) => {
           const index = read ? batches.indexOf(read) : batches.length - 1
-          const next = { ArrowLeft: index - 1, ArrowRight: index + 1, PageUp: index + 10, PageDown: index - 10, Home: 0, End: batches.length - 1 }[event.key]
+          const next = {
+            ArrowLeft: index - 1,
+            ArrowRight: index + 1,
+            PageUp: index + 10,
+            PageDown: index - 10,
+            Home: 0,
+            End: batches.length - 1,
+          }[event.key]
           if (event.key === 'Enter' && read) onSelect(read.position)
           if (next === undefined) return
           event.preventDefault()
@@ -100,7 +115,12 @@ export function ErrorChart({ entries, frozenNow, selected, onSelect }: ErrorChar
           <Uprights entries={entries} x={x} axis={axis} />
           <line x1={left} x2={left + inner} y1={axis} y2={axis} className="stroke-edge" />
           <path
-            d={batches.map((entry, index) => `${index === 0 ? 'M' : 'L'}${x(entry.position).toFixed(1)} ${y.place(entry.error!.before).toFixed(1)}`).join('')}
+            d={batches
+              .map(
+                (entry, index) =>
+                  `${index === 0 ? 'M' : 'L'}${x(entry.position).toFixed(1)} ${y.place(entry.error!.before).toFixed(1)}`,
+              )
+              .join('')}
             fill="none"
             strokeWidth={1.25}
             strokeLinejoin="round"
@@ -108,11 +128,25 @@ export function ErrorChart({ entries, frozenNow, selected, onSelect }: ErrorChar
           />
           {batches.map((entry) => {
             const px = x(entry.position)
-            if (entry.verdict === 'rejected') return <circle key={entry.position} cx={px} cy={axis} r={3.5} className="fill-paper stroke-load" strokeWidth={1.75} />
-            if (entry.verdict === 'stored') return <line key={entry.position} x1={px} x2={px} y1={axis} y2={axis + 6} className="stroke-soft" />
-            return entry.error!.after === null ? null : <circle key={entry.position} cx={px} cy={y.place(entry.error!.after)} r={batches.length > 150 ? 1.6 : 2.4} className="fill-live" />
+            if (entry.verdict === 'rejected')
+              return (
+                <circle key={entry.position} cx={px} cy={axis} r={3.5} className="fill-paper stroke-load" strokeWidth={1.75} />
+              )
+            if (entry.verdict === 'stored')
+              return <line key={entry.position} x1={px} x2={px} y1={axis} y2={axis + 6} className="stroke-soft" />
+            return entry.error!.after === null ? null : (
+              <circle
+                key={entry.position}
+                cx={px}
+                cy={y.place(entry.error!.after)}
+                r={batches.length > 150 ? 1.6 : 2.4}
+                className="fill-live"
+              />
+            )
           })}
-          {selected !== undefined && selected >= first && <path d={`M${x(selected)} ${axis + 2}l-5 9h10z`} className="fill-ink" />}
+          {selected !== undefined && selected >= first && (
+            <path d={`M${x(selected)} ${axis + 2}l-5 9h10z`} className="fill-ink" />
+          )}
           {!narrow && newest && (
             <Ends
               x={left + inner + 8}
@@ -122,7 +156,9 @@ export function ErrorChart({ entries, frozenNow, selected, onSelect }: ErrorChar
               ]}
             />
           )}
-          {read && cursor !== undefined && <line x1={x(read.position)} x2={x(read.position)} y1={top} y2={axis} className="stroke-ink" strokeDasharray="1 2" />}
+          {read && cursor !== undefined && (
+            <line x1={x(read.position)} x2={x(read.position)} y1={top} y2={axis} className="stroke-ink" strokeDasharray="1 2" />
+          )}
           {batches.length > 0 && (
             <>
               <text x={left} y={height - 10} className="num fill-soft text-11">
@@ -142,16 +178,28 @@ export function ErrorChart({ entries, frozenNow, selected, onSelect }: ErrorChar
         <span className="num min-h-4 max-sm:min-h-8">{read && readout(read, now)}</span>
         <span className="ml-auto flex flex-wrap gap-x-4 text-soft max-sm:ml-0">
           <span className="flex items-center gap-1.5">
-            <svg aria-hidden="true" width="18" height="8"><path d="M0 4h18" className="stroke-ink" /></svg>before step
+            <svg aria-hidden="true" width="18" height="8">
+              <path d="M0 4h18" className="stroke-ink" />
+            </svg>
+            before step
           </span>
           <span className="flex items-center gap-1.5">
-            <svg aria-hidden="true" width="8" height="8"><circle cx="4" cy="4" r="2.5" className="fill-live" /></svg>after an accepted step
+            <svg aria-hidden="true" width="8" height="8">
+              <circle cx="4" cy="4" r="2.5" className="fill-live" />
+            </svg>
+            after an accepted step
           </span>
           <span className="flex items-center gap-1.5">
-            <svg aria-hidden="true" width="9" height="9"><circle cx="4.5" cy="4.5" r="3.5" fill="none" className="stroke-load" strokeWidth="1.75" /></svg>rejected
+            <svg aria-hidden="true" width="9" height="9">
+              <circle cx="4.5" cy="4.5" r="3.5" fill="none" className="stroke-load" strokeWidth="1.75" />
+            </svg>
+            rejected
           </span>
           <span className="flex items-center gap-1.5">
-            <svg aria-hidden="true" width="4" height="8"><path d="M2 0v8" className="stroke-soft" /></svg>stored, no step
+            <svg aria-hidden="true" width="4" height="8">
+              <path d="M2 0v8" className="stroke-soft" />
+            </svg>
+            stored, no step
           </span>
         </span>
       </figcaption>
@@ -161,12 +209,17 @@ export function ErrorChart({ entries, frozenNow, selected, onSelect }: ErrorChar
 
 function readout(entry: LogEntry, now: number): string {
   const { before, after } = entry.error!
-  const errors = after === null ? significant(before) : `${significant(before)} → ${significant(after)} (${change(before, after) || 'unchanged'})`
+  const errors =
+    after === null
+      ? significant(before)
+      : `${significant(before)} → ${significant(after)} (${change(before, after) || 'unchanged'})`
   return `sequence ${entry.sequence}: ${entry.verdict}, error ${errors}, revision ${entry.revision}, ${relative(Date.parse(entry.at), now)}`
 }
 
 function Uprights({ entries, x, axis }: { entries: LogEntry[]; x: (position: number) => number; axis: number }) {
-  const marks = entries.flatMap((entry) => (entry.entry === 'batch' ? [] : [{ entry, words: entry.entry === 'event' ? eventWords(entry) : commandWords(entry) }]))
+  const marks = entries.flatMap((entry) =>
+    entry.entry === 'batch' ? [] : [{ entry, words: entry.entry === 'event' ? eventWords(entry) : commandWords(entry) }],
+  )
   // Two rows for the words; what fits in neither keeps its upright and can be read in the log.
   const ends = [-Infinity, -Infinity]
   return marks.map(({ entry, words }) => {
@@ -175,7 +228,14 @@ function Uprights({ entries, x, axis }: { entries: LogEntry[]; x: (position: num
     if (row >= 0) ends[row] = px + words.length * 6.2
     return (
       <g key={entry.position}>
-        <line x1={px} x2={px} y1={row === 1 ? 26 : 12} y2={axis} className={entry.entry === 'event' ? 'stroke-soft' : 'stroke-stop'} strokeDasharray={entry.entry === 'event' ? '4 3' : undefined} />
+        <line
+          x1={px}
+          x2={px}
+          y1={row === 1 ? 26 : 12}
+          y2={axis}
+          className={entry.entry === 'event' ? 'stroke-soft' : 'stroke-stop'}
+          strokeDasharray={entry.entry === 'event' ? '4 3' : undefined}
+        />
         {row >= 0 && (
           <text x={px + 4} y={row === 1 ? 30 : 14} className={`text-11 ${entry.entry === 'event' ? 'fill-soft' : 'fill-stop'}`}>
             {words}
@@ -191,7 +251,12 @@ function Ends({ x, items }: { x: number; items: { y: number; text: string; class
   return apart.map((item, index) => {
     const crowded = index > 0 && item.y - apart[index - 1]!.y < 14
     return (
-      <text key={item.text} x={x} y={item.y + 4 + (crowded ? 14 - (item.y - apart[index - 1]!.y) : 0)} className={`text-12 ${item.className}`}>
+      <text
+        key={item.text}
+        x={x}
+        y={item.y + 4 + (crowded ? 14 - (item.y - apart[index - 1]!.y) : 0)}
+        className={`text-12 ${item.className}`}
+      >
         {item.text}
       </text>
     )

@@ -12,12 +12,22 @@ interface Row {
   codes: Code[]
 }
 
-const share = (value: number | undefined, of: string) => (value === undefined ? undefined : <span className="num">{percent(value, 0)} <span className="text-12 text-soft">{of}</span></span>)
+const share = (value: number | undefined, of: string) =>
+  value === undefined ? undefined : (
+    <span className="num">
+      {percent(value, 0)} <span className="text-12 text-soft">{of}</span>
+    </span>
+  )
 
 function guards(adaptation: Adaptation, newest: LogEntry | undefined): Row[] {
   const { guard } = adaptation
   return [
-    { name: 'Size of a step', bound: <Quantity value={guard.step_norm} />, newest: <Quantity value={newest?.step_norm} />, codes: ['step_norm', 'not_finite'] },
+    {
+      name: 'Size of a step',
+      bound: <Quantity value={guard.step_norm} />,
+      newest: <Quantity value={newest?.step_norm} />,
+      codes: ['step_norm', 'not_finite'],
+    },
     { name: 'Torque change by a step', bound: share(guard.torque_change, 'of limit'), codes: ['torque_change'] },
     { name: 'Distance from base', bound: share(guard.drift, 'of limit'), codes: ['drift'] },
     { name: 'Worse than base, unseen data', bound: share(guard.tolerance, ''), codes: ['worse_than_base', 'no_help'] },
@@ -26,7 +36,11 @@ function guards(adaptation: Adaptation, newest: LogEntry | undefined): Row[] {
     {
       name: 'Rejections in a row',
       bound: <Quantity value={guard.rejections_before_freeze} />,
-      newest: <span className={`num ${adaptation.rejections_in_a_row > 0 ? 'font-semibold text-load' : ''}`}>{adaptation.rejections_in_a_row}</span>,
+      newest: (
+        <span className={`num ${adaptation.rejections_in_a_row > 0 ? 'font-semibold text-load' : ''}`}>
+          {adaptation.rejections_in_a_row}
+        </span>
+      ),
       codes: [],
     },
   ]
@@ -36,8 +50,13 @@ function guards(adaptation: Adaptation, newest: LogEntry | undefined): Row[] {
 export function GuardPanel({ adaptation, history }: { adaptation: Adaptation; history: LogEntry[] }) {
   const newest = history.at(-1)
   const count = (codes: Code[]) => history.filter((entry) => entry.reasons?.some((reason) => codes.includes(reason.code))).length
-  const found = (codes: Code[]) => history.findLast((entry) => entry.reasons?.some((reason) => codes.includes(reason.code)))?.reasons?.find((reason) => codes.includes(reason.code))
-  const tally = (['accepted', 'rejected', 'stored'] as const).map((verdict) => [verdict, history.filter((entry) => entry.verdict === verdict).length] as const)
+  const found = (codes: Code[]) =>
+    history
+      .findLast((entry) => entry.reasons?.some((reason) => codes.includes(reason.code)))
+      ?.reasons?.find((reason) => codes.includes(reason.code))
+  const tally = (['accepted', 'rejected', 'stored'] as const).map(
+    (verdict) => [verdict, history.filter((entry) => entry.verdict === verdict).length] as const,
+  )
   const belowNoise = count(['below_noise'])
   const cell = 'py-1.5 pr-3 align-top last:pr-0'
   return (
@@ -46,10 +65,18 @@ export function GuardPanel({ adaptation, history }: { adaptation: Adaptation; hi
       <table aria-label="Guards" className="mt-3 w-full border-collapse">
         <thead>
           <tr className="border-b border-edge text-left text-12 text-soft">
-            <th scope="col" className={`${cell} font-normal`}>Guard</th>
-            <th scope="col" className={`${cell} text-right font-normal`}>Bound</th>
-            <th scope="col" className={`${cell} text-right font-normal`}>Newest</th>
-            <th scope="col" className={`${cell} text-right font-normal`}>Stopped</th>
+            <th scope="col" className={`${cell} font-normal`}>
+              Guard
+            </th>
+            <th scope="col" className={`${cell} text-right font-normal`}>
+              Bound
+            </th>
+            <th scope="col" className={`${cell} text-right font-normal`}>
+              Newest
+            </th>
+            <th scope="col" className={`${cell} text-right font-normal`}>
+              Stopped
+            </th>
           </tr>
         </thead>
         <tbody>
@@ -63,15 +90,21 @@ export function GuardPanel({ adaptation, history }: { adaptation: Adaptation; hi
                   {last && <span className="block text-12 text-soft">last: {last.detail}</span>}
                 </th>
                 <td className={`${cell} text-right`}>{row.bound ?? '–'}</td>
-                <td className={`${cell} text-right`}>{row.newest ?? (last?.found === undefined ? <span className="text-soft">–</span> : <Quantity value={last.found} />)}</td>
-                <td className={`${cell} num text-right ${times > 0 ? 'font-semibold text-load' : 'text-soft'}`}>{row.codes.length === 0 ? '' : times}</td>
+                <td className={`${cell} text-right`}>
+                  {row.newest ??
+                    (last?.found === undefined ? <span className="text-soft">–</span> : <Quantity value={last.found} />)}
+                </td>
+                <td className={`${cell} num text-right ${times > 0 ? 'font-semibold text-load' : 'text-soft'}`}>
+                  {row.codes.length === 0 ? '' : times}
+                </td>
               </tr>
             )
           })}
         </tbody>
       </table>
       <p className="mt-2 text-12 text-soft">
-        Over the newest {counted(history.length, 'batch', 'batches')}.{belowNoise > 0 && ` ${counted(belowNoise, 'batch was', 'batches were')} below the arm’s own noise: nothing to learn.`}
+        Over the newest {counted(history.length, 'batch', 'batches')}.
+        {belowNoise > 0 && ` ${counted(belowNoise, 'batch was', 'batches were')} below the arm’s own noise: nothing to learn.`}
         {adaptation.update.rate !== undefined && ` Step size ${significant(adaptation.update.rate)}.`}
       </p>
     </div>
@@ -85,7 +118,13 @@ function Tally({ parts }: { parts: (readonly ['accepted' | 'rejected' | 'stored'
   return (
     <div>
       <div aria-hidden="true" className="flex h-2 gap-px bg-line">
-        {total > 0 && parts.map(([verdict, count]) => count > 0 && <span key={verdict} className={`${fills[verdict]} h-full`} style={{ width: `${(count / total) * 100}%` }} />)}
+        {total > 0 &&
+          parts.map(
+            ([verdict, count]) =>
+              count > 0 && (
+                <span key={verdict} className={`${fills[verdict]} h-full`} style={{ width: `${(count / total) * 100}%` }} />
+              ),
+          )}
       </div>
       <p className="mt-1.5 flex flex-wrap gap-x-4">
         {parts.map(([verdict, count]) => (

@@ -54,4 +54,8 @@ export function lossName(loss: Adaptation['loss']): string {
   return typeof loss === 'string' ? loss : `${loss.name} ${loss.version}`
 }
 
-export const schemeNames: Record<Adaptation['scheme'], string> = { all: 'all layers', last_layer: 'last layer', bias: 'bias per joint' }
+export const schemeNames: Record<Adaptation['scheme'], string> = {
+  all: 'all layers',
+  last_layer: 'last layer',
+  bias: 'bias per joint',
+}

@@ -23,14 +23,30 @@ export function JointTable({ joints, rows, row, batch, history }: JointTableProp
     <table aria-label="Joints" className="w-full border-collapse">
       <thead>
         <tr className="border-b border-edge">
-          <th scope="col" className={head}>Joint</th>
-          <th scope="col" className={`${head} w-1/3 max-sm:w-1/2`}>Load</th>
-          <th scope="col" className={`${head} text-right max-md:hidden`}>Predicted</th>
-          <th scope="col" className={`${head} text-right max-md:hidden`}>Measured</th>
-          <th scope="col" className={`${head} text-right`}>RMSE before, after step</th>
-          <th scope="col" className={`${head} max-lg:hidden`}>Recent</th>
-          <th scope="col" className={`${head} text-right max-sm:hidden`}>Weight</th>
-          <th scope="col" className={`${head} max-xl:hidden`}>Recent</th>
+          <th scope="col" className={head}>
+            Joint
+          </th>
+          <th scope="col" className={`${head} w-1/3 max-sm:w-1/2`}>
+            Load
+          </th>
+          <th scope="col" className={`${head} text-right max-md:hidden`}>
+            Predicted
+          </th>
+          <th scope="col" className={`${head} text-right max-md:hidden`}>
+            Measured
+          </th>
+          <th scope="col" className={`${head} text-right`}>
+            RMSE before, after step
+          </th>
+          <th scope="col" className={`${head} max-lg:hidden`}>
+            Recent
+          </th>
+          <th scope="col" className={`${head} text-right max-sm:hidden`}>
+            Weight
+          </th>
+          <th scope="col" className={`${head} max-xl:hidden`}>
+            Recent
+          </th>
         </tr>
       </thead>
       <tbody>
@@ -41,30 +57,50 @@ export function JointTable({ joints, rows, row, batch, history }: JointTableProp
           const error = batch?.error?.per_joint[index]
           return (
             <tr key={joint} className="border-b border-line">
-              <th scope="row" className={`${cell} text-left font-semibold break-words`}>{joint}</th>
+              <th scope="row" className={`${cell} text-left font-semibold break-words`}>
+                {joint}
+              </th>
               <td className={cell}>
                 {rows ? (
-                  <LoadBar load={{ joint, unit, limit: rows.torque_limits[index]!, predicted, measured }} scale={index === joints.length - 1} />
+                  <LoadBar
+                    load={{ joint, unit, limit: rows.torque_limits[index]!, predicted, measured }}
+                    scale={index === joints.length - 1}
+                  />
                 ) : (
                   <span className="block h-4 border-b border-line" />
                 )}
               </td>
-              <td className={`${cell} text-right max-md:hidden`}><Quantity value={predicted} unit={unit} /></td>
-              <td className={`${cell} text-right max-md:hidden`}><Quantity value={measured} unit={unit} /></td>
+              <td className={`${cell} text-right max-md:hidden`}>
+                <Quantity value={predicted} unit={unit} />
+              </td>
+              <td className={`${cell} text-right max-md:hidden`}>
+                <Quantity value={measured} unit={unit} />
+              </td>
               <td className={`${cell} text-right`}>
                 <Quantity value={error?.before} unit={unit} />
                 {error?.after != null && (
                   <span className="block text-12 text-soft">
-                    <Quantity value={error.after} unit={unit} /> <span className="num">({change(error.before, error.after)})</span>
+                    <Quantity value={error.after} unit={unit} />{' '}
+                    <span className="num">({change(error.before, error.after)})</span>
                   </span>
                 )}
               </td>
               <td className={`${cell} max-lg:hidden`}>
-                <Sparkline width={88} values={recent.flatMap((entry) => entry.error?.per_joint[index]?.before ?? [])} label={`Error of ${joint} over the newest ${recent.length} batches`} />
+                <Sparkline
+                  width={88}
+                  values={recent.flatMap((entry) => entry.error?.per_joint[index]?.before ?? [])}
+                  label={`Error of ${joint} over the newest ${recent.length} batches`}
+                />
               </td>
-              <td className={`${cell} text-right max-sm:hidden`}><Quantity value={batch?.weights?.[index]} /></td>
+              <td className={`${cell} text-right max-sm:hidden`}>
+                <Quantity value={batch?.weights?.[index]} />
+              </td>
               <td className={`${cell} max-xl:hidden`}>
-                <Sparkline width={72} values={recent.flatMap((entry) => entry.weights?.[index] ?? [])} label={`Loss weight of ${joint} over the newest ${recent.length} batches`} />
+                <Sparkline
+                  width={72}
+                  values={recent.flatMap((entry) => entry.weights?.[index] ?? [])}
+                  label={`Loss weight of ${joint} over the newest ${recent.length} batches`}
+                />
               </td>
             </tr>
           )

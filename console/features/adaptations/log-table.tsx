@@ -27,8 +27,24 @@ export function LogSection({ id, ended }: { id: string; ended: boolean }) {
       title="Log"
       actions={
         <>
-          <Filter label="Entry" value={entry} onChange={(value) => url.set({ entry: value, cursor: undefined, ...(value !== 'batch' && value !== undefined && { verdict: undefined }) })} options={['batch', 'event', 'command'].map((value) => ({ value, label: value }))} />
-          <Filter label="Verdict" value={verdict} onChange={(value) => url.set({ verdict: value, cursor: undefined })} options={['accepted', 'rejected', 'stored'].map((value) => ({ value, label: value }))} />
+          <Filter
+            label="Entry"
+            value={entry}
+            onChange={(value) =>
+              url.set({
+                entry: value,
+                cursor: undefined,
+                ...(value !== 'batch' && value !== undefined && { verdict: undefined }),
+              })
+            }
+            options={['batch', 'event', 'command'].map((value) => ({ value, label: value }))}
+          />
+          <Filter
+            label="Verdict"
+            value={verdict}
+            onChange={(value) => url.set({ verdict: value, cursor: undefined })}
+            options={['accepted', 'rejected', 'stored'].map((value) => ({ value, label: value }))}
+          />
         </>
       }
     >
@@ -43,7 +59,10 @@ export function LogSection({ id, ended }: { id: string; ended: boolean }) {
       ) : (
         <ol className="border-t border-edge" aria-label="Log entries">
           {log.data.items.map((item) => (
-            <li key={item.position} className="grid grid-cols-[4.5rem_8rem_1fr_auto] items-baseline gap-x-4 border-b border-line py-2 max-sm:grid-cols-[3rem_1fr_auto]">
+            <li
+              key={item.position}
+              className="grid grid-cols-[4.5rem_8rem_1fr_auto] items-baseline gap-x-4 border-b border-line py-2 max-sm:grid-cols-[3rem_1fr_auto]"
+            >
               <span className="num text-soft" title={`position ${item.position} in the log`}>
                 {item.sequence ?? '·'}
               </span>
@@ -74,8 +93,17 @@ export function LogSection({ id, ended }: { id: string; ended: boolean }) {
 
 function kindOf(item: LogEntry) {
   if (item.verdict) return <VerdictStamp verdict={item.verdict} />
-  if (item.entry === 'event') return <Stamp tone="ink" mark="half">{eventWords(item)}</Stamp>
-  return <Stamp tone="stop" mark="pause">{commandWords(item)}</Stamp>
+  if (item.entry === 'event')
+    return (
+      <Stamp tone="ink" mark="half">
+        {eventWords(item)}
+      </Stamp>
+    )
+  return (
+    <Stamp tone="stop" mark="pause">
+      {commandWords(item)}
+    </Stamp>
+  )
 }
 
 function detailOf(id: string, item: LogEntry) {
@@ -107,7 +135,8 @@ function detailOf(id: string, item: LogEntry) {
       </span>
     )
   }
-  if (item.entry === 'event') return <span className="text-12 text-soft">{item.time != null && `at ${robotTime(item.time)} s, robot’s clock`}</span>
+  if (item.entry === 'event')
+    return <span className="text-12 text-soft">{item.time != null && `at ${robotTime(item.time)} s, robot’s clock`}</span>
   return (
     <span>
       {item.reason} <span className="text-12 text-soft">by {item.by === 'guard' ? 'its guards' : item.by}</span>

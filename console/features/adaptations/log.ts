@@ -1,8 +1,18 @@
 import { significant } from '../../lib/numbers.ts'
 import type { LogEntry } from './adaptations.ts'
 
-const events: Record<NonNullable<LogEntry['kind']>, string> = { gripped: 'gripped', released: 'released', tool_changed: 'tool changed', restarted: 'restarted' }
-const commands: Record<NonNullable<LogEntry['command']>, string> = { freeze: 'frozen', resume: 'resumed', reset: 'reset', end: 'ended' }
+const events: Record<NonNullable<LogEntry['kind']>, string> = {
+  gripped: 'gripped',
+  released: 'released',
+  tool_changed: 'tool changed',
+  restarted: 'restarted',
+}
+const commands: Record<NonNullable<LogEntry['command']>, string> = {
+  freeze: 'frozen',
+  resume: 'resumed',
+  reset: 'reset',
+  end: 'ended',
+}
 
 export function eventWords(entry: LogEntry): string {
   const word = entry.kind === undefined ? 'event' : events[entry.kind]

@@ -34,11 +34,21 @@ function RobotRow({ adaptation, health }: Robot) {
         <TextLink to={paths.adaptation(adaptation.id)} className="font-semibold break-words">
           {adaptation.robot}
         </TextLink>
-        <p className="truncate text-12 text-soft">{[adaptation.context.tool, adaptation.context.payload_class].filter(Boolean).join(', ') || 'no context stated'}</p>
+        <p className="truncate text-12 text-soft">
+          {[adaptation.context.tool, adaptation.context.payload_class].filter(Boolean).join(', ') || 'no context stated'}
+        </p>
       </div>
       <div className="max-sm:text-right">
         <HealthStamp health={health} />
-        <p className="text-12 text-soft">{last === null ? 'no batch yet' : <>heard <TimeAgo at={last.at} /></>}</p>
+        <p className="text-12 text-soft">
+          {last === null ? (
+            'no batch yet'
+          ) : (
+            <>
+              heard <TimeAgo at={last.at} />
+            </>
+          )}
+        </p>
       </div>
       <Trend adaptation={adaptation} />
       <p className="max-lg:hidden">
@@ -52,7 +62,9 @@ function RobotRow({ adaptation, health }: Robot) {
         {last?.error && <span className="block text-12 text-soft">error before, after the newest step</span>}
       </p>
       <p className="text-right text-12 text-soft max-lg:hidden">
-        <span className="num">{adaptation.model} {adaptation.version}</span>
+        <span className="num">
+          {adaptation.model} {adaptation.version}
+        </span>
         <span className="block num">revision {adaptation.revision}</span>
       </p>
     </li>

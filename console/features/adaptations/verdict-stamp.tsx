@@ -4,10 +4,22 @@ import type { Verdict } from './adaptations.ts'
 export function VerdictStamp({ verdict }: { verdict: Verdict }) {
   switch (verdict) {
     case 'accepted':
-      return <Stamp tone="live" mark="dot">accepted</Stamp>
+      return (
+        <Stamp tone="live" mark="dot">
+          accepted
+        </Stamp>
+      )
     case 'rejected':
-      return <Stamp tone="load" mark="ring">rejected</Stamp>
+      return (
+        <Stamp tone="load" mark="ring">
+          rejected
+        </Stamp>
+      )
     case 'stored':
-      return <Stamp tone="soft" mark="bar">stored</Stamp>
+      return (
+        <Stamp tone="soft" mark="bar">
+          stored
+        </Stamp>
+      )
   }
 }

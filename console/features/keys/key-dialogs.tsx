@@ -25,7 +25,12 @@ export function CreateKeyDialog({ onClose }: { onClose: () => void }) {
   const nameMissing = name.trim() === '' ? 'Name it after the program or cell that will use it.' : undefined
   const scopesMissing = chosen.length === 0
   return (
-    <Dialog open onClose={onClose} title="Create an API key" description="A key lets a program act for the team, within its scopes, until it expires or is revoked.">
+    <Dialog
+      open
+      onClose={onClose}
+      title="Create an API key"
+      description="A key lets a program act for the team, within its scopes, until it expires or is revoked."
+    >
       <form
         className="flex flex-col gap-4"
         onSubmit={(event) => {
@@ -33,16 +38,34 @@ export function CreateKeyDialog({ onClose }: { onClose: () => void }) {
           setTried(true)
           if (nameMissing || scopesMissing || create.isPending) return
           // A minute less than asked for, so that two years by this browser's clock are not more than two years by the server's.
-          create.mutate({ name: name.trim(), scopes: chosen, expires_at: new Date(Date.now() + lasts * 86_400_000 - 60_000).toISOString() })
+          create.mutate({
+            name: name.trim(),
+            scopes: chosen,
+            expires_at: new Date(Date.now() + lasts * 86_400_000 - 60_000).toISOString(),
+          })
         }}
       >
-        <TextField label="Name" value={name} maxLength={120} autoFocus onChange={(event) => setName(event.target.value)} error={faultAt(create.error, '/name') ?? (tried ? nameMissing : undefined)} />
+        <TextField
+          label="Name"
+          value={name}
+          maxLength={120}
+          autoFocus
+          onChange={(event) => setName(event.target.value)}
+          error={faultAt(create.error, '/name') ?? (tried ? nameMissing : undefined)}
+        />
         <fieldset aria-describedby={tried && scopesMissing ? `${group}-error` : undefined}>
           <legend className="mb-1 font-semibold">Scopes</legend>
           <div className="flex flex-col">
             {scopes.map(({ scope, allows }) => (
               <label key={scope} className="flex min-h-9 items-start gap-3 border-t border-line py-1.5 first:border-t-0">
-                <input type="checkbox" className="mt-0.5 size-4" checked={chosen.includes(scope)} onChange={(event) => setChosen(event.target.checked ? [...chosen, scope] : chosen.filter((each) => each !== scope))} />
+                <input
+                  type="checkbox"
+                  className="mt-0.5 size-4"
+                  checked={chosen.includes(scope)}
+                  onChange={(event) =>
+                    setChosen(event.target.checked ? [...chosen, scope] : chosen.filter((each) => each !== scope))
+                  }
+                />
                 <span className="grid grow grid-cols-[5rem_1fr] gap-2">
                   <span className="num font-semibold">{scope}</span>
                   <span className="text-soft">{allows}</span>
@@ -57,7 +80,13 @@ export function CreateKeyDialog({ onClose }: { onClose: () => void }) {
           )}
           <p className="mt-1 text-12 text-soft">No key resumes a frozen adaptation, sees people, or makes keys.</p>
         </fieldset>
-        <SelectField label="Expires after" value={lasts} onChange={(event) => setLasts(Number(event.target.value))} hint="Rotate it before that; the program goes on with the new secret." error={faultAt(create.error, '/expires_at')}>
+        <SelectField
+          label="Expires after"
+          value={lasts}
+          onChange={(event) => setLasts(Number(event.target.value))}
+          hint="Rotate it before that; the program goes on with the new secret."
+          error={faultAt(create.error, '/expires_at')}
+        >
           {days.map((count) => (
             <option key={count} value={count}>
               {count % 365 === 0 ? (count === 365 ? '1 year' : `${count / 365} years`) : `${count} days`}
@@ -80,9 +109,20 @@ export function CreateKeyDialog({ onClose }: { onClose: () => void }) {
 function SecretDialog({ made, title, onClose }: { made: KeyWithSecret; title: string; onClose: () => void }) {
   const [stored, setStored] = useState(false)
   return (
-    <Dialog open held onClose={onClose} title={title} description="This is the only time the secret is shown. The service keeps a checksum of it, not the secret.">
+    <Dialog
+      open
+      held
+      onClose={onClose}
+      title={title}
+      description="This is the only time the secret is shown. The service keeps a checksum of it, not the secret."
+    >
       <div className="flex flex-col gap-2">
-        <code className="block border border-edge bg-sunken p-3 break-all select-all" data-testid="secret" tabIndex={0} aria-label="Secret">
+        <code
+          className="block border border-edge bg-sunken p-3 break-all select-all"
+          data-testid="secret"
+          tabIndex={0}
+          aria-label="Secret"
+        >
           {made.secret}
         </code>
         <div>
@@ -91,10 +131,15 @@ function SecretDialog({ made, title, onClose }: { made: KeyWithSecret; title: st
       </div>
       {made.key.overlap_until && <p>The former secret goes on working until {exact(made.key.overlap_until)}.</p>}
       <label className="flex min-h-9 items-center gap-3">
-        <input type="checkbox" className="size-4" checked={stored} onChange={(event) => setStored(event.target.checked)} />I have stored it where the program finds it
+        <input type="checkbox" className="size-4" checked={stored} onChange={(event) => setStored(event.target.checked)} />I have
+        stored it where the program finds it
       </label>
       <DialogActions>
-        <Button look="primary" onClick={onClose} blocked={stored ? undefined : 'Store the secret first; it can’t be shown again.'}>
+        <Button
+          look="primary"
+          onClick={onClose}
+          blocked={stored ? undefined : 'Store the secret first; it can’t be shown again.'}
+        >
           Done
         </Button>
       </DialogActions>
@@ -116,7 +161,12 @@ export function RotateKeyDialog({ of, onClose }: { of: Key; onClose: () => void 
   const [overlap, setOverlap] = useState(86_400)
   if (rotate.data) return <SecretDialog made={rotate.data} title={`Key “${of.name}” has a new secret`} onClose={onClose} />
   return (
-    <Dialog open onClose={onClose} title={`Rotate key “${of.name}”`} description="It gets a new secret now, shown once. Scopes and expiry stay. During the overlap both secrets work, so that programs can be moved over without a pause.">
+    <Dialog
+      open
+      onClose={onClose}
+      title={`Rotate key “${of.name}”`}
+      description="It gets a new secret now, shown once. Scopes and expiry stay. During the overlap both secrets work, so that programs can be moved over without a pause."
+    >
       <form
         className="flex flex-col gap-4"
         onSubmit={(event) => {

@@ -11,10 +11,29 @@ const soonMs = 14 * 86_400_000
 
 export function KeyStamp({ of }: { of: Key }) {
   const now = useNow()
-  if (of.state === 'revoked') return <Stamp tone="soft" mark="cross">revoked</Stamp>
-  if (of.state === 'expired') return <Stamp tone="soft" mark="bar">expired</Stamp>
-  if (Date.parse(of.expires_at) - now < soonMs) return <Stamp tone="load" mark="diamond">expires soon</Stamp>
-  return <Stamp tone="live" mark="dot">active</Stamp>
+  if (of.state === 'revoked')
+    return (
+      <Stamp tone="soft" mark="cross">
+        revoked
+      </Stamp>
+    )
+  if (of.state === 'expired')
+    return (
+      <Stamp tone="soft" mark="bar">
+        expired
+      </Stamp>
+    )
+  if (Date.parse(of.expires_at) - now < soonMs)
+    return (
+      <Stamp tone="load" mark="diamond">
+        expires soon
+      </Stamp>
+    )
+  return (
+    <Stamp tone="live" mark="dot">
+      active
+    </Stamp>
+  )
 }
 
 export function KeyList({ keys, complete }: { keys: Key[]; complete: boolean }) {
@@ -50,9 +69,24 @@ export function KeyList({ keys, complete }: { keys: Key[]; complete: boolean }) 
       ),
     },
     { id: 'scopes', title: 'Scopes', cell: (key) => <span className="num text-12">{key.scopes.join(', ')}</span> },
-    { id: 'used', title: 'Last used', by: (key) => key.last_used_at, cell: (key) => (key.last_used_at === null ? <span className="text-soft">never</span> : <TimeAgo at={key.last_used_at} />) },
+    {
+      id: 'used',
+      title: 'Last used',
+      by: (key) => key.last_used_at,
+      cell: (key) => (key.last_used_at === null ? <span className="text-soft">never</span> : <TimeAgo at={key.last_used_at} />),
+    },
     { id: 'expires', title: 'Expires', by: (key) => key.expires_at, cell: (key) => <TimeAgo at={key.expires_at} /> },
-    { id: 'made', title: 'Made', minor: true, by: (key) => key.created_at, cell: (key) => <>{key.created_by}, <TimeAgo at={key.created_at} /></> },
+    {
+      id: 'made',
+      title: 'Made',
+      minor: true,
+      by: (key) => key.created_at,
+      cell: (key) => (
+        <>
+          {key.created_by}, <TimeAgo at={key.created_at} />
+        </>
+      ),
+    },
     {
       id: 'acts',
       title: '',

@@ -20,7 +20,11 @@ export const createKeyOptions = (client: QueryClient) =>
   mutationOptions({ mutationFn: (body: Schemas['NewKey']) => heftwise.keys.create(body), gcTime: 0, ...refreshed(client) })
 
 export const rotateKeyOptions = (client: QueryClient, id: string) =>
-  mutationOptions({ mutationFn: (overlapSeconds: number) => heftwise.keys.rotate(id, { overlap_seconds: overlapSeconds }), gcTime: 0, ...refreshed(client) })
+  mutationOptions({
+    mutationFn: (overlapSeconds: number) => heftwise.keys.rotate(id, { overlap_seconds: overlapSeconds }),
+    gcTime: 0,
+    ...refreshed(client),
+  })
 
 export const revokeKeyOptions = (client: QueryClient, id: string) =>
   mutationOptions({ mutationFn: (reason: string) => heftwise.keys.revoke(id, reason), ...refreshed(client) })

@@ -42,13 +42,15 @@ const refreshed = (client: QueryClient) => ({
 
 export const releaseOptions = (client: QueryClient, name: string) =>
   mutationOptions({
-    mutationFn: ({ version, reason, etag }: { version: number; reason: string; etag: string }) => heftwise.models.release(name, { version, reason }, etag),
+    mutationFn: ({ version, reason, etag }: { version: number; reason: string; etag: string }) =>
+      heftwise.models.release(name, { version, reason }, etag),
     ...refreshed(client),
   })
 
 export const rollBackOptions = (client: QueryClient, name: string) =>
   mutationOptions({
-    mutationFn: ({ to, reason, etag }: { to: number; reason: string; etag: string }) => heftwise.models.rollBack(name, { reason, to }, etag),
+    mutationFn: ({ to, reason, etag }: { to: number; reason: string; etag: string }) =>
+      heftwise.models.rollBack(name, { reason, to }, etag),
     ...refreshed(client),
   })
 
@@ -56,7 +58,8 @@ export const rollBackOptions = (client: QueryClient, name: string) =>
 export function formerVersions(releases: Release[], live: number | null): number[] {
   const versions: number[] = []
   for (const release of releases) {
-    for (const version of [release.version, release.previous_version]) if (version !== null && version !== live && !versions.includes(version)) versions.push(version)
+    for (const version of [release.version, release.previous_version])
+      if (version !== null && version !== live && !versions.includes(version)) versions.push(version)
   }
   return versions
 }

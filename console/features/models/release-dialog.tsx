@@ -9,7 +9,8 @@ import { Caution, Skeleton } from '../../components/states.tsx'
 import { TimeAgo } from '../../components/time-ago.tsx'
 import { formerVersions, releaseOptions, releasesOptions, rollBackOptions, type ModelWithEtag, type Release } from './models.ts'
 
-const caution = 'Predicted torques change at once on every controller that names no version. Commission at reduced speed with nobody in reach; the controller’s own limits stay in charge.'
+const caution =
+  'Predicted torques change at once on every controller that names no version. Commission at reduced speed with nobody in reach; the controller’s own limits stay in charge.'
 
 function before(model: ModelWithEtag): string {
   return model.live_version === null ? 'nothing is live yet' : `version ${model.live_version}`
@@ -20,7 +21,15 @@ function consequence(model: ModelWithEtag, version: number): string {
 }
 
 /** The decision is made on the model as it was when the dialog opened; what has changed since is shown before it can be made again. */
-export function ReleaseDialog({ model: current, version, onClose }: { model: ModelWithEtag; version: number; onClose: () => void }) {
+export function ReleaseDialog({
+  model: current,
+  version,
+  onClose,
+}: {
+  model: ModelWithEtag
+  version: number
+  onClose: () => void
+}) {
   const client = useQueryClient()
   const say = useNotice()
   const [decidedOn, setDecidedOn] = useState(current)
@@ -62,7 +71,15 @@ export function ReleaseDialog({ model: current, version, onClose }: { model: Mod
   )
 }
 
-export function RollBackDialog({ model: current, releases, onClose }: { model: ModelWithEtag; releases: Release[]; onClose: () => void }) {
+export function RollBackDialog({
+  model: current,
+  releases,
+  onClose,
+}: {
+  model: ModelWithEtag
+  releases: Release[]
+  onClose: () => void
+}) {
   const client = useQueryClient()
   const say = useNotice()
   const [decidedOn, setDecidedOn] = useState(current)
@@ -94,7 +111,12 @@ export function RollBackDialog({ model: current, releases, onClose }: { model: M
         )
       }
     >
-      <SelectField label="Back to" value={to} onChange={(event) => setChosen(Number(event.target.value))} hint="Only versions that have been live; the one before stands first.">
+      <SelectField
+        label="Back to"
+        value={to}
+        onChange={(event) => setChosen(Number(event.target.value))}
+        hint="Only versions that have been live; the one before stands first."
+      >
         {former.map((version) => (
           <option key={version} value={version}>
             version {version}
@@ -126,7 +148,8 @@ function Changed({ model, onLookedAt }: { model: ModelWithEtag; onLookedAt: () =
         <Skeleton className="mt-2 h-5 w-64" />
       ) : (
         <p>
-          {latest.by} {latest.kind === 'release' ? 'released' : 'rolled back to'} version {latest.version} <TimeAgo at={latest.at} />: “{latest.reason}” Live now: {before(model)}.
+          {latest.by} {latest.kind === 'release' ? 'released' : 'rolled back to'} version {latest.version}{' '}
+          <TimeAgo at={latest.at} />: “{latest.reason}” Live now: {before(model)}.
         </p>
       )}
       <Button className="mt-2" onClick={onLookedAt} blocked={releases.isFetching ? 'Reading what has changed.' : undefined}>

@@ -12,13 +12,33 @@ export function VersionDetails({ version, live }: { version: Version; live: Vers
   const { metrics } = version
   const facts: [string, ReactNode][] = [
     ['Origin', <Origin key="origin" version={version} />],
-    ['Made', <span key="made">{version.created_by}, <TimeAgo at={version.created_at} /></span>],
-    ['Network', <span key="network" className="num">{version.network.sizes.join('–')}, {version.network.activation}</span>],
-    ['Checksum', <code key="checksum" className="text-12 break-all">{version.checksum}</code>],
+    [
+      'Made',
+      <span key="made">
+        {version.created_by}, <TimeAgo at={version.created_at} />
+      </span>,
+    ],
+    [
+      'Network',
+      <span key="network" className="num">
+        {version.network.sizes.join('–')}, {version.network.activation}
+      </span>,
+    ],
+    [
+      'Checksum',
+      <code key="checksum" className="text-12 break-all">
+        {version.checksum}
+      </code>,
+    ],
   ]
   if (version.origin.reason) facts.splice(1, 0, ['Reason', version.origin.reason])
-  if (version.origin.recordings) facts.push(['Fitted on', <Recordings key="recordings" names={version.origin.recordings.map((recording) => recording.name)} />])
-  if (metrics) facts.push(['Measured on', <Recordings key="measured" names={metrics.recordings.map((recording) => recording.name)} />])
+  if (version.origin.recordings)
+    facts.push([
+      'Fitted on',
+      <Recordings key="recordings" names={version.origin.recordings.map((recording) => recording.name)} />,
+    ])
+  if (metrics)
+    facts.push(['Measured on', <Recordings key="measured" names={metrics.recordings.map((recording) => recording.name)} />])
   return (
     <div className="grid gap-8 lg:grid-cols-[3fr_2fr]">
       <div>
@@ -29,7 +49,8 @@ export function VersionDetails({ version, live }: { version: Version; live: Vers
               {against?.metrics && (
                 <span className="text-soft">
                   {' '}
-                  live version {against.version}: <span className="num">{significant(against.metrics.error)}</span>, {change(against.metrics.error, metrics.error)}
+                  live version {against.version}: <span className="num">{significant(against.metrics.error)}</span>,{' '}
+                  {change(against.metrics.error, metrics.error)}
                 </span>
               )}
             </p>
@@ -58,12 +79,20 @@ function JointErrors({ version, against }: { version: Version; against: Version 
     <table aria-label="Error per joint" className="w-full border-collapse">
       <thead>
         <tr className="border-b border-edge">
-          <th scope="col" className={head}>Joint</th>
+          <th scope="col" className={head}>
+            Joint
+          </th>
           <th scope="col" className={`${head} w-1/2`}>
             {against ? `RMSE; the upright mark is version ${against.version}` : 'RMSE'}
           </th>
-          <th scope="col" className={`${head} text-right`}>RMSE</th>
-          {against && <th scope="col" className={`${head} text-right`}>Change</th>}
+          <th scope="col" className={`${head} text-right`}>
+            RMSE
+          </th>
+          {against && (
+            <th scope="col" className={`${head} text-right`}>
+              Change
+            </th>
+          )}
         </tr>
       </thead>
       <tbody>
@@ -71,16 +100,27 @@ function JointErrors({ version, against }: { version: Version; against: Version 
           const before = other.get(metric.joint)
           return (
             <tr key={metric.joint} className="border-b border-line">
-              <th scope="row" className="py-2 pr-4 text-left">{metric.joint}</th>
+              <th scope="row" className="py-2 pr-4 text-left">
+                {metric.joint}
+              </th>
               <td className="py-2 pr-4">
                 <div aria-hidden="true" className="relative h-4">
                   <span className="absolute inset-x-0 top-1/2 h-px bg-line" />
-                  <span className="absolute top-1/2 left-0 h-2 -translate-y-1/2 bg-edge" style={{ width: `${(metric.rmse / most) * 100}%` }} />
-                  {before !== undefined && <span className="absolute top-0 h-4 w-0.5 bg-ink" style={{ left: `calc(${(before / most) * 100}% - 1px)` }} />}
+                  <span
+                    className="absolute top-1/2 left-0 h-2 -translate-y-1/2 bg-edge"
+                    style={{ width: `${(metric.rmse / most) * 100}%` }}
+                  />
+                  {before !== undefined && (
+                    <span className="absolute top-0 h-4 w-0.5 bg-ink" style={{ left: `calc(${(before / most) * 100}% - 1px)` }} />
+                  )}
                 </div>
               </td>
-              <td className="py-2 text-right"><Quantity value={metric.rmse} unit={metric.unit} /></td>
-              {against && <td className="num py-2 pl-4 text-right">{before === undefined ? '–' : change(before, metric.rmse)}</td>}
+              <td className="py-2 text-right">
+                <Quantity value={metric.rmse} unit={metric.unit} />
+              </td>
+              {against && (
+                <td className="num py-2 pl-4 text-right">{before === undefined ? '–' : change(before, metric.rmse)}</td>
+              )}
             </tr>
           )
         })}

@@ -7,15 +7,34 @@ import { paths } from '../../lib/paths.ts'
 import type { Model, Version } from './models.ts'
 
 export function VersionStamp({ model, version }: { model: Model; version: Version }) {
-  if (model.live_version === version.version) return <Stamp tone="live" mark="dot">live</Stamp>
-  return version.first_released_at === null ? <Stamp tone="soft" mark="ring">not released</Stamp> : <Stamp tone="soft" mark="bar">was live</Stamp>
+  if (model.live_version === version.version)
+    return (
+      <Stamp tone="live" mark="dot">
+        live
+      </Stamp>
+    )
+  return version.first_released_at === null ? (
+    <Stamp tone="soft" mark="ring">
+      not released
+    </Stamp>
+  ) : (
+    <Stamp tone="soft" mark="bar">
+      was live
+    </Stamp>
+  )
 }
 
 export function Origin({ version }: { version: Version }) {
   const { origin } = version
   switch (origin.kind) {
     case 'fitted':
-      return origin.job === undefined ? <>fitted</> : <>fitted by <TextLink to={paths.job(origin.job)}>a job</TextLink></>
+      return origin.job === undefined ? (
+        <>fitted</>
+      ) : (
+        <>
+          fitted by <TextLink to={paths.job(origin.job)}>a job</TextLink>
+        </>
+      )
     case 'promoted':
       return origin.adaptation === undefined ? (
         <>promoted</>
@@ -62,7 +81,16 @@ export function VersionList({ model, versions, complete, onRelease, releaseBlock
       cell: (version) => <Quantity value={version.metrics?.error} missing="not measured" />,
     },
     { id: 'origin', title: 'Origin', by: (version) => version.origin.kind, cell: (version) => <Origin version={version} /> },
-    { id: 'network', title: 'Network', minor: true, cell: (version) => <span className="num text-12">{version.network.sizes.join('–')} {version.network.activation}</span> },
+    {
+      id: 'network',
+      title: 'Network',
+      minor: true,
+      cell: (version) => (
+        <span className="num text-12">
+          {version.network.sizes.join('–')} {version.network.activation}
+        </span>
+      ),
+    },
     { id: 'by', title: 'By', minor: true, by: (version) => version.created_by, cell: (version) => version.created_by },
     { id: 'at', title: 'Made', by: (version) => version.created_at, cell: (version) => <TimeAgo at={version.created_at} /> },
     {
@@ -71,11 +99,24 @@ export function VersionList({ model, versions, complete, onRelease, releaseBlock
       right: true,
       cell: (version) =>
         model.live_version === version.version || model.archived_at !== null ? null : (
-          <Button blocked={releaseBlocked} onClick={() => onRelease(version.version)} aria-label={`Release version ${version.version}`}>
+          <Button
+            blocked={releaseBlocked}
+            onClick={() => onRelease(version.version)}
+            aria-label={`Release version ${version.version}`}
+          >
             Release…
           </Button>
         ),
     },
   ]
-  return <DataTable label="Versions" columns={columns} rows={versions} rowKey={(version) => String(version.version)} sort="-version" complete={complete} />
+  return (
+    <DataTable
+      label="Versions"
+      columns={columns}
+      rows={versions}
+      rowKey={(version) => String(version.version)}
+      sort="-version"
+      complete={complete}
+    />
+  )
 }

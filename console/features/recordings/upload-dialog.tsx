@@ -20,7 +20,10 @@ export function UploadDialog({ arms, onClose }: { arms: string[]; onClose: () =>
   const [at, setAt] = useState(0)
   const [tried, setTried] = useState(false)
   const tooLarge = files.find((file) => file.size > largest)
-  const problem = files.length === 0 ? 'Choose at least one CSV file.' : tooLarge && `${tooLarge.name} is larger than 200 MB. Split it, at a moment of rest.`
+  const problem =
+    files.length === 0
+      ? 'Choose at least one CSV file.'
+      : tooLarge && `${tooLarge.name} is larger than 200 MB. Split it, at a moment of rest.`
   const total = bytes(files.reduce((sum, file) => sum + file.size, 0))
   const send = async () => {
     let known = 0
@@ -33,7 +36,13 @@ export function UploadDialog({ arms, onClose }: { arms: string[]; onClose: () =>
     onClose()
   }
   return (
-    <Dialog open held={upload.isPending} onClose={onClose} title="Upload recordings" description="CSV with a header: time, then position_, velocity_, acceleration_ and torque_ (or effort_) of every joint, in SI units. The columns may stand in any order.">
+    <Dialog
+      open
+      held={upload.isPending}
+      onClose={onClose}
+      title="Upload recordings"
+      description="CSV with a header: time, then position_, velocity_, acceleration_ and torque_ (or effort_) of every joint, in SI units. The columns may stand in any order."
+    >
       <form
         className="flex flex-col gap-4"
         onSubmit={(event) => {
@@ -48,14 +57,23 @@ export function UploadDialog({ arms, onClose }: { arms: string[]; onClose: () =>
             <option key={name}>{name}</option>
           ))}
         </SelectField>
-        <SelectField label="Use" value={use} onChange={(event) => setUse(event.target.value as RecordingUse)} hint={uses.find((each) => each.use === use)!.means}>
+        <SelectField
+          label="Use"
+          value={use}
+          onChange={(event) => setUse(event.target.value as RecordingUse)}
+          hint={uses.find((each) => each.use === use)!.means}
+        >
           {uses.map((each) => (
             <option key={each.use} value={each.use}>
               {each.label}
             </option>
           ))}
         </SelectField>
-        <Field label="Files" hint={files.length > 0 ? `${counted(files.length, 'file')}, ${total.value} ${total.unit}` : 'Up to 200 MB each.'} error={tried ? problem : undefined}>
+        <Field
+          label="Files"
+          hint={files.length > 0 ? `${counted(files.length, 'file')}, ${total.value} ${total.unit}` : 'Up to 200 MB each.'}
+          error={tried ? problem : undefined}
+        >
           {(props) => (
             <input
               {...props}
@@ -72,7 +90,10 @@ export function UploadDialog({ arms, onClose }: { arms: string[]; onClose: () =>
         </Field>
         {upload.isPending && (
           <p role="status">
-            Sending {files[at]?.name} <span className="num text-soft">({at + 1} of {files.length})</span>
+            Sending {files[at]?.name}{' '}
+            <span className="num text-soft">
+              ({at + 1} of {files.length})
+            </span>
           </p>
         )}
         {upload.error && (

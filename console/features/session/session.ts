@@ -66,7 +66,9 @@ export function useSession(): Session {
 /** Undefined when the person may, otherwise why not; `doing` completes "As operator you can’t …". */
 export function useBlocked(action: string, doing: string): string | undefined {
   const session = useSession()
-  return session.actions.includes(action) ? undefined : `As ${session.role ?? 'a key'} you can’t ${doing}. An administrator can give you another role.`
+  return session.actions.includes(action)
+    ? undefined
+    : `As ${session.role ?? 'a key'} you can’t ${doing}. An administrator can give you another role.`
 }
 
 export function useMay(action: string): boolean {
