@@ -93,7 +93,7 @@ export const alder7: SimulatedArm = {
   },
   tuning: { bandwidth: 22, stiffness: rows.map((row) => row.stiffness) },
   fallback: 'controlled_stop',
-  workspace: { middle: [0, 0.4, 0, 1.15, 0, 0.6, 0], halfWidth: [0.9, 0.42, 0.5, 0.45, 0.6, 0.5, 0.9] },
+  workspace: { middle: [0, 0.4, 0, 1.15, 0, 0.6, 0], halfWidth: [0.9, 0.5, 0.5, 0.6, 0.6, 0.6, 0.9] },
 }
 
 /** The chain as built: masses and inertias off by up to 7 %, centres of mass by up to 6 mm; still a possible body. */

@@ -34,7 +34,7 @@ export function recordMotion(arm: SimulatedArm, motion: Motion, { seed, rate = 5
   const gripAt = payload === undefined ? Infinity : gripAfter === undefined ? 0 : restAfter(motion, gripAfter)
   const releaseAt = releaseAfter === undefined ? Infinity : restAfter(motion, releaseAfter)
   const time: number[] = []
-  const columns: [number[], number[], number[], number[]] = [[], [], [], []]
+  const logged: [number[], number[], number[], number[]] = [[], [], [], []]
   let [isGripped, isReleased] = [false, false]
   while (cell.now < motion.duration) {
     if (!isGripped && cell.now >= gripAt) {
@@ -48,9 +48,9 @@ export function recordMotion(arm: SimulatedArm, motion: Motion, { seed, rate = 5
     const row = cell.cycle()
     if (row === undefined) continue
     time.push(row.time)
-    ;[row.position, row.velocity, row.acceleration, row.torque].forEach((values, k) => columns[k].push(...values))
+    ;[row.position, row.velocity, row.acceleration, row.torque].forEach((values, k) => logged[k].push(...values))
   }
-  const [position, velocity, acceleration, torque] = columns.map((values) => Float64Array.from(values))
+  const [position, velocity, acceleration, torque] = logged.map((values) => Float64Array.from(values))
   const jointNames = arm.nominal.joints.map((joint) => joint.name)
   if (torque.length !== time.length * n) throw new Error('rows and times disagree')
   return { jointNames, time: Float64Array.from(time, (value) => value - time[0]), position, velocity, acceleration, torque }
@@ -61,16 +61,20 @@ export function restAfter(motion: Motion, time: number): number {
   return motion.rests.find((rest) => rest >= time) ?? motion.duration
 }
 
+// Decimals that carry what the sensors and the logger's filter leave: 1e-5 rad, 1e-4 rad/s, 1e-3 rad/s², 1e-4 N·m.
+const columns = [['position', 'position', 5], ['velocity', 'velocity', 4], ['acceleration', 'acceleration', 3], ['effort', 'torque', 4]] as const
+
 /**
- * A recording as CSV: time, then position_<joint>, velocity_<joint>, acceleration_<joint> and effort_<joint> for all joints;
- * seconds with three decimals, the rest with six significant digits.
+ * A recording as CSV: time in seconds, then position_<joint> of all joints, velocity_<joint>, acceleration_<joint> and
+ * effort_<joint>, as field logs have them.
  */
-export function toCsv({ jointNames, time, position, velocity, acceleration, torque }: SimulatedRecording): string {
+export function toCsv(recording: SimulatedRecording): string {
+  const { jointNames, time } = recording
   const n = jointNames.length
-  const groups = [['position', position], ['velocity', velocity], ['acceleration', acceleration], ['effort', torque]] as const
-  const header = ['time', ...groups.flatMap(([name]) => jointNames.map((joint) => `${name}_${joint}`))].join(',')
+  const header = ['time', ...columns.flatMap(([title]) => jointNames.map((joint) => `${title}_${joint}`))].join(',')
   const lines = Array.from(time, (t, row) => {
-    const cells = groups.flatMap(([, values]) => Array.from(values.subarray(row * n, (row + 1) * n), (value) => String(Number(value.toPrecision(6)))))
+    const cells = columns.flatMap(([, quantity, decimals]) =>
+      Array.from(recording[quantity].subarray(row * n, (row + 1) * n), (value) => value.toFixed(decimals)))
     return `${t.toFixed(3)},${cells.join(',')}`
   })
   return `${header}\n${lines.join('\n')}\n`
