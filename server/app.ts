@@ -11,9 +11,16 @@ import { callerLimiter } from './middleware/limits.ts'
 import { methodNotAllowed, problemAnswer } from './middleware/problem-answer.ts'
 import { requestContext } from './middleware/request-context.ts'
 import { consoleSession } from './middleware/session-cookie.ts'
+import { adaptationRoutes } from './routes/adaptations.ts'
+import { armRoutes } from './routes/arms.ts'
 import { consoleRoutes } from './routes/console.ts'
 import { docsRoutes } from './routes/docs.ts'
+import { hotRoutes } from './routes/hot/index.ts'
 import { keyRoutes } from './routes/keys.ts'
+import { lossRoutes } from './routes/losses.ts'
+import { modelRoutes } from './routes/models.ts'
+import { recordingRoutes } from './routes/recordings.ts'
+import { releaseRoutes } from './routes/releases.ts'
 import { sessionRoutes } from './routes/session.ts'
 import { systemRoutes } from './routes/system.ts'
 import { createServices } from './services/index.ts'
@@ -25,10 +32,11 @@ export function createApp(d: Dependencies, services: Services = createServices(d
   const document = loadContract()
   const session = consoleSession(d)
   const authenticate = identity({ keys: d.keys, sessions: services.sessions, consoleSession: session })
+  const protectFromForgery = csrfProtection(settings)
   const contract = createContract({
     document,
     authenticate,
-    protectFromForgery: csrfProtection(settings),
+    protectFromForgery,
     limitCaller: callerLimiter('requests', settings.limits.requestsPerMinute),
     repeatSafely: idempotency(d),
   })
@@ -39,12 +47,19 @@ export function createApp(d: Dependencies, services: Services = createServices(d
   app.set('trust proxy', settings.trustedProxies)
   app.use(requestContext())
 
-  // Hot routes come here, before everything that costs time on every request.
+  // Before everything that costs time on every request.
+  app.use(hotRoutes(d, services, { authenticate, protectFromForgery }))
 
   app.use(securityHeaders(settings.origin?.startsWith('https://') ?? false))
   app.use(systemRoutes(d, contract))
   app.use(sessionRoutes(d, services, contract, session))
   app.use(keyRoutes(services, contract))
+  app.use(armRoutes(services, contract))
+  app.use(recordingRoutes(services, contract))
+  app.use(modelRoutes(services, contract))
+  app.use(releaseRoutes(services, contract))
+  app.use(lossRoutes(services, contract))
+  app.use(adaptationRoutes(services, contract))
 
   app.use('/v1', (req) => {
     const path = req.baseUrl + req.path

@@ -17,6 +17,10 @@ export interface Settings {
   readonly databaseAddress: DatabaseAddress | null
   /** Signs session cookies; shared by all processes of one installation. */
   readonly secret: string
+  /** Where other server processes reach this one; null: its port on loopback. */
+  readonly peerAddress: string | null
+  /** How batches share transactions (services/adaptations/group-commit.ts). */
+  readonly groupCommit: { readonly largestGroup: number; readonly lanes: number }
   readonly seedDemo: boolean
   readonly logLevel: string
   readonly session: { readonly idleMs: number; readonly absoluteMs: number }
@@ -45,6 +49,8 @@ export function readSettings(env: NodeJS.ProcessEnv = process.env): Settings {
     dataFolder,
     databaseAddress: env.HEFTWISE_DATABASE_URL ? databaseAddressOf(env.HEFTWISE_DATABASE_URL) : null,
     secret: env.HEFTWISE_SECRET || storedSecret(dataFolder),
+    peerAddress: env.HEFTWISE_PEER_ADDRESS ? originOf(env.HEFTWISE_PEER_ADDRESS, 'HEFTWISE_PEER_ADDRESS') : null,
+    groupCommit: { largestGroup: 256, lanes: 1 },
     seedDemo: flag(env, 'HEFTWISE_DEMO', !production),
     logLevel: oneOf(env, 'HEFTWISE_LOG_LEVEL', 'warn', ['trace', 'debug', 'info', 'warn', 'error', 'silent']),
     session: {
@@ -119,10 +125,10 @@ function oneOf(env: NodeJS.ProcessEnv, name: string, fallback: string, values: r
   return text
 }
 
-function originOf(text: string): string {
+function originOf(text: string, name = 'HEFTWISE_ORIGIN'): string {
   const url = URL.canParse(text) ? new URL(text) : null
   if (!url || !['http:', 'https:'].includes(url.protocol) || url.pathname !== '/') {
-    throw new StartError(`HEFTWISE_ORIGIN is "${text}"; it must be an address such as https://heftwise.example.org, without a path.`)
+    throw new StartError(`${name} is "${text}"; it must be an address such as https://heftwise.example.org, without a path.`)
   }
   return url.origin
 }

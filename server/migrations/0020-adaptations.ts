@@ -11,6 +11,7 @@ export async function up({ sequelize }: QueryInterface): Promise<void> {
     expires_at DATETIME(3) NOT NULL,
     KEY server_processes_expiry (expires_at)
   )`)
+  // Texts, not JSON: the connector would parse JSON columns, and what decides served bits must come back as it went in.
   await sequelize.query(`CREATE TABLE adaptations (
     id ${id} NOT NULL PRIMARY KEY,
     team_id ${id} NOT NULL,
@@ -19,9 +20,9 @@ export async function up({ sequelize }: QueryInterface): Promise<void> {
     loss ${name} NULL,
     loss_version INT UNSIGNED NULL,
     robot VARCHAR(120) NOT NULL,
-    context JSON NOT NULL,
-    settings JSON NOT NULL,
-    arm JSON NOT NULL,
+    context TEXT NOT NULL,
+    settings TEXT NOT NULL,
+    arm MEDIUMTEXT NOT NULL,
     state ENUM('adapting', 'frozen', 'ended') NOT NULL,
     frozen_reason VARCHAR(1000) NULL,
     frozen_at DATETIME(3) NULL,

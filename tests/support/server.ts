@@ -12,7 +12,7 @@ import type { Database, DatabaseAddress } from '../../server/database/connection
 import { migrate } from '../../server/database/migrator.ts'
 import { createDependencies, startDependencies, stopDependencies } from '../../server/dependencies.ts'
 import type { Dependencies } from '../../server/dependencies.ts'
-import { createServices } from '../../server/services/index.ts'
+import { createServices, startServices, stopServices } from '../../server/services/index.ts'
 import type { Services } from '../../server/services/index.ts'
 import type { Caller, Role, Scope } from '../../server/services/permissions.ts'
 import type { Settings } from '../../server/settings.ts'
@@ -75,7 +75,10 @@ async function serve(address: DatabaseAddress, clock: Clock, overrides: Settings
   const services = createServices(dependencies)
   const http = createServer(createApp(dependencies, services))
   await new Promise<void>((done) => http.listen(0, '127.0.0.1', done))
-  const origin = `http://127.0.0.1:${(http.address() as AddressInfo).port}`
+  const { port } = http.address() as AddressInfo
+  const origin = `http://127.0.0.1:${port}`
+  await startServices(services)
+  await services.adaptations.announce(port)
 
   return {
     origin,
@@ -89,6 +92,7 @@ async function serve(address: DatabaseAddress, clock: Clock, overrides: Settings
     another: (more) => serve(address, clock, { ...overrides, ...more }),
     async stop() {
       await close(http)
+      await stopServices(services)
       await stopDependencies(dependencies)
       await database.close()
       if (reportedErrors.length > 0) throw new Error(`The server reported mistakes of its own:\n${reportedErrors.join('\n')}`)
@@ -125,6 +129,8 @@ function testSettings(databaseAddress: DatabaseAddress, { limits, session, ...ov
     trustedProxies: 0,
     dataFolder: '.test-data',
     databaseAddress,
+    peerAddress: null,
+    groupCommit: { largestGroup: 256, lanes: 1 },
     secret: 'a secret of the tests, long enough to sign with',
     seedDemo: false,
     logLevel: 'silent',

@@ -26,10 +26,12 @@ const longestNumber = 32
  */
 export class JsonWriter {
   #bytes: Uint8Array
+  #view: Buffer
   #at = 0
 
   constructor(room = 65536) {
     this.#bytes = new Uint8Array(room)
+    this.#view = Buffer.from(this.#bytes.buffer)
   }
 
   /** Forgets what was written. */
@@ -44,7 +46,8 @@ export class JsonWriter {
 
   /** JSON text as it stands. */
   raw(text: string): void {
-    this.bytes(Buffer.from(text))
+    this.#reserve(3 * text.length)
+    this.#at += this.#view.write(text, this.#at)
   }
 
   bytes(bytes: Uint8Array): void {
@@ -59,15 +62,17 @@ export class JsonWriter {
     this.#at = writeNumber(this.#bytes, this.#at, value)
   }
 
-  /** A whole number or a time, to its last digit. */
-  exact(value: number | null): void {
-    this.raw(String(value))
-  }
-
   /** `[…]`, the first `count` of values. */
   numbers(values: ArrayLike<number>, count = values.length): void {
     this.#reserve(2 + count * (longestNumber + 1))
     this.#at = writeRow(this.#bytes, this.#at, values, 0, count, null)
+  }
+
+  /** `[[a,b],…]` of `count` pairs of whole numbers. */
+  pairs(values: ArrayLike<number>, count: number): void {
+    if (count === 0) return this.raw('[]')
+    for (let k = 0; k < count; k++) this.raw(`${k === 0 ? '[' : ','}[${values[2 * k]},${values[2 * k + 1]}]`)
+    this.raw(']')
   }
 
   /**
@@ -93,6 +98,7 @@ export class JsonWriter {
     const grown = new Uint8Array(Math.max(2 * this.#bytes.length, this.#at + more))
     grown.set(this.#bytes.subarray(0, this.#at))
     this.#bytes = grown
+    this.#view = Buffer.from(grown.buffer)
   }
 }
 
