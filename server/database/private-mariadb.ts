@@ -1,6 +1,6 @@
 import { execFile, spawn } from 'node:child_process'
 import { randomBytes } from 'node:crypto'
-import { existsSync } from 'node:fs'
+import { existsSync, readFileSync } from 'node:fs'
 import { chmod, mkdir, open, readFile, rename, rm, stat, writeFile } from 'node:fs/promises'
 import { createServer } from 'node:net'
 import { tmpdir, userInfo } from 'node:os'
@@ -15,6 +15,7 @@ const wait = (ms: number) => new Promise((done) => setTimeout(done, ms))
 
 export interface PrivateMariaDb {
   readonly address: DatabaseAddress
+  /** Changes when it was restarted. */
   readonly pid: number
   /** True when it was found running, left by a process that was killed. */
   readonly adopted: boolean
@@ -35,6 +36,8 @@ export interface PrivateMariaDbOptions {
   anyDatabase?: boolean
   /** Only for tests: flush the log once a second instead of at every commit. */
   lazyFlush?: boolean
+  /** Start it again, on the same port, when it ends without having been asked to; told each time. */
+  onRestart?: (outcome: 'restarting' | 'restarted' | StartError) => void
 }
 
 /**
@@ -54,24 +57,44 @@ export async function startPrivateMariaDb(options: PrivateMariaDbOptions): Promi
 
   const left = await runningPid(folder)
   if (left !== undefined) {
-    if (await answers(credentials, 3_000)) return handle(credentials, left, true, folder)
+    if (await answers(credentials, 3_000)) return handle(left, true)
     await stopProcess(left)
   }
   credentials.port = await freePort(credentials.port)
   await writeCredentials(folder, credentials)
-  const pid = await launch(program, folder, owner, credentials, options)
-  return handle(credentials, pid, false, folder)
-}
+  return handle(await launch(program, folder, owner, credentials, options), false)
 
-function handle(credentials: Credentials, pid: number, adopted: boolean, folder: string): PrivateMariaDb {
-  return {
-    address: { host: '127.0.0.1', ...credentials },
-    pid,
-    adopted,
-    async stop() {
-      await stopProcess(pid)
-      await rm(pidFile(folder), { force: true })
-    },
+  function handle(firstPid: number, adopted: boolean): PrivateMariaDb {
+    let pid = firstPid
+    let restarting: Promise<void> | undefined
+    const { onRestart } = options
+    const watch = onRestart && setInterval(() => {
+      if (restarting === undefined && !isRunning(pid)) restarting = restart(onRestart).finally(() => (restarting = undefined))
+    }, 250)
+    watch?.unref()
+    const restart = async (tell: NonNullable<typeof onRestart>) => {
+      tell('restarting')
+      try {
+        pid = await launch(program!, folder, owner, credentials, options)
+        tell('restarted')
+      } catch (error) {
+        tell(error as StartError)
+        await wait(2_000)
+      }
+    }
+    return {
+      address: { host: '127.0.0.1', ...credentials },
+      get pid() {
+        return pid
+      },
+      adopted,
+      async stop() {
+        clearInterval(watch)
+        await restarting
+        await stopProcess(pid)
+        await rm(pidFile(folder), { force: true })
+      },
+    }
   }
 }
 
@@ -228,12 +251,8 @@ function socketPath(folder: string): string {
 }
 
 async function stopProcess(pid: number): Promise<void> {
-  const alive = async () => {
-    const state = await readFile(`/proc/${pid}/stat`, 'utf8').catch(() => '')
-    return state !== '' && !/\) Z /.test(state)
-  }
   for (const [signal, patienceMs] of [['SIGTERM', 60_000], ['SIGKILL', 10_000]] as const) {
-    if (!(await alive())) return
+    if (!isRunning(pid)) return
     try {
       process.kill(pid, signal)
     } catch {
@@ -241,9 +260,18 @@ async function stopProcess(pid: number): Promise<void> {
     }
     const deadline = Date.now() + patienceMs
     while (Date.now() < deadline) {
-      if (!(await alive())) return
+      if (!isRunning(pid)) return
       await wait(50)
     }
+  }
+}
+
+/** A process that has ended but whose parent has not asked for its exit code does not count. */
+function isRunning(pid: number): boolean {
+  try {
+    return !/\) Z /.test(readFileSync(`/proc/${pid}/stat`, 'utf8'))
+  } catch {
+    return false
   }
 }
 
