@@ -3,7 +3,7 @@ import { Ajv2020 } from 'ajv/dist/2020.js'
 import type { ErrorObject, ValidateFunction } from 'ajv/dist/2020.js'
 import addFormats from 'ajv-formats'
 import { parse } from 'yaml'
-import type { operations } from '../../shared/contract/openapi.generated.ts'
+import type { components, operations } from '../../shared/contract/openapi.generated.ts'
 import type { Action } from '../services/permissions.ts'
 
 export type OperationId = keyof operations
@@ -65,6 +65,8 @@ export interface ContractDocument {
   /** Header names in small letters. */
   parameterNames(id: OperationId, place: ParameterPlace): readonly string[]
   bodyCheck(id: OperationId, type: string): Check
+  /** For values that the contract says are JSON inside a form's field. */
+  schemaCheck(name: keyof components['schemas']): Check
   /** undefined: the contract lists no such answer. */
   answerCheck(id: OperationId, status: number, type: string): Check | undefined
 }
@@ -137,6 +139,7 @@ export function loadContract(): ContractDocument {
           return first.length > 0 && isSmall(value) ? thorough(value) : first
         }
       }),
+    schemaCheck: (name) => once(`schema ${name}`, () => checkWith(thoroughBodies.compile({ $ref: `${documentId}#/components/schemas/${name}` }))),
     answerCheck: (id, status, type) =>
       once(`${id} ${status} ${type}`, () => {
         const { pointer, operation } = raw.get(id)!
