@@ -43,10 +43,12 @@ interface State {
   /** The step-norm bound rests for rows before this time. */
   restUntil: number
   rejections: number
-  /** Time of the first row the window may count, and its first and next line. */
-  windowSince: number
+  /** First and next line of the window. */
   windowStart: number
   windowEnd: number
+  /** Time of the first row, and the first line, whose errors may count: what was served before is no longer served. */
+  errorsSince: number
+  errorsFrom: number
 }
 
 /**
@@ -116,7 +118,7 @@ class Machine implements Adaptation {
     const { base } = this.#learner
     this.#published = this.#tip = {
       revision: 0, nextSequence: 1, mode: { state: 'adapting' }, learned: keep(base), lastGood: keep(base), lastTime: NaN, period: NaN,
-      restUntil: -Infinity, rejections: 0, windowSince: NaN, windowStart: 0, windowEnd: 0,
+      restUntil: -Infinity, rejections: 0, windowStart: 0, windowEnd: 0, errorsSince: NaN, errorsFrom: 0,
     }
   }
 
@@ -196,7 +198,8 @@ class Machine implements Adaptation {
     bytes.text(this.inputs.settings.scheme)
     bytes.text(JSON.stringify(state.mode))
     for (const value of [
-      state.revision, state.nextSequence, state.lastTime, state.period, state.restUntil, state.rejections, state.windowSince,
+      state.revision, state.nextSequence, state.lastTime, state.period, state.restUntil, state.rejections, state.errorsSince,
+      state.errorsFrom - state.windowStart,
     ]) bytes.float64(value)
     this.#writeLearned(state.learned, null, bytes)
     this.#writeLearned(state.lastGood, state.learned, bytes)
@@ -221,7 +224,8 @@ class Machine implements Adaptation {
     state.period = bytes.float64()
     state.restUntil = bytes.float64()
     state.rejections = bytes.float64()
-    state.windowSince = bytes.float64()
+    state.errorsSince = bytes.float64()
+    state.errorsFrom = bytes.float64()
     this.#replace(state, 'learned', this.#readLearned(bytes, null))
     this.#replace(state, 'lastGood', this.#readLearned(bytes, state.learned))
     const lines = new Float64Array(bytes.uint32())
@@ -288,7 +292,7 @@ class Machine implements Adaptation {
       next.windowEnd--
       return this.#reject(next, outcome, [implausible])
     }
-    const isProven = given.isSmall && this.#window.isFull(next.windowSince, next.lastTime)
+    const isProven = given.isSmall && this.#window.isFull(next.errorsSince, next.lastTime)
     if (isProven) {
       const worse = this.#judgeWindow(entry, next)
       if (worse) {
@@ -359,7 +363,7 @@ class Machine implements Adaptation {
     const after = meanOf(candidate, count)
     if (!(after < before)) found.push(reasons.noHelp(finiteOrMost(after), before))
     this.#sumErrors(this.#base, from, rows, base)
-    const joint = worseJoint(this.#guard, candidate, base, count)
+    const joint = worseJoint(this.#guard, { served: candidate, base, rows: count })
     if (joint >= 0) {
       const std = this.#guard.outputStd[joint]
       found.push(reasons.worseThanBase(this.#guard, joint, std * Math.sqrt(candidate[joint] / count), std * Math.sqrt(base[joint] / count),
@@ -370,14 +374,15 @@ class Machine implements Adaptation {
   /** Served against base over the last second; a served state that passes, also on this batch alone, is the last good one. */
   #judgeWindow({ rows }: BatchEntry, next: State): Reason | null {
     const { outputStd } = this.#guard
-    const sums = this.#window.sum(next.windowStart, next.windowEnd)
+    const sums = this.#window.sum(next.windowStart, next.windowEnd, next.errorsFrom)
     if (sums.rows === 0) return null
-    const joint = worseJoint(this.#guard, sums.served, sums.base, sums.rows)
+    const newest = { served: this.#sums.served, base: this.#sums.base, rows }
+    const joint = worseJoint(this.#guard, sums, newest)
     if (joint >= 0) {
       const rmse = (sum: number) => outputStd[joint] * Math.sqrt(sum / sums.rows)
       return reasons.worseThanBase(this.#guard, joint, rmse(sums.served[joint]), rmse(sums.base[joint]), 'over the last second')
     }
-    const isGood = worseJoint(this.#guard, this.#sums.served, this.#sums.base, rows) < 0
+    const isGood = worseJoint(this.#guard, sums) < 0 && worseJoint(this.#guard, newest) < 0
     if (isGood && next.lastGood !== next.learned) this.#replace(next, 'lastGood', keep(next.learned))
     return null
   }
@@ -389,7 +394,7 @@ class Machine implements Adaptation {
     if (lastGood !== base) {
       this.#learner.predict(lastGood, this.#rows, 0, rows, this.#candidate)
       this.#sumErrors(this.#candidate, 0, rows, this.#sums.candidate)
-      if (worseJoint(this.#guard, this.#sums.candidate, this.#sums.base, rows) >= 0) lastGood = base
+      if (worseJoint(this.#guard, { served: this.#sums.candidate, base: this.#sums.base, rows }) >= 0) lastGood = base
     }
     this.#serveAgain(next, lastGood)
   }
@@ -406,12 +411,12 @@ class Machine implements Adaptation {
     }
     this.#replace(next, 'lastGood', keep(next.learned))
     next.revision++
-    clearWindow(next)
+    forgetErrors(next)
   }
 
   #judgeMotion(next: State): Reason | null {
     if (this.inputs.settings.scheme === 'bias') return null
-    const { motion, movedRows } = this.#window.sum(next.windowStart, next.windowEnd)
+    const { motion, movedRows } = this.#window.sum(next.windowStart, next.windowEnd, next.errorsFrom)
     let most = 0
     for (let j = 1; j < motion.length; j++) if (motion[j] > motion[most]) most = j
     const found = Math.sqrt(motion[most] / movedRows)
@@ -442,7 +447,7 @@ class Machine implements Adaptation {
   #event({ sequence, time, event }: EventEntry, next: State): ChangeOutcome {
     const { base } = this.#learner
     const before = next.mode
-    clearWindow(next)
+    forgetErrors(next)
     if (event === 'gripped' || event === 'released') {
       next.restUntil = time + STEP_NORM_REST
     } else {
@@ -456,7 +461,10 @@ class Machine implements Adaptation {
       }
       next.restUntil = -Infinity
     }
-    if (event === 'restarted') next.lastTime = next.period = NaN
+    if (event === 'restarted') {
+      next.lastTime = next.period = NaN
+      next.windowStart = next.windowEnd
+    }
     if (event === 'tool_changed') {
       next.mode = {
         state: 'frozen', cause: 'context_changed',
@@ -472,7 +480,7 @@ class Machine implements Adaptation {
     if (command === 'resume') {
       next.mode = { state: 'adapting' }
       next.rejections = 0
-      clearWindow(next)
+      forgetErrors(next)
     }
     if (command === 'reset') {
       next.rejections = 0
@@ -507,7 +515,7 @@ class Machine implements Adaptation {
 
   #enterWindow(next: State, first: number, now: number, errorRows: number, rows: number): void {
     const { served, base, motion } = this.#sums
-    if (!(next.windowSince <= first)) next.windowSince = first
+    if (!(next.errorsSince <= first)) next.errorsSince = first
     this.#window.write(this.#published.windowStart, next.windowEnd, now, errorRows, served, base, rows, motion)
     next.windowEnd++
     next.windowStart = this.#window.firstYoung(next.windowStart, next.windowEnd, now)
@@ -599,9 +607,10 @@ function keep(learned: Learned): Learned {
   return learned
 }
 
-function clearWindow(state: State): void {
-  state.windowSince = NaN
-  state.windowStart = state.windowEnd
+/** Errors are judged from the next batch on; motion before it still counts. */
+function forgetErrors(state: State): void {
+  state.errorsSince = NaN
+  state.errorsFrom = state.windowEnd
 }
 
 function meanOf(sums: Float64Array, rows: number): number {

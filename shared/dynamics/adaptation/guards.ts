@@ -21,22 +21,25 @@ export interface GuardTable {
   readonly floorSquared: Float64Array
 }
 
-/**
- * Whether one joint is worse than base: its root mean square error more than `tolerance` above base's, and the mean
- * squared errors further apart than noise. Without the second test, a joint on which base is all but perfect would stop
- * the others from learning: a whole network that follows a payload at high gain is never as quiet as base there.
- *
- * @param served, base  sums of squared errors over the same rows, base standard deviations
- */
-export function isWorse(served: number, base: number, rows: number, floorSquared: number, tolerance: number): boolean {
-  const bound = (1 + tolerance) * (1 + tolerance) * base
-  return served > bound && served - base > rows * floorSquared
+/** Sums of squared errors over the same rows, base standard deviations, length n: of what was served, and of base. */
+export interface Compared {
+  readonly served: Float64Array
+  readonly base: Float64Array
+  readonly rows: number
 }
 
-/** The first joint that isWorse, or −1. */
-export function worseJoint({ settings, floorSquared }: GuardTable, served: Float64Array, base: Float64Array, rows: number): number {
+/**
+ * The first joint that is worse than base, or −1: its root mean square error more than `tolerance` above base's, and the
+ * mean squared errors further apart than noise. Without the second test, a joint on which base is all but perfect would
+ * stop the others from learning: a whole network that follows a payload at high gain is never as quiet as base there.
+ *
+ * @param newest  where given, a joint must be worse in these rows too: what has recovered since is left alone
+ */
+export function worseJoint({ settings, floorSquared }: GuardTable, { served, base, rows }: Compared, newest?: Compared): number {
+  const factor = (1 + settings.tolerance) * (1 + settings.tolerance)
   for (let j = 0; j < served.length; j++) {
-    if (isWorse(served[j], base[j], rows, floorSquared[j], settings.tolerance)) return j
+    const isWorse = served[j] > factor * base[j] && served[j] - base[j] > rows * floorSquared[j]
+    if (isWorse && (!newest || newest.served[j] > factor * newest.base[j])) return j
   }
   return -1
 }

@@ -72,8 +72,12 @@ export class BatchWindow {
     return now - since >= WINDOW_SECONDS - SLACK
   }
 
-  /** Adds up lines start to end − 1, in their order, into `sums`. */
-  sum(start: number, end: number): WindowSums {
+  /**
+   * Adds up lines start to end − 1, in their order, into `sums`.
+   *
+   * @param errorsFrom  the first line whose errors count
+   */
+  sum(start: number, end: number, errorsFrom: number): WindowSums {
     const { sums } = this
     sums.rows = 0
     sums.movedRows = 0
@@ -82,11 +86,12 @@ export class BatchWindow {
     sums.motion.fill(0)
     for (let line = start; line < end; line++) {
       const at = this.#placeOf(line)
-      sums.rows += this.#lines[at + 1]
+      const counts = line >= errorsFrom
+      if (counts) sums.rows += this.#lines[at + 1]
       sums.movedRows += this.#lines[at + 2]
       for (let j = 0; j < this.#joints; j++) {
-        sums.served[j] += this.#lines[at + 3 + j]
-        sums.base[j] += this.#lines[at + 3 + this.#joints + j]
+        if (counts) sums.served[j] += this.#lines[at + 3 + j]
+        if (counts) sums.base[j] += this.#lines[at + 3 + this.#joints + j]
         sums.motion[j] += this.#lines[at + 3 + 2 * this.#joints + j]
       }
     }
