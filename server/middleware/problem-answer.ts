@@ -60,7 +60,15 @@ export function asRefusal(error: unknown): Refusal | undefined {
     return new Refusal('not-ready', 'The database does not answer just now. Nothing was changed by this request unless it had been committed; try again shortly.', { cause: error })
   }
   if (isDiskFull(error)) return new Refusal('not-ready', 'The disk is full: nothing can be stored until some space is freed. The operator of this installation must act.', { cause: error })
-  return undefined
+  return fileServerRefusal(error)
+}
+
+/** What express's file server throws about the request: no such file, a path out of bounds, a range that is not there. */
+function fileServerRefusal(error: unknown): Refusal | undefined {
+  const { status, statusCode, message } = (error ?? {}) as { status?: number; statusCode?: number; message?: string }
+  if (status === undefined || status !== statusCode || status < 400 || status >= 500) return undefined
+  if (status === 403 || status === 404) return new Refusal('not-found', 'There is no such file.', { cause: error })
+  return new Refusal('invalid-request', `The request cannot be answered: ${message}.`, { cause: error })
 }
 
 const lostCodes = new Set(['ECONNREFUSED', 'ECONNRESET', 'EPIPE', 'ETIMEDOUT', 'ENOENT', 'PROTOCOL_CONNECTION_LOST'])
