@@ -67,7 +67,8 @@ export function Shell() {
       >
         Skip to the content
       </a>
-      <div
+      <nav
+        aria-label="Sections"
         className={`sticky top-0 flex h-dvh shrink-0 flex-col border-r border-line max-md:hidden ${narrowRail ? 'w-14' : 'w-48'}`}
       >
         <NavLink to={paths.overview()} aria-label="Heftwise, overview" className="flex h-12 items-center gap-2.5 px-4">
@@ -89,7 +90,7 @@ export function Shell() {
           <Icon name={narrowRail ? 'right' : 'left'} />
           {!narrowRail && 'Fold'}
         </button>
-      </div>
+      </nav>
       <div className="flex min-w-0 grow flex-col">
         <TopLine session={session.data} onMenu={() => setDrawer(true)} />
         <main id="content" tabIndex={-1} className="grow outline-none">
@@ -99,7 +100,9 @@ export function Shell() {
         </main>
       </div>
       <Drawer open={drawer} onClose={() => setDrawer(false)} title="Heftwise">
-        <Sections session={session.data} narrow={false} onChoose={() => setDrawer(false)} />
+        <nav aria-label="Sections">
+          <Sections session={session.data} narrow={false} onChoose={() => setDrawer(false)} />
+        </nav>
       </Drawer>
       <ScrollRestoration />
     </div>
@@ -108,7 +111,7 @@ export function Shell() {
 
 function Sections({ session, narrow, onChoose }: { session: Session; narrow: boolean; onChoose?: () => void }) {
   return (
-    <nav aria-label="Sections" className="flex flex-col gap-4 py-3">
+    <div className="flex flex-col gap-4 py-3">
       {sections.map(({ group, entries }) => {
         const allowed = entries.filter((entry) => entry.action === undefined || session.actions.includes(entry.action))
         if (allowed.length === 0) return null
@@ -127,7 +130,7 @@ function Sections({ session, narrow, onChoose }: { session: Session; narrow: boo
           </div>
         )
       })}
-    </nav>
+    </div>
   )
 }
 
@@ -292,13 +295,13 @@ function PersonMenu({ session }: { session: Session }) {
       trigger={
         <button
           type="button"
-          aria-label={`${name}: theme, sign out`}
+
           className="flex h-8 items-center gap-1.5 rounded-2 px-1.5 hover:bg-sunken max-md:h-10"
         >
           <span aria-hidden="true" className="num grid size-6 place-items-center border border-edge text-11">
             {initials(name)}
           </span>
-          <span className="max-xl:hidden">{name}</span>
+          <span className="max-xl:sr-only">{name}</span>
           <Icon name="down" className="size-3" />
         </button>
       }

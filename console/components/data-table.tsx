@@ -72,7 +72,7 @@ export function DataTable<T>({
                       <Icon name="down" className={`size-3 ${active ? (falling ? '' : 'rotate-180') : 'invisible'}`} />
                     </button>
                   ) : (
-                    each.title
+                    each.title || <span className="sr-only">Acts</span>
                   )}
                 </th>
               )

@@ -99,7 +99,7 @@ export function LoadBar({ load, scale = false }: { load: Load; scale?: boolean }
           ))}
         </div>
       )}
-      {clamped && <p className="text-12 font-semibold text-stop">clamped</p>}
+      {clamped && <p className={`text-12 font-semibold text-stop ${sign > 0 ? 'text-right' : ''}`}>clamped</p>}
     </div>
   )
 }

@@ -66,7 +66,7 @@ export function Section({
 /** Names and values in two columns that wrap. */
 export function Facts({ items }: { items: [name: string, value: ReactNode][] }) {
   return (
-    <dl className="grid grid-cols-[auto_1fr] gap-x-4 gap-y-1.5">
+    <dl className="grid content-start grid-cols-[auto_1fr] gap-x-4 gap-y-1.5">
       {items.map(([name, value]) => (
         <div key={name} className="contents">
           <dt className="text-soft">{name}</dt>

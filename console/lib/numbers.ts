@@ -18,6 +18,13 @@ export function significant(value: number, digits = 3): string {
   return sign + size.toPrecision(digits)
 }
 
+/** A round number at an axis, without zeros that say nothing. */
+export function tickLabel(value: number): string {
+  const size = Math.abs(value)
+  if (size !== 0 && (size < 0.001 || size >= 1e6)) return significant(value, 1)
+  return grouped(Number(value.toPrecision(6)))
+}
+
 /** An integer in groups of three, set apart by thin spaces. */
 export function grouped(value: number): string {
   return String(value)

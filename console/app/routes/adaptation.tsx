@@ -318,7 +318,7 @@ function ContextSection({ adaptation, history }: { adaptation: Adaptation; histo
     update.kind,
     update.rate !== undefined && `step size ${significant(update.rate)}`,
     update.rows_per_step !== undefined && `${counted(update.rows_per_step, 'row')} a step`,
-    update.fade !== undefined && `fades to ${significant(update.fade)} in 1 s`,
+    adaptation.scheme === 'bias' && update.fade !== undefined && `fades to ${significant(update.fade)} in 1 s`,
   ]
   return (
     <Section title="Context">

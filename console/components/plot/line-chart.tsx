@@ -1,5 +1,5 @@
 import { useState } from 'react'
-import { significant } from '../../lib/numbers.ts'
+import { significant, tickLabel } from '../../lib/numbers.ts'
 import { useWidth } from '../../lib/use-width.ts'
 import { errorScale, linearScale } from './scale.ts'
 
@@ -63,7 +63,7 @@ export function LineChart({ series, label, xName, yName }: { series: Series[]; l
             <g key={tick}>
               <line x1={edge.left} x2={width - right} y1={y.place(tick)} y2={y.place(tick)} className="stroke-line" />
               <text x={edge.left - 8} y={y.place(tick) + 4} textAnchor="end" className="num fill-soft text-11">
-                {significant(tick, 2)}
+                {tickLabel(tick)}
               </text>
             </g>
           ))}
@@ -75,7 +75,7 @@ export function LineChart({ series, label, xName, yName }: { series: Series[]; l
               textAnchor="middle"
               className="num fill-soft text-11"
             >
-              {significant(tick, 3)}
+              {tickLabel(tick)}
             </text>
           ))}
           {drawn.map((each, index) => (

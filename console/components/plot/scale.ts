@@ -34,13 +34,13 @@ function decadesBetween(from: number, to: number): number[] {
   return ticks
 }
 
-/** Logarithmic where the values span more than about a decade and a half; the edges leave a little air. */
+/** Logarithmic where the values span more than a decade; the edges leave a little air. */
 export function errorScale(values: number[], start: number, end: number): Scale {
   const positive = values.filter((value) => value > 0)
   if (positive.length === 0) return linearScale(0, 1, start, end)
   const low = Math.min(...positive)
   const high = Math.max(...positive)
-  return high / low > 30 ? logScale(low / 1.3, high * 1.3, start, end) : linearScale(0, high * 1.08, start, end)
+  return high / low > 12 ? logScale(low / 1.3, high * 1.3, start, end) : linearScale(0, high * 1.08, start, end)
 }
 
 /** About `count` round numbers within [from, to]. */

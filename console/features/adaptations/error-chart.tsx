@@ -1,6 +1,6 @@
 import { useMemo, useState } from 'react'
 import { errorScale } from '../../components/plot/scale.ts'
-import { change, significant } from '../../lib/numbers.ts'
+import { change, significant, tickLabel } from '../../lib/numbers.ts'
 import { relative, useNow } from '../../lib/times.ts'
 import { useWidth } from '../../lib/use-width.ts'
 import type { LogEntry } from './adaptations.ts'
@@ -99,16 +99,18 @@ export function ErrorChart({ entries, frozenNow, selected, onSelect }: ErrorChar
           {frozenSpans(entries, frozenNow).map(([from, to]) => (
             <g key={from}>
               <rect x={x(from)} width={Math.max(2, x(to) - x(from))} y={top} height={axis - top} fill="url(#frozen-span)" />
-              <text x={x(from) + 4} y={axis - 6} className="fill-stop text-11">
-                frozen
-              </text>
+              {entries.every((entry) => entry.position !== from || entry.entry !== 'command') && (
+                <text x={x(from) + 4} y={axis - 6} className="fill-stop text-11">
+                  frozen
+                </text>
+              )}
             </g>
           ))}
           {y.ticks.map((tick) => (
             <g key={tick}>
               <line x1={left} x2={left + inner} y1={y.place(tick)} y2={y.place(tick)} className="stroke-line" />
               <text x={left - 8} y={y.place(tick) + 4} textAnchor="end" className="num fill-soft text-11">
-                {significant(tick, 1)}
+                {tickLabel(tick)}
               </text>
             </g>
           ))}

@@ -32,10 +32,10 @@ function guards(adaptation: Adaptation, newest: LogEntry | undefined): Row[] {
     { name: 'Distance from base', bound: share(guard.drift, 'of limit'), codes: ['drift'] },
     { name: 'Worse than base, unseen data', bound: share(guard.tolerance, ''), codes: ['worse_than_base', 'no_help'] },
     { name: 'Least motion', bound: <Quantity value={guard.excitation} unit="std" />, codes: ['excitation'] },
-    { name: 'Longest gap', bound: <Quantity value={guard.gap_periods} unit="periods" />, codes: ['gap'] },
+    { name: 'Longest gap', bound: <Quantity value={guard.gap_periods} unit="periods" digits={2} />, codes: ['gap'] },
     {
       name: 'Rejections in a row',
-      bound: <Quantity value={guard.rejections_before_freeze} />,
+      bound: <Quantity value={guard.rejections_before_freeze} whole />,
       newest: (
         <span className={`num ${adaptation.rejections_in_a_row > 0 ? 'font-semibold text-load' : ''}`}>
           {adaptation.rejections_in_a_row}

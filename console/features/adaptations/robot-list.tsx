@@ -15,21 +15,33 @@ interface Robot {
   health: Health
 }
 
+const columns =
+  'grid grid-cols-[minmax(0,1.6fr)_9.5rem_10rem_minmax(0,1.2fr)_7rem] items-center gap-x-6 gap-y-1 max-lg:grid-cols-[minmax(0,1fr)_9.5rem_8rem] max-sm:grid-cols-[minmax(0,1fr)_auto]'
+
 /** Robots beside each other: state, error now and how it went, when last heard. */
 export function RobotList({ robots }: { robots: Robot[] }) {
   return (
-    <ul className="border-t border-edge">
-      {robots.map((robot) => (
-        <RobotRow key={robot.adaptation.id} {...robot} />
-      ))}
-    </ul>
+    <div>
+      <div aria-hidden="true" className={`${columns} pb-1.5 text-12 text-soft max-lg:hidden`}>
+        <span>Robot</span>
+        <span>State</span>
+        <span>Error, newest 60 batches</span>
+        <span>Before, after the newest step</span>
+        <span className="text-right">Model, revision</span>
+      </div>
+      <ul className="border-t border-edge">
+        {robots.map((robot) => (
+          <RobotRow key={robot.adaptation.id} {...robot} />
+        ))}
+      </ul>
+    </div>
   )
 }
 
 function RobotRow({ adaptation, health }: Robot) {
   const { last_batch: last } = adaptation
   return (
-    <li className="grid grid-cols-[minmax(0,1.6fr)_9.5rem_9rem_minmax(0,1.2fr)_7rem] items-center gap-x-6 gap-y-1 border-b border-line py-2.5 max-lg:grid-cols-[minmax(0,1fr)_9.5rem_8rem] max-sm:grid-cols-[minmax(0,1fr)_auto]">
+    <li className={`${columns} border-b border-line py-2.5`}>
       <div className="min-w-0">
         <TextLink to={paths.adaptation(adaptation.id)} className="font-semibold break-words">
           {adaptation.robot}
@@ -59,7 +71,6 @@ function RobotRow({ adaptation, health }: Robot) {
             <Quantity value={last.error.after} /> <span className="num">({change(last.error.before, last.error.after)})</span>
           </span>
         )}
-        {last?.error && <span className="block text-12 text-soft">error before, after the newest step</span>}
       </p>
       <p className="text-right text-12 text-soft max-lg:hidden">
         <span className="num">
