@@ -2,6 +2,7 @@ import { Router } from 'express'
 import type { components } from '../../shared/contract/openapi.generated.ts'
 import { lossToWire } from '../../shared/contract/snapshots.ts'
 import type { Contract } from '../middleware/contract.ts'
+import { answerUnlessKnown } from '../middleware/entity-tag.ts'
 import { answerPage } from '../middleware/page-answer.ts'
 import type { StoredComparison } from '../models/loss-version.ts'
 import type { Services } from '../services/index.ts'
@@ -42,11 +43,9 @@ export function lossRoutes({ losses }: Services, contract: Contract): Router {
     res.json(lossVersionToWire(await losses.version(caller, path.loss, path.version)))
   }))
 
-  router.get('/v1/losses/:loss/versions/:version/snapshot', contract.handle('getLossSnapshot', async ({ caller, path }, res) => {
+  router.get('/v1/losses/:loss/versions/:version/snapshot', contract.handle('getLossSnapshot', async ({ caller, path }, res, req) => {
     const snapshot = await losses.snapshot(caller, path.loss, path.version)
-    res.setHeader('ETag', `"${snapshot.checksum}"`)
-    res.setHeader('Cache-Control', 'private, no-cache')
-    res.json(lossSnapshotToWire(snapshot))
+    answerUnlessKnown(req, res, snapshot.checksum, () => lossSnapshotToWire(snapshot))
   }))
 
   return router

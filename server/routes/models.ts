@@ -1,6 +1,7 @@
 import { Router } from 'express'
 import type { components } from '../../shared/contract/openapi.generated.ts'
 import type { Contract } from '../middleware/contract.ts'
+import { answerUnlessKnown } from '../middleware/entity-tag.ts'
 import { answerPage } from '../middleware/page-answer.ts'
 import type { Services } from '../services/index.ts'
 import { modelEtag, type ModelRecord } from '../services/models.ts'
@@ -58,12 +59,9 @@ export function modelRoutes({ models, versions }: Services, contract: Contract):
     res.json(versionToJson(await versions.get(caller, path.model, path.version)))
   }))
 
-  router.get('/v1/models/:model/versions/:version/snapshot', contract.handle('getVersionSnapshot', async ({ caller, path }, res) => {
+  router.get('/v1/models/:model/versions/:version/snapshot', contract.handle('getVersionSnapshot', async ({ caller, path }, res, req) => {
     const snapshot = await versions.snapshot(caller, path.model, path.version)
-    // A version never changes: its checksum is its entity tag. Express answers 304 when If-None-Match names it.
-    res.setHeader('ETag', `"${snapshot.checksum}"`)
-    res.setHeader('Cache-Control', 'private, no-cache')
-    res.json(snapshotToJson(snapshot))
+    answerUnlessKnown(req, res, snapshot.checksum, () => snapshotToJson(snapshot))
   }))
 
   return router
