@@ -21,10 +21,10 @@ import type { SimulatedRecording } from '../../shared/simulation/recording.ts'
 import type { Schemas } from '../wire.ts'
 import { alder7Arm, demoRecordings, scenario } from './scenario.ts'
 
-const folder = join(import.meta.dirname, '../../server/demo')
+const folder = join(import.meta.dirname, '../../server/demo/artefacts')
 
 // All recordings teach; so many of each kind are kept in the repository, for the console's lists and for trying jobs.
-const kept: Record<string, number> = { slow: 2, unloaded: 3, loaded: 4, validation: 2, evaluation: 2, 'grip-release': 1 }
+const kept: Record<string, number> = { slow: 1, unloaded: 3, loaded: 4, validation: 2, evaluation: 2, 'grip-release': 1 }
 
 const recordings = demoRecordings().map((recording) => {
   const made = recording.make()
@@ -138,7 +138,7 @@ function write(): void {
   put(demo.version, JSON.stringify(version))
   put(demo.loss_version, JSON.stringify(loss))
   for (const { name, made } of inRepository) put(`${name}.gz`, toCsv(made))
-  say(`${inRepository.length + 3} files, ${(bytes / 1e6).toFixed(2)} MB, in server/demo`)
+  say(`${inRepository.length + 3} files, ${(bytes / 1e6).toFixed(2)} MB, in server/demo/artefacts`)
   for (const { name, error } of loss.validation!) say(`  ${name}: ${error.toPrecision(3)} next-batch error on validation recordings`)
 }
 

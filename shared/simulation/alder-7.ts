@@ -55,7 +55,8 @@ const rows: JointRow[] = [
   },
   {
     name: 'alder_hand', origin: [0, -0.016, 0.09], axis: [0, 0, 1],
-    mass: 0.5, centerOfMass: [0.003, 0.002, 0.033], inertia: [0.00052, 0, 0.00001, 0.00051, 0.00002, 0.00041],
+    // With the flat gripper, which stays on.
+    mass: 1.2, centerOfMass: [0.003, 0.002, 0.058], inertia: [0.0024, 0, 0.00002, 0.0023, 0.00004, 0.0013],
     limits: { lower: -3, upper: 3, velocity: 3, torque: 14, torqueRate: 300 },
     friction: { viscous: 0.1, coulomb: 0.15, stribeck: 0.033 }, torqueNoise: 0.08, stiffness: 10,
   },
@@ -77,7 +78,7 @@ const nominal: ChainDescription = {
 const TRUTH_SEED = 7001
 
 /**
- * Alder-7: an invented seven-joint arm of an invented pottery works, 15.6 kg, for payloads of 0.8 to 3 kg. It loads shaped
+ * Alder-7: an invented seven-joint arm of an invented pottery works, 16.3 kg, for payloads of 0.8 to 3 kg. It loads shaped
  * clay onto kiln carts. Simulated throughout.
  */
 export const alder7: SimulatedArm = {
@@ -93,7 +94,7 @@ export const alder7: SimulatedArm = {
   },
   tuning: { bandwidth: 22, stiffness: rows.map((row) => row.stiffness) },
   fallback: 'controlled_stop',
-  workspace: { middle: [0, 0.4, 0, 1.15, 0, 0.6, 0], halfWidth: [0.9, 0.5, 0.5, 0.6, 0.6, 0.6, 0.9] },
+  workspace: { middle: [0, 0.1, 0, 1, 0, 0.7, 0], halfWidth: [0.9, 0.55, 0.5, 0.7, 0.6, 0.7, 0.9] },
 }
 
 /** The chain as built: masses and inertias off by up to 7 %, centres of mass by up to 6 mm; still a possible body. */
