@@ -15,7 +15,7 @@ const looks: Record<Look, string> = {
 }
 
 const shape =
-  'inline-flex min-h-8 items-center justify-center gap-2 rounded-2 border px-3 py-1 text-14 font-semibold whitespace-nowrap aria-disabled:cursor-not-allowed max-md:min-h-10'
+  'inline-flex min-h-8 items-center justify-center gap-2 rounded-2 border px-3 py-1 text-14 font-semibold whitespace-nowrap aria-disabled:cursor-not-allowed max-md:min-h-10 max-sm:px-2'
 
 interface ButtonProps extends Omit<ComponentProps<'button'>, 'disabled'> {
   look?: Look
@@ -103,5 +103,19 @@ export function TextLink({ to, children, className = '' }: { to: string; childre
     >
       {children}
     </Link>
+  )
+}
+
+/** A small switch between ways of looking. */
+export function Toggle({ pressed, onPress, children }: { pressed: boolean; onPress: () => void; children: ReactNode }) {
+  return (
+    <button
+      type="button"
+      aria-pressed={pressed}
+      onClick={onPress}
+      className="min-h-7 rounded-2 border border-line px-2 text-12 hover:border-ink aria-pressed:border-ink aria-pressed:bg-ink aria-pressed:text-paper max-md:min-h-9"
+    >
+      {children}
+    </button>
   )
 }

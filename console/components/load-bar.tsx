@@ -79,6 +79,14 @@ export function LoadBar({ load, scale = false }: { load: Load; scale?: boolean }
           </>
         )}
         <span className="absolute top-1/2 h-3 w-px -translate-x-1/2 -translate-y-1/2 bg-soft" style={{ left: `${zero}%` }} />
+        {clamped && (
+          // In the empty half, so that the row keeps its height when a joint reaches its limit.
+          <span
+            className={`absolute top-1/2 -translate-y-1/2 bg-paper px-1 text-12 font-semibold text-stop ${sign > 0 ? 'right-1/2 mr-1' : 'left-1/2 ml-1'}`}
+          >
+            clamped
+          </span>
+        )}
         {load.measured != null && (
           <span
             className="absolute top-1/2 h-4 w-0.5 -translate-x-1/2 -translate-y-1/2 bg-ink"
@@ -99,7 +107,6 @@ export function LoadBar({ load, scale = false }: { load: Load; scale?: boolean }
           ))}
         </div>
       )}
-      {clamped && <p className={`text-12 font-semibold text-stop ${sign > 0 ? 'text-right' : ''}`}>clamped</p>}
     </div>
   )
 }

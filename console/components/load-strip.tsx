@@ -27,7 +27,7 @@ const foot = 20
 export function LoadStrip({ joints, time, predicted, measured, row, onRow }: LoadStripProps) {
   const [frame, width] = useWidth<HTMLDivElement>()
   const narrow = width < 480
-  const left = narrow ? 64 : label
+  const left = narrow ? 80 : label
   const right = narrow ? 0 : scale
   const inner = Math.max(1, width - left - right)
   const first = time[0]!
@@ -81,7 +81,7 @@ export function LoadStrip({ joints, time, predicted, measured, row, onRow }: Loa
           return (
             <g key={joint.name}>
               <text x={0} y={middle + 4} className="fill-ink text-12">
-                {narrow ? joint.name.slice(0, 9) : joint.name.slice(0, 14)}
+                {narrow ? joint.name.slice(0, 12) : joint.name.slice(0, 14)}
               </text>
               <line x1={left} x2={left + inner} y1={middle} y2={middle} className="stroke-line" />
               <path

@@ -1,7 +1,7 @@
 import { useQuery, useQueryClient } from '@tanstack/react-query'
 import { useState, type ReactNode } from 'react'
 import { useParams } from 'react-router-dom'
-import { Button, TextLink } from '../../components/button.tsx'
+import { Button, TextLink, Toggle } from '../../components/button.tsx'
 import { LoadBarKey } from '../../components/load-bar.tsx'
 import { LoadStrip } from '../../components/load-strip.tsx'
 import { Facts, Page, Section } from '../../components/page.tsx'
@@ -197,15 +197,13 @@ function Live({ adaptation }: { adaptation: Adaptation }) {
             <legend className="sr-only">How many entries are shown</legend>
             newest
             {windows.map((each) => (
-              <button
+              <Toggle
                 key={each.value}
-                type="button"
-                aria-pressed={shown === Number(each.value)}
-                onClick={() => url.set({ newest: each.value === '150' ? undefined : each.value })}
-                className="num min-h-7 rounded-2 px-2 hover:bg-sunken aria-pressed:bg-ink aria-pressed:text-paper"
+                pressed={shown === Number(each.value)}
+                onPress={() => url.set({ newest: each.value === '150' ? undefined : each.value })}
               >
-                {each.label}
-              </button>
+                <span className="num">{each.label}</span>
+              </Toggle>
             ))}
           </fieldset>
         }
@@ -243,6 +241,7 @@ function BatchView({
   const position = selected ?? batches.at(-1)!.position
   const batch = batches.find((entry) => entry.position === position)
   const rows = useQuery(rowsOptions(adaptation.id, position))
+  const [scale, setScale] = useState(false)
   const [instant, setInstant] = useState<{ position: number; row: number }>()
   const last = (rows.data?.time.length ?? 1) - 1
   const row = instant?.position === rows.data?.position ? Math.min(instant?.row ?? last, last) : last
@@ -260,17 +259,19 @@ function BatchView({
           )
         }
         actions={
-          selected === undefined ? (
+          <>
             <LoadBarKey />
-          ) : (
-            <Button onClick={() => url.set({ batch: undefined })}>Follow the newest</Button>
-          )
+            <Toggle pressed={scale} onPress={() => setScale(!scale)}>
+              scale
+            </Toggle>
+            {selected !== undefined && <Button onClick={() => url.set({ batch: undefined })}>Follow the newest</Button>}
+          </>
         }
       >
         {rows.isError && (
           <Failed what="The rows of this batch could not be read" error={rows.error} retry={() => void rows.refetch()} />
         )}
-        <JointTable joints={adaptation.joint_names} rows={rows.data} row={row} batch={batch} history={until} />
+        <JointTable joints={adaptation.joint_names} rows={rows.data} row={row} batch={batch} scale={scale} history={until} />
       </Section>
       {rows.data && rows.data.time.length > 1 && (
         <Section

@@ -114,7 +114,7 @@ export function ErrorChart({ entries, frozenNow, selected, onSelect }: ErrorChar
               </text>
             </g>
           ))}
-          <Uprights entries={entries} x={x} axis={axis} />
+          <Uprights entries={entries} x={x} axis={axis} edge={width} />
           <line x1={left} x2={left + inner} y1={axis} y2={axis} className="stroke-edge" />
           <path
             d={batches
@@ -218,7 +218,17 @@ function readout(entry: LogEntry, now: number): string {
   return `sequence ${entry.sequence}: ${entry.verdict}, error ${errors}, revision ${entry.revision}, ${relative(Date.parse(entry.at), now)}`
 }
 
-function Uprights({ entries, x, axis }: { entries: LogEntry[]; x: (position: number) => number; axis: number }) {
+function Uprights({
+  entries,
+  x,
+  axis,
+  edge,
+}: {
+  entries: LogEntry[]
+  x: (position: number) => number
+  axis: number
+  edge: number
+}) {
   const marks = entries.flatMap((entry) =>
     entry.entry === 'batch' ? [] : [{ entry, words: entry.entry === 'event' ? eventWords(entry) : commandWords(entry) }],
   )
@@ -226,8 +236,10 @@ function Uprights({ entries, x, axis }: { entries: LogEntry[]; x: (position: num
   const ends = [-Infinity, -Infinity]
   return marks.map(({ entry, words }) => {
     const px = x(entry.position)
-    const row = ends.findIndex((end) => end < px - 4)
-    if (row >= 0) ends[row] = px + words.length * 6.2
+    const length = words.length * 6.2
+    const turned = px + length > edge
+    const row = ends.findIndex((end) => end < (turned ? px - length : px) - 4)
+    if (row >= 0) ends[row] = turned ? px : px + length
     return (
       <g key={entry.position}>
         <line
@@ -239,7 +251,12 @@ function Uprights({ entries, x, axis }: { entries: LogEntry[]; x: (position: num
           strokeDasharray={entry.entry === 'event' ? '4 3' : undefined}
         />
         {row >= 0 && (
-          <text x={px + 4} y={row === 1 ? 30 : 14} className={`text-11 ${entry.entry === 'event' ? 'fill-soft' : 'fill-stop'}`}>
+          <text
+            x={turned ? px - 4 : px + 4}
+            y={row === 1 ? 30 : 14}
+            textAnchor={turned ? 'end' : 'start'}
+            className={`stroke-paper text-11 [paint-order:stroke] [stroke-width:3] ${entry.entry === 'event' ? 'fill-soft' : 'fill-stop'}`}
+          >
             {words}
           </text>
         )}

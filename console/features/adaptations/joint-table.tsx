@@ -10,12 +10,14 @@ interface JointTableProps {
   /** The instant within the batch. */
   row: number
   batch: LogEntry | undefined
+  /** Whether each bar says its scale. */
+  scale: boolean
   /** Batches, oldest first, for how errors and weights went. */
   history: LogEntry[]
 }
 
 /** One line per joint, in joint order: its load, its error before and after the step, its weight in the loss. */
-export function JointTable({ joints, rows, row, batch, history }: JointTableProps) {
+export function JointTable({ joints, rows, row, batch, scale, history }: JointTableProps) {
   const recent = history.slice(-60)
   const head = 'py-1.5 pr-4 text-12 font-normal text-soft text-left last:pr-0'
   const cell = 'py-2 pr-4 align-middle last:pr-0'
@@ -62,10 +64,7 @@ export function JointTable({ joints, rows, row, batch, history }: JointTableProp
               </th>
               <td className={cell}>
                 {rows ? (
-                  <LoadBar
-                    load={{ joint, unit, limit: rows.torque_limits[index]!, predicted, measured }}
-                    scale={index === joints.length - 1}
-                  />
+                  <LoadBar load={{ joint, unit, limit: rows.torque_limits[index]!, predicted, measured }} scale={scale} />
                 ) : (
                   <span className="block h-4 border-b border-line" />
                 )}
@@ -78,12 +77,14 @@ export function JointTable({ joints, rows, row, batch, history }: JointTableProp
               </td>
               <td className={`${cell} text-right`}>
                 <Quantity value={error?.before} unit={unit} />
-                {error?.after != null && (
-                  <span className="block text-12 text-soft">
-                    <Quantity value={error.after} unit={unit} />{' '}
-                    <span className="num">({change(error.before, error.after)})</span>
-                  </span>
-                )}
+                <span className="block min-h-4 text-12 text-soft">
+                  {error?.after != null && (
+                    <>
+                      <Quantity value={error.after} unit={unit} />{' '}
+                      <span className="num">({change(error.before, error.after)})</span>
+                    </>
+                  )}
+                </span>
               </td>
               <td className={`${cell} max-lg:hidden`}>
                 <Sparkline
