@@ -436,6 +436,8 @@ class Machine implements Adaptation {
     outcome.reasons = why
     next.rejections++
     if (next.rejections >= this.#guard.settings.rejectionsBeforeFreeze) {
+      // A frozen state is served for long: it must be one that has shown itself good.
+      if (next.learned !== next.lastGood) this.#serveLastGood(next, this.#rows.rows)
       next.mode = {
         state: 'frozen', cause: 'rejections',
         reason: `${next.rejections} batches in a row were rejected, the last because: ${why[0].detail}`,

@@ -8,8 +8,8 @@ export interface GuardTable {
   readonly units: readonly string[]
   /** N·m per base standard deviation, length n. */
   readonly outputStd: Float64Array
-  /** Largest plausible magnitude of measured torque, N·m, length n. */
-  readonly plausibleTorque: Float64Array
+  /** Largest plausible distance of measured torque from base's, N·m, length n. */
+  readonly plausibleError: Float64Array
   /** One over the torque limit, length n: puts joints on one scale. */
   readonly inverseLimit: Float64Array
   /** Largest change and drift of predicted torque, base standard deviations, length n. */
@@ -44,8 +44,11 @@ export function worseJoint({ settings, floorSquared }: GuardTable, { served, bas
   return -1
 }
 
-/** A measured torque beyond this many times the joint's limit is a fault of the sensor, of the units or of the order of joints. */
-const PLAUSIBLE_LIMITS = 2
+/**
+ * A measured torque further than this share of the joint's limit from base's prediction is a fault of the sensor, of the
+ * unit or of the order of joints. Payloads of 4 kg reach 0.25 on a simulated arm; an arm loaded beyond 0.75 has no reserve.
+ */
+const PLAUSIBLE_ERROR = 0.75
 
 /** Least cosine between measured and predicted torque. Payloads of 4 kg on a simulated arm reach −0.35; a flipped sign, −0.95. */
 const LEAST_COSINE = -0.5
@@ -63,7 +66,7 @@ export function createGuardTable({ version, settings, limits, jointNames, units 
     jointNames,
     units,
     outputStd,
-    plausibleTorque: limits.torque.map(limit => PLAUSIBLE_LIMITS * limit),
+    plausibleError: limits.torque.map(limit => PLAUSIBLE_ERROR * limit),
     inverseLimit: limits.torque.map(limit => 1 / limit),
     torqueChange: share(settings.guard.torqueChange),
     drift: share(settings.guard.drift),
@@ -73,8 +76,8 @@ export function createGuardTable({ version, settings, limits, jointNames, units 
 }
 
 /**
- * Whether measured torque can be what it says: within twice the joints' limits, and not opposed to the base version's
- * prediction, as it is when a sign convention is wrong. The first reason against it, or null.
+ * Whether measured torque can be what it says: within three quarters of each joint's limit of the base version's
+ * prediction, and not opposed to it, as it is when a sign convention is wrong. The first reason against it, or null.
  *
  * @param measured  rows × n, N·m
  * @param base  the base version's prediction, rows × n, base standard deviations
@@ -82,17 +85,18 @@ export function createGuardTable({ version, settings, limits, jointNames, units 
 export function judgePlausibility(
   table: GuardTable, measured: Float64Array, base: Float64Array, rows: number, outputMean: Float64Array,
 ): Reason | null {
-  const { plausibleTorque, inverseLimit, outputStd, noiseSquared } = table
+  const { plausibleError, inverseLimit, outputStd, noiseSquared } = table
   const joints = outputStd.length
   let product = 0
   let measuredSquared = 0
   let baseSquared = 0
   let noise = 0
   for (let k = 0, j = 0; k < rows * joints; k++, j = j + 1 === joints ? 0 : j + 1) {
-    const torque = measured[k]
-    if (torque > plausibleTorque[j] || torque < -plausibleTorque[j]) return reasons.beyondLimit(table, j, torque)
-    const given = torque * inverseLimit[j]
-    const expected = (base[k] * outputStd[j] + outputMean[j]) * inverseLimit[j]
+    const predicted = base[k] * outputStd[j] + outputMean[j]
+    const error = measured[k] - predicted
+    if (error > plausibleError[j] || error < -plausibleError[j]) return reasons.tooFar(table, j, measured[k], predicted)
+    const given = measured[k] * inverseLimit[j]
+    const expected = predicted * inverseLimit[j]
     product += given * expected
     measuredSquared += given * given
     baseSquared += expected * expected
@@ -133,10 +137,12 @@ export const reasons = {
   notFinite: (what: string): Reason =>
     reason('not_finite', `${what} is not a finite number, so nothing can be learned from this batch.`, null, null, null),
 
-  beyondLimit: (table: GuardTable, joint: number, found: number): Reason =>
-    reason('implausible', `${table.jointNames[joint]}: a measured torque of ${shown(found)} ${table.units[joint]} is beyond ` +
-      `${shown(table.plausibleTorque[joint])} ${table.units[joint]}, twice the joint's limit; check sensor, unit and order of joints.`,
-      joint, found, table.plausibleTorque[joint]),
+  tooFar: (table: GuardTable, joint: number, measured: number, predicted: number): Reason => {
+    const [name, unit, bound] = [table.jointNames[joint], table.units[joint], table.plausibleError[joint]]
+    return reason('implausible', `${name}: a measured torque of ${shown(measured)} ${unit} lies further from the base version's ` +
+      `${shown(predicted)} ${unit} than ${shown(bound)} ${unit} (75 % of the joint's limit); check sensor, unit and order of joints.`,
+      joint, Math.abs(measured - predicted), bound)
+  },
 
   opposed: (found: number): Reason =>
     reason('implausible', `Measured torque runs against what the base version predicts (cosine ${shown(found)}, least ` +
