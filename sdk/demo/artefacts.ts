@@ -30,7 +30,8 @@ const recordings = demoRecordings().map((recording) => {
   const made = recording.make()
   return { ...recording, made, motion: toMotion(recording.name, made) }
 })
-const withUse = (use: Schemas['RecordingUse']): Motion[] => recordings.filter((recording) => recording.use === use).map(({ motion }) => motion)
+const withUse = (use: Schemas['RecordingUse']): Motion[] =>
+  recordings.filter((recording) => recording.use === use).map(({ motion }) => motion)
 
 say(`${recordings.length} recordings simulated`)
 const kernels = await createKernels()
@@ -43,27 +44,37 @@ write()
 async function fitBase(): Promise<FitResult> {
   const motions = withUse('fit')
   const isHeldOut = (_: Motion, index: number): boolean => index % 5 === 4
-  return fitNetwork(motions.filter((motion, k) => !isHeldOut(motion, k)), motions.filter(isHeldOut), {
-    ...defaultFitOptions,
-    epochs: 60,
-    joints: 7,
-    onEpoch: ({ epoch, epochs, trainingError, heldOutError }) => {
-      if (epoch % 10 === 0) say(`fit: epoch ${epoch} of ${epochs}, error ${trainingError.toPrecision(3)}, held out ${heldOutError.toPrecision(3)}`)
+  return fitNetwork(
+    motions.filter((motion, k) => !isHeldOut(motion, k)),
+    motions.filter(isHeldOut),
+    {
+      ...defaultFitOptions,
+      epochs: 60,
+      joints: 7,
+      onEpoch: ({ epoch, epochs, trainingError, heldOutError }) => {
+        if (epoch % 10 === 0)
+          say(`fit: epoch ${epoch} of ${epochs}, error ${trainingError.toPrecision(3)}, held out ${heldOutError.toPrecision(3)}`)
+      },
     },
-  })
+  )
 }
 
 function learnLoss({ version: { description, parameters } }: FitResult): MetaTrainingResult {
-  const normalised = (use: Schemas['RecordingUse']) => withUse(use).map((motion) => normaliseMotion(motion, description.normalisation))
+  const normalised = (use: Schemas['RecordingUse']) =>
+    withUse(use).map((motion) => normaliseMotion(motion, description.normalisation))
   const steps = metaTrain(
-    { network: description.network, parameters: Float64Array.from(parameters) }, normalised('meta_train'), normalised('validate'),
+    { network: description.network, parameters: Float64Array.from(parameters) },
+    normalised('meta_train'),
+    normalised('validate'),
     { ...defaultMetaTrainingOptions, createMetaGradient: (shape) => createKernelMetaGradient(kernels, shape) },
   )
   for (;;) {
     const { value, done } = steps.next()
     if (done) return value
     if (value.phase === 'updates' && value.validation !== undefined) {
-      say(`loss: update ${value.update} of ${value.updates}, next-batch error ${value.validation.toPrecision(3)} on validation recordings`)
+      say(
+        `loss: update ${value.update} of ${value.updates}, next-batch error ${value.validation.toPrecision(3)} on validation`,
+      )
     }
   }
 }
@@ -73,7 +84,8 @@ function versionSnapshot({ version: fitted, metrics }: FitResult): Schemas['Vers
   const perJoint = (rmse: readonly number[]): Schemas['JointMetric'][] =>
     rmse.map((value, j) => ({ joint: joints[j].name, rmse: Number(value.toPrecision(4)), unit: 'N·m' }))
   const { outputStd } = fitted.description.normalisation
-  const errorOf = (rmse: readonly number[]): number => rmse.reduce((sum, value, j) => sum + (value / outputStd[j]) ** 2, 0) / rmse.length
+  const errorOf = (rmse: readonly number[]): number =>
+    rmse.reduce((sum, value, j) => sum + (value / outputStd[j]) ** 2, 0) / rmse.length
   return {
     format: 'heftwise-version-1',
     model: scenario.model,
@@ -91,11 +103,19 @@ function versionSnapshot({ version: fitted, metrics }: FitResult): Schemas['Vers
   }
 }
 
-function lossSnapshot({ learned: { rule, error, name }, rivals, none }: MetaTrainingResult, baseChecksum: string): Schemas['LossSnapshot'] {
+function lossSnapshot(
+  { learned: { rule, error, name }, rivals, none }: MetaTrainingResult,
+  baseChecksum: string,
+): Schemas['LossSnapshot'] {
   const lossVersion: LossVersion = {
     description: {
-      kind: 'state_dependent', positive: rule.lossShape.positive, joints: rule.lossShape.joints, hidden: rule.lossShape.hidden,
-      baseChecksum, scheme: rule.scheme, update: { kind: rule.update, rate: rule.rate, rowsPerStep: rule.rowsPerStep, fade: 1 },
+      kind: 'state_dependent',
+      positive: rule.lossShape.positive,
+      joints: rule.lossShape.joints,
+      hidden: rule.lossShape.hidden,
+      baseChecksum,
+      scheme: rule.scheme,
+      update: { kind: rule.update, rate: rule.rate, rowsPerStep: rule.rowsPerStep, fade: 1 },
     },
     parameters: Float32Array.from(rule.lossParameters),
   }
@@ -114,14 +134,22 @@ function lossSnapshot({ learned: { rule, error, name }, rivals, none }: MetaTrai
 function write(): void {
   mkdirSync(folder, { recursive: true })
   for (const file of readdirSync(folder)) if (file.endsWith('.gz')) rmSync(join(folder, file))
-  const inRepository = recordings.filter(({ name }) => Number(/(\d+)\.csv$/.exec(name)![1]) <= kept[name.replace(/-\d+\.csv$/, '')])
+  const inRepository = recordings.filter(
+    ({ name }) => Number(/(\d+)\.csv$/.exec(name)![1]) <= kept[name.replace(/-\d+\.csv$/, '')],
+  )
   const demo = {
     about: 'Invented and simulated throughout. Made by: npm run demo:artefacts',
     arm: alder7Arm(),
-    model: { name: scenario.model, arm: scenario.arm, description: 'Inverse dynamics of Alder-7 without payload. Fitted on simulated recordings.' },
+    model: {
+      name: scenario.model,
+      arm: scenario.arm,
+      description: 'Inverse dynamics of Alder-7 without payload. Fitted on simulated recordings.',
+    },
     version: 'alder-7-base.json.gz',
     loss: {
-      name: scenario.loss, model: scenario.model, kind: 'state_dependent',
+      name: scenario.loss,
+      model: scenario.model,
+      kind: 'state_dependent',
       description: 'For shaped clay of 0.8 to 3 kg in the gripper. Meta-trained on simulated recordings.',
     },
     loss_version: 'alder-7-payload.json.gz',
@@ -139,14 +167,17 @@ function write(): void {
   put(demo.loss_version, JSON.stringify(loss))
   for (const { name, made } of inRepository) put(`${name}.gz`, toCsv(made))
   say(`${inRepository.length + 3} files, ${(bytes / 1e6).toFixed(2)} MB, in server/demo/artefacts`)
-  for (const { name, error } of loss.validation!) say(`  ${name}: ${error.toPrecision(3)} next-batch error on validation recordings`)
+  for (const { name, error } of loss.validation!)
+    say(`  ${name}: ${error.toPrecision(3)} next-batch error on validation recordings`)
 }
 
 function toMotion(name: string, { time, position, velocity, acceleration, torque }: SimulatedRecording): Motion {
   const n = torque.length / time.length
   const states = new Float64Array(3 * torque.length)
   for (let row = 0; row < time.length; row++) {
-    ;[position, velocity, acceleration].forEach((values, k) => states.set(values.subarray(row * n, (row + 1) * n), 3 * n * row + k * n))
+    ;[position, velocity, acceleration].forEach((values, k) =>
+      states.set(values.subarray(row * n, (row + 1) * n), 3 * n * row + k * n),
+    )
   }
   return { name, rows: time.length, time, states, torque }
 }

@@ -20,13 +20,13 @@ const LONGEST_QUEUE = 50
 export type Source = { readonly model: string } | { readonly adaptation: string }
 
 type Entry =
-  | { readonly kind: 'batch', readonly rows: readonly LogRow[] }
-  | { readonly kind: 'event', readonly event: Omit<Schemas['NewEvent'], 'sequence' | 'skipped'> }
+  | { readonly kind: 'batch'; readonly rows: readonly LogRow[] }
+  | { readonly kind: 'event'; readonly event: Omit<Schemas['NewEvent'], 'sequence' | 'skipped'> }
 
 /** What happened on the line. */
 export interface LinkCounters {
   predictions: number
-  batches: { accepted: number, rejected: number, stored: number }
+  batches: { accepted: number; rejected: number; stored: number }
   /** Entries dropped because the service did not answer for long. */
   skipped: number
   /** Requests that failed for good. */
@@ -44,10 +44,21 @@ export interface Link {
   exchange(time: number, now: number): Promise<Parameters<FeedForward['accept']>[0] | undefined>
 }
 
-export function createLink(
-  { heftwise, joints, source, motion, size, signal }:
-  { heftwise: Heftwise, joints: string, source: Source, motion: Motion, size: number, signal: AbortSignal },
-): Link {
+export function createLink({
+  heftwise,
+  joints,
+  source,
+  motion,
+  size,
+  signal,
+}: {
+  heftwise: Heftwise
+  joints: string
+  source: Source
+  motion: Motion
+  size: number
+  signal: AbortSignal
+}): Link {
   const counters: LinkCounters = { predictions: 0, batches: { accepted: 0, rejected: 0, stored: 0 }, skipped: 0, failed: 0 }
   const queue: Entry[] = []
   const announced: Extract<Entry, { kind: 'event' }>[] = []
@@ -71,7 +82,11 @@ export function createLink(
       const [entry] = queue
       const place = { sequence: sequence + skipped, skipped }
       if (entry.kind === 'batch') {
-        const { verdict } = await heftwise.adaptations.postBatch(adaptation, { ...place, ...toBatch(joints, entry.rows) }, { signal })
+        const { verdict } = await heftwise.adaptations.postBatch(
+          adaptation,
+          { ...place, ...toBatch(joints, entry.rows) },
+          { signal },
+        )
         counters.batches[verdict]++
       } else await heftwise.adaptations.postEvent(adaptation, { ...place, ...entry.event }, { signal })
       sequence += skipped + 1
@@ -125,7 +140,12 @@ export function createLink(
           // An answer that was lost on the way had been stored all the same: go on where the service is.
           sequence = error.problem.expected_sequence
           skipped = 0
-        } else if (!(error instanceof ConnectionError || error instanceof TimeoutError || (isProblem(error) && error.status >= 500))) throw error
+        } else if (!(
+          error instanceof ConnectionError ||
+          error instanceof TimeoutError ||
+          (isProblem(error) && error.status >= 500)
+        ))
+          throw error
         counters.failed++
         return undefined
       }
@@ -134,15 +154,24 @@ export function createLink(
 }
 
 function toBatch(joints: string, rows: readonly LogRow[]): Omit<Schemas['Batch'], 'sequence' | 'skipped'> {
-  const matrix = (quantity: 'position' | 'velocity' | 'acceleration' | 'torque'): number[][] => rows.map((row) => Array.from(row[quantity]))
+  const matrix = (quantity: 'position' | 'velocity' | 'acceleration' | 'torque'): number[][] =>
+    rows.map((row) => Array.from(row[quantity]))
   return {
-    joints, time: rows.map((row) => row.time),
-    position: matrix('position'), velocity: matrix('velocity'), acceleration: matrix('acceleration'), acceleration_kind: 'filtered',
+    joints,
+    time: rows.map((row) => row.time),
+    position: matrix('position'),
+    velocity: matrix('velocity'),
+    acceleration: matrix('acceleration'),
+    acceleration_kind: 'filtered',
     torque: matrix('torque'),
   }
 }
 
-function desiredStates(motion: Motion, times: Float64Array, size: number): { position: number[][], velocity: number[][], acceleration: number[][] } {
+function desiredStates(
+  motion: Motion,
+  times: Float64Array,
+  size: number,
+): { position: number[][]; velocity: number[][]; acceleration: number[][] } {
   const state = createJointState(size)
   const [position, velocity, acceleration]: number[][][] = [[], [], []]
   for (const time of times) {

@@ -32,7 +32,8 @@ function readOptions(): Options | undefined {
   if (values.help) return undefined
   const [seconds, seed] = [Number(values.seconds), Number(values.seed)]
   if (!(seconds >= 10 && seconds <= 3600)) throw new DemoError(`--seconds is ${values.seconds}, expected 10 to 3600.`)
-  if (!Number.isInteger(seed) || seed < 0 || seed > 0xffffffff) throw new DemoError(`--seed is ${values.seed}, expected a whole number from 0 to 4294967295.`)
+  if (!Number.isInteger(seed) || seed < 0 || seed > 0xffffffff)
+    throw new DemoError(`--seed is ${values.seed}, expected a whole number from 0 to 4294967295.`)
   return { seconds, robot: values.robot, seed, isRealtime: values.realtime }
 }
 
@@ -40,8 +41,11 @@ function readArguments() {
   try {
     return parseArgs({
       options: {
-        seconds: { type: 'string', default: '40' }, robot: { type: 'string', default: scenario.robot }, seed: { type: 'string', default: '1' },
-        realtime: { type: 'boolean', default: false }, help: { type: 'boolean', default: false },
+        seconds: { type: 'string', default: '40' },
+        robot: { type: 'string', default: scenario.robot },
+        seed: { type: 'string', default: '1' },
+        realtime: { type: 'boolean', default: false },
+        help: { type: 'boolean', default: false },
       },
     })
   } catch (error) {
@@ -59,34 +63,61 @@ async function main(signal: AbortSignal): Promise<void> {
   const { heftwise, joints } = await connect(address, scenario.arm, signal)
   const { seconds, robot, seed, isRealtime } = options
   const shift = planShift(seconds, seed)
+  const carried = shift.loads.map(({ payload }) => `${payload.mass} kg`).join(', then ')
   console.log(CAUTION)
-  console.log(`\n${robot} works for ${seconds} s. It carries ${shift.loads.map(({ payload }) => `${payload.mass} kg`).join(', then ')}; nobody tells the service how much.`)
+  console.log(
+    `\n${robot} works for ${seconds} s and carries ${carried}; nobody tells the service how much.`,
+  )
 
   const { live_version: version } = await heftwise.models.get(scenario.model, { signal })
-  if (version === null) throw new DemoError(`Model ${scenario.model} has no live version. Release one in the console, then try again.`)
+  if (version === null)
+    throw new DemoError(`Model ${scenario.model} has no live version. Release one in the console, then try again.`)
   const mseRobot = `${robot} (mse)`
   await endEarlier(heftwise, [robot, mseRobot], signal)
-  const adapt = (loss: Schemas['NewAdaptation']['loss'], of: string): Promise<Schemas['Adaptation']> => heftwise.adaptations.create(
-    { model: scenario.model, version, loss, robot: of, context: { tool: 'flat gripper', payload_class: '0.8 to 3 kg' }, scheme: 'all' }, { signal })
+  const adapt = (loss: Schemas['NewAdaptation']['loss'], of: string): Promise<Schemas['Adaptation']> =>
+    heftwise.adaptations.create(
+      {
+        model: scenario.model,
+        version,
+        loss,
+        robot: of,
+        context: { tool: 'flat gripper', payload_class: '0.8 to 3 kg' },
+        scheme: 'all',
+      },
+      { signal },
+    )
   const [mse, learned] = [await adapt('mse', mseRobot), await adapt({ name: scenario.loss }, robot)]
 
-  const trials: { name: string, source?: Source }[] = [
+  const trials: { name: string; source?: Source }[] = [
     { name: 'without Heftwise' },
     { name: `live version ${version}`, source: { model: scenario.model } },
     { name: 'adapting, mse', source: { adaptation: mse.id } },
     { name: 'adapting, learned loss', source: { adaptation: learned.id } },
   ]
   const progress = createProgress(seconds)
-  const start = (trial: (typeof trials)[number], index: number): Promise<TrialResult> => runTrial({
-    name: trial.name, shift: planShift(seconds, seed), seed, isRealtime, signal, onProgress: (now) => progress.report(index, now),
-    link: trial.source && createLink({ heftwise, joints, source: trial.source, motion: shift.motion, size: alder7.limits.length, signal }),
-  })
+  const start = (trial: (typeof trials)[number], index: number): Promise<TrialResult> =>
+    runTrial({
+      name: trial.name,
+      shift: planShift(seconds, seed),
+      seed,
+      isRealtime,
+      signal,
+      onProgress: (now) => progress.report(index, now),
+      link:
+        trial.source &&
+        createLink({ heftwise, joints, source: trial.source, motion: shift.motion, size: alder7.limits.length, signal }),
+    })
   // Side by side: at a real cell's pace one after the other would take four times as long.
   const results = await Promise.all(trials.map(start))
   progress.end()
 
   if (signal.aborted) console.log('Stopped. The table covers what ran until then.')
-  console.log(`\n${formatResults(results, alder7.nominal.joints.map(({ name }) => name))}\n`)
+  console.log(
+    `\n${formatResults(
+      results,
+      alder7.nominal.joints.map(({ name }) => name),
+    )}\n`,
+  )
   console.log(`Without Heftwise the controller feeds forward its published rigid-body model: no friction, no payload.`)
   console.log(`Both adaptations go on living in the console: ${address.url}`)
 }
@@ -95,14 +126,16 @@ async function main(signal: AbortSignal): Promise<void> {
 async function endEarlier(heftwise: Heftwise, robots: readonly string[], signal: AbortSignal): Promise<void> {
   for (const robot of robots) {
     for (const state of ['adapting', 'frozen'] as const) {
-      for await (const { id } of everyItem((cursor) => heftwise.adaptations.list({ robot, model: scenario.model, state, cursor, signal }))) {
+      for await (const { id } of everyItem((cursor) =>
+        heftwise.adaptations.list({ robot, model: scenario.model, state, cursor, signal }),
+      )) {
         await heftwise.adaptations.end(id, 'The demo starts again', { signal })
       }
     }
   }
 }
 
-function createProgress(seconds: number): { report(index: number, now: number): void, end(): void } {
+function createProgress(seconds: number): { report(index: number, now: number): void; end(): void } {
   const times: number[] = []
   let shown = -1
   return {

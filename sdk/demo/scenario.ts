@@ -19,8 +19,13 @@ export function alder7Arm(): Schemas['NewArm'] {
     joints: alder7.nominal.joints.map(({ name }, j) => {
       const { lower, upper, velocity, torque, torqueRate } = alder7.limits[j]
       return {
-        name, type: 'revolute', position_lower: lower, position_upper: upper,
-        velocity_limit: velocity, torque_limit: torque, torque_rate_limit: torqueRate,
+        name,
+        type: 'revolute',
+        position_lower: lower,
+        position_upper: upper,
+        velocity_limit: velocity,
+        torque_limit: torque,
+        torque_rate_limit: torqueRate,
       }
     }),
     gravity: [...alder7.nominal.gravity],
@@ -60,7 +65,9 @@ export function planShift(seconds: number, seed: number): Shift {
   const loads: Load[] = []
   for (let start = 0; start + GRIP_AFTER + 2 < seconds; start += LOAD_EVERY) {
     loads.push({
-      payload: randomPayload(random), from: restAfter(motion, start + GRIP_AFTER), to: restAfter(motion, start + RELEASE_AFTER),
+      payload: randomPayload(random),
+      from: restAfter(motion, start + GRIP_AFTER),
+      to: restAfter(motion, start + RELEASE_AFTER),
     })
   }
   return { motion, loads }
@@ -84,7 +91,14 @@ export function randomPayload(random: Random): Payload {
 /** All recordings of the demo; motions, payloads and noise follow from their places in the list. */
 export function demoRecordings(): DemoRecording[] {
   const list: DemoRecording[] = []
-  const add = (kind: string, count: number, use: Schemas['RecordingUse'], seconds: number, isLoaded: boolean, isSwitched = false): void => {
+  const add = (
+    kind: string,
+    count: number,
+    use: Schemas['RecordingUse'],
+    seconds: number,
+    isLoaded: boolean,
+    isSwitched = false,
+  ): void => {
     for (let k = 1; k <= count; k++) {
       const seed = 100 * (list.length + 1)
       const payload = isLoaded ? randomPayload(createRandom(seed)) : undefined
@@ -93,12 +107,17 @@ export function demoRecordings(): DemoRecording[] {
         name: `${kind}-${String(k).padStart(2, '0')}.csv`,
         use,
         context: {
-          robot: scenario.robot, tool: 'flat gripper', motion: isSwitched ? 'grip and release' : kind === 'slow' ? 'slow sines' : 'pick',
+          robot: scenario.robot,
+          tool: 'flat gripper',
+          motion: isSwitched ? 'grip and release' : kind === 'slow' ? 'slow sines' : 'pick',
           ...(payload && { payload: { mass: payload.mass, center_of_mass: [...payload.centerOfMass] } }),
         },
-        make: () => recordMotion(alder7, make(alder7, createRandom(seed + 1), seconds), {
-          seed: seed + 2, payload, ...(isSwitched && { gripAfter: seconds / 3, releaseAfter: (2 * seconds) / 3 }),
-        }),
+        make: () =>
+          recordMotion(alder7, make(alder7, createRandom(seed + 1), seconds), {
+            seed: seed + 2,
+            payload,
+            ...(isSwitched && { gripAfter: seconds / 3, releaseAfter: (2 * seconds) / 3 }),
+          }),
       })
     }
   }

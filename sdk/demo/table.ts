@@ -4,7 +4,14 @@ import type { TrialErrors, TrialResult } from './trial.ts'
 export function formatResults(results: readonly TrialResult[], jointNames: readonly string[]): string {
   const seconds = (which: 'loaded' | 'unloaded'): string => results[0][which].duration.toFixed(0)
   return [
-    section(`Tracking error with a payload, RMS mrad, over ${seconds('loaded')} s`, results, jointNames, 'loaded', 'tracking', 1000),
+    section(
+      `Tracking error with a payload, RMS mrad, over ${seconds('loaded')} s`,
+      results,
+      jointNames,
+      'loaded',
+      'tracking',
+      1000,
+    ),
     section(`Torque error with a payload, RMS N·m, over ${seconds('loaded')} s`, results, jointNames, 'loaded', 'torque', 1),
     section(`Tracking error without payload, RMS mrad, over ${seconds('unloaded')} s`, results, [], 'unloaded', 'tracking', 1000),
     section(`Torque error without payload, RMS N·m, over ${seconds('unloaded')} s`, results, [], 'unloaded', 'torque', 1),
@@ -13,8 +20,12 @@ export function formatResults(results: readonly TrialResult[], jointNames: reado
 }
 
 function section(
-  title: string, results: readonly TrialResult[], jointNames: readonly string[], which: 'loaded' | 'unloaded',
-  quantity: keyof Pick<TrialErrors, 'tracking' | 'torque'>, scale: number,
+  title: string,
+  results: readonly TrialResult[],
+  jointNames: readonly string[],
+  which: 'loaded' | 'unloaded',
+  quantity: keyof Pick<TrialErrors, 'tracking' | 'torque'>,
+  scale: number,
 ): string {
   const rows = jointNames.map((name, j) => [name, ...results.map((result) => show(scale * result[which][quantity][j]))])
   const overall = results.map((result) => {
@@ -25,14 +36,28 @@ function section(
 }
 
 function line(results: readonly TrialResult[]): string {
-  const rows = results.filter(({ link }) => link !== undefined).map(({ name, link, feedForward }) => {
-    const { predictions, batches: { accepted, rejected, stored }, skipped, failed } = link!
-    const { horizon, held, local, fallback, late } = feedForward!
-    const share = (100 * horizon) / Math.max(1, horizon + held + local + fallback)
-    return [name, String(predictions), `${accepted}/${rejected}/${stored}`, `${skipped}/${failed}/${late}`, `${share.toFixed(1)} %`]
-  })
+  const rows = results
+    .filter(({ link }) => link !== undefined)
+    .map(({ name, link, feedForward }) => {
+      const {
+        predictions,
+        batches: { accepted, rejected, stored },
+        skipped,
+        failed,
+      } = link!
+      const { horizon, held, local, fallback, late } = feedForward!
+      const share = (100 * horizon) / Math.max(1, horizon + held + local + fallback)
+      return [
+        name,
+        String(predictions),
+        `${accepted}/${rejected}/${stored}`,
+        `${skipped}/${failed}/${late}`,
+        `${share.toFixed(1)} %`,
+      ]
+    })
   return format('On the line', [
-    ['', 'predictions', 'batches accepted/rejected/stored', 'skipped/failed/late', 'cycles on predictions'], ...rows,
+    ['', 'predictions', 'batches accepted/rejected/stored', 'skipped/failed/late', 'cycles on predictions'],
+    ...rows,
   ])
 }
 

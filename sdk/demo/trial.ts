@@ -44,9 +44,15 @@ export interface TrialOptions {
 /** Runs a shift once. Stops early, with what was measured so far, when the signal is aborted. */
 export async function runTrial({ name, shift, seed, link, isRealtime, signal, onProgress }: TrialOptions): Promise<TrialResult> {
   const { motion, loads } = shift
-  const feedForward = link && createFeedForward({
-    joints: JOINTS, rampRate: alder7.limits.map((limit) => limit.torqueRate), holdCycles: 5, localSeconds: 0.5, returnCycles: 50,
-  })
+  const feedForward =
+    link &&
+    createFeedForward({
+      joints: JOINTS,
+      rampRate: alder7.limits.map((limit) => limit.torqueRate),
+      holdCycles: 5,
+      localSeconds: 0.5,
+      returnCycles: 50,
+    })
   const source = feedForward ? predictedTorque(alder7, feedForward) : nominalTorque(alder7)
   const cell = createCell({ arm: alder7, motion, source, seed, logRate: 50 })
   const [loaded, unloaded] = [createSums(), createSums()]
@@ -59,16 +65,19 @@ export async function runTrial({ name, shift, seed, link, isRealtime, signal, on
 
   function exchange(): Promise<void> {
     const [time, now] = [cell.motionTime, cell.now]
-    return link!.exchange(time, now).then(
-      (horizon) => {
-        if (horizon) feedForward!.accept(horizon, cell.motionTime, cell.now)
-      },
-      (error: unknown) => {
-        failure = error
-      },
-    ).then(() => {
-      pending = undefined
-    })
+    return link!
+      .exchange(time, now)
+      .then(
+        (horizon) => {
+          if (horizon) feedForward!.accept(horizon, cell.motionTime, cell.now)
+        },
+        (error: unknown) => {
+          failure = error
+        },
+      )
+      .then(() => {
+        pending = undefined
+      })
   }
 
   function handle(): void {
@@ -104,7 +113,13 @@ export async function runTrial({ name, shift, seed, link, isRealtime, signal, on
   }
   await pending
   if (failure !== undefined && !signal.aborted) throw failure
-  return { name, loaded: toErrors(loaded), unloaded: toErrors(unloaded), link: link?.counters, feedForward: feedForward?.counters }
+  return {
+    name,
+    loaded: toErrors(loaded),
+    unloaded: toErrors(unloaded),
+    link: link?.counters,
+    feedForward: feedForward?.counters,
+  }
 }
 
 interface Sums {

@@ -53,7 +53,14 @@ export const MOST_URDF_BYTES = 1_000_000
 // <robot><link><inertial><origin/> is four deep; vendors' extensions go a little further.
 const DEEPEST = 30
 
-const jointTypes: readonly string[] = ['revolute', 'continuous', 'prismatic', 'fixed', 'floating', 'planar'] satisfies UrdfJointType[]
+const jointTypes: readonly string[] = [
+  'revolute',
+  'continuous',
+  'prismatic',
+  'fixed',
+  'floating',
+  'planar',
+] satisfies UrdfJointType[]
 
 type Element = Record<string, unknown>
 
@@ -87,7 +94,8 @@ export function readUrdf(text: string): UrdfRobot {
 
 function parse(text: string): Element {
   const bytes = Buffer.byteLength(text)
-  if (bytes > MOST_URDF_BYTES) throw new UrdfError([`The file has ${bytes} bytes, at most ${MOST_URDF_BYTES} are read. Leave meshes out; refer to them.`])
+  if (bytes > MOST_URDF_BYTES)
+    throw new UrdfError([`The file has ${bytes} bytes, at most ${MOST_URDF_BYTES} are read. Leave meshes out; refer to them.`])
   // Before any parser sees it: a document type can define entities that expand without end, or name files.
   if (/<!DOCTYPE|<!ENTITY/i.test(text)) throw new UrdfError(['The file has a DOCTYPE. Remove it; a URDF needs none.'])
   if (/<xacro:|xmlns:xacro/i.test(text)) throw new UrdfError(['The file is a xacro template. Expand it to a URDF first.'])
@@ -96,8 +104,14 @@ function parse(text: string): Element {
   let document: Element
   try {
     document = new XMLParser({
-      ignoreAttributes: false, attributeNamePrefix: '@', parseTagValue: false, parseAttributeValue: false, ignoreDeclaration: true,
-      ignorePiTags: true, maxNestedTags: DEEPEST, isArray: (_name, _path, _isLeaf, isAttribute) => !isAttribute,
+      ignoreAttributes: false,
+      attributeNamePrefix: '@',
+      parseTagValue: false,
+      parseAttributeValue: false,
+      ignoreDeclaration: true,
+      ignorePiTags: true,
+      maxNestedTags: DEEPEST,
+      isArray: (_name, _path, _isLeaf, isAttribute) => !isAttribute,
     }).parse(text) as Element
   } catch (cause) {
     throw new UrdfError([`The file cannot be read as XML: ${(cause as Error).message}.`])
@@ -133,7 +147,8 @@ function readJoint(element: Element): UrdfJoint {
   const name = nameOf('joint', element)
   const what = `joint "${name}"`
   const type = String(element['@type'])
-  if (!jointTypes.includes(type)) throw new UrdfError([`${what}: type is "${shortened(type)}", expected one of ${jointTypes.join(', ')}.`])
+  if (!jointTypes.includes(type))
+    throw new UrdfError([`${what}: type is "${shortened(type)}", expected one of ${jointTypes.join(', ')}.`])
   const linkOf = (tag: 'parent' | 'child'): string => {
     const [found] = childrenOf(element, tag)
     if (typeof found?.['@link'] !== 'string') throw new UrdfError([`${what}: <${tag} link="…"/> is missing.`])
@@ -149,7 +164,7 @@ function readJoint(element: Element): UrdfJoint {
     parent: linkOf('parent'),
     child: linkOf('child'),
     placement: placementOf(what, element),
-    axis: axis === undefined ? [1, 0, 0] : vectorOf(`${what}: axis`, axis, 'xyz') ?? [1, 0, 0],
+    axis: axis === undefined ? [1, 0, 0] : (vectorOf(`${what}: axis`, axis, 'xyz') ?? [1, 0, 0]),
     lower: limitOf('lower'),
     upper: limitOf('upper'),
     effort: limitOf('effort'),
@@ -171,7 +186,7 @@ function placementOf(what: string, element: Element): Placement {
 function childrenOf(element: Element, tag: string): Element[] {
   const found = element[tag]
   if (!Array.isArray(found)) return []
-  return found.map((child: unknown) => (typeof child === 'object' && child !== null ? child as Element : {}))
+  return found.map((child: unknown) => (typeof child === 'object' && child !== null ? (child as Element) : {}))
 }
 
 function nameOf(tag: string, element: Element): string {

@@ -1,7 +1,22 @@
 import {
-  IDENTITY, compose, inertialFaults, inertialFromParameters, inertialParameters, multiplyRotations, transpose,
+  IDENTITY,
+  compose,
+  inertialFaults,
+  inertialFromParameters,
+  inertialParameters,
+  multiplyRotations,
+  transpose,
 } from '../../shared/dynamics/rigid-body/index.ts'
-import type { ChainDescription, ChainJoint, Inertial, InertialFault, JointKind, Matrix3, Placement, Vector3 } from '../../shared/dynamics/rigid-body/index.ts'
+import type {
+  ChainDescription,
+  ChainJoint,
+  Inertial,
+  InertialFault,
+  JointKind,
+  Matrix3,
+  Placement,
+  Vector3,
+} from '../../shared/dynamics/rigid-body/index.ts'
 import { readUrdf, UrdfError } from './urdf-reader.ts'
 import type { UrdfInertial, UrdfJoint, UrdfRobot } from './urdf-reader.ts'
 
@@ -79,7 +94,9 @@ export function importUrdf(text: string, choice: ChainChoice = {}): ImportedArm 
   if (joints.length === 0) throw new UrdfError([`Between "${base}" and "${tip}" no joint moves. Choose other links.`])
   const moving = path.filter(({ type }) => type !== 'fixed')
   return {
-    name: robot.name, base, tip,
+    name: robot.name,
+    base,
+    tip,
     chain: { joints, gravity: choice.gravity ?? [0, 0, -9.81], flange: along },
     joints: moving.map((joint) => limitsOf(joint, findings)),
     findings,
@@ -103,13 +120,20 @@ function treeOf({ links, joints }: UrdfRobot): Tree {
       if (!links.has(link)) faults.push(`joint "${joint.name}": there is no link "${link}".`)
     }
     const other = above.get(joint.child)
-    if (other) faults.push(`link "${joint.child}" hangs on two joints, "${other.name}" and "${joint.name}": closed loops cannot be described.`)
+    if (other)
+      faults.push(
+        `link "${joint.child}" hangs on two joints, "${other.name}" and "${joint.name}": closed loops cannot be described.`,
+      )
     above.set(joint.child, joint)
     below.set(joint.parent, [...(below.get(joint.parent) ?? []), joint])
   }
   const roots = [...links.keys()].filter((name) => !above.has(name))
   if (faults.length === 0 && roots.length !== 1) {
-    faults.push(roots.length === 0 ? 'Every link hangs on another: the joints form a loop.' : `The links ${list(roots)} hang on nothing: expected one root.`)
+    faults.push(
+      roots.length === 0
+        ? 'Every link hangs on another: the joints form a loop.'
+        : `The links ${list(roots)} hang on nothing: expected one root.`,
+    )
   }
   if (faults.length > 0) throw new UrdfError(faults)
   return { root: roots[0], above, below }
@@ -125,7 +149,9 @@ function onlyEnd({ links }: UrdfRobot, { below }: Tree, base: string): string {
     const onward = moving.length > 0 ? moving : joints
     if (onward.length === 0) return end
     if (onward.length > 1) {
-      throw new UrdfError([`At link "${end}" the robot branches to ${list(onward.map(({ child }) => child))}. Say which link carries the tool.`])
+      throw new UrdfError([
+        `At link "${end}" the robot branches to ${list(onward.map(({ child }) => child))}. Say which link carries the tool.`,
+      ])
     }
     end = onward[0].child
   }
@@ -146,10 +172,14 @@ function pathBetween({ links }: UrdfRobot, { above }: Tree, base: string, tip: s
   }
   const faults = path.flatMap((joint) => {
     if (joint.mimics !== undefined) {
-      return [`joint "${joint.name}" mimics "${joint.mimics}": coupled joints cannot be described. Choose a tip before it, or make it fixed.`]
+      return [
+        `joint "${joint.name}" mimics "${joint.mimics}": coupled joints cannot be described. Choose a tip before it.`,
+      ]
     }
     if (joint.type === 'floating' || joint.type === 'planar') {
-      return [`joint "${joint.name}" is ${joint.type}: an arm has revolute, continuous, prismatic and fixed joints. Choose a base after it.`]
+      return [
+        `joint "${joint.name}" is ${joint.type}: an arm has no such joint. Choose a base after it.`,
+      ]
     }
     return joint.type !== 'fixed' && joint.axis.every((value) => value === 0) ? [`joint "${joint.name}": axis is 0 0 0.`] : []
   })
@@ -172,27 +202,39 @@ function bodyOf(robot: UrdfRobot, { below }: Tree, link: string, next: UrdfJoint
       if (joint.type === 'fixed') visit(joint.child, compose(placement, joint.placement))
       else {
         findings.push({
-          kind: 'left_out', subject: joint.child, rule: 'branch',
-          message: `link "${joint.child}" moves by joint "${joint.name}" beside the chain: what hangs there is left out. Declare it as payload.`,
+          kind: 'left_out',
+          subject: joint.child,
+          rule: 'branch',
+          message: `link "${joint.child}" moves by "${joint.name}" beside the chain and is left out. Declare it as payload.`,
         })
       }
     }
   }
   visit(link, { position: [0, 0, 0], rotation: IDENTITY })
   if (sum[0] > 0) return inertialFromParameters(sum)
-  findings.push({ kind: 'missing', subject: link, rule: 'inertial', message: `link "${link}" has no mass, nor has anything fixed to it: give its inertial parameters.` })
+  findings.push({
+    kind: 'missing',
+    subject: link,
+    rule: 'inertial',
+    message: `link "${link}" has no mass, nor has anything fixed to it: give its inertial parameters.`,
+  })
   return { mass: 0, centerOfMass: [0, 0, 0], inertia: [0, 0, 0, 0, 0, 0] }
 }
 
 function report(link: string, { inertial }: UrdfInertial, findings: UrdfFinding[]): boolean {
   const faults = inertialFaults(inertial)
-  for (const { rule, message } of faults) findings.push({ kind: 'inconsistent', subject: link, rule, message: `link "${link}": ${message}.` })
+  for (const { rule, message } of faults)
+    findings.push({ kind: 'inconsistent', subject: link, rule, message: `link "${link}": ${message}.` })
   return faults.length === 0
 }
 
 function addParameters(sum: Float64Array, { placement: own, inertial }: UrdfInertial, link: Placement): void {
   const { position, rotation } = compose(link, own)
-  const parameters = inertialParameters({ mass: inertial.mass, centerOfMass: position, inertia: turned(rotation, inertial.inertia) })
+  const parameters = inertialParameters({
+    mass: inertial.mass,
+    centerOfMass: position,
+    inertia: turned(rotation, inertial.inertia),
+  })
   for (let k = 0; k < sum.length; k++) sum[k] += parameters[k]
 }
 
@@ -216,7 +258,11 @@ function limitsOf({ name, type, lower, upper, effort, velocity }: UrdfJoint, fin
   const kind = type as JointKind
   if (kind === 'continuous') return { name, kind, lower: undefined, upper: undefined, velocity: speed, torque }
   const hasRange = lower !== undefined && upper !== undefined && lower < upper
-  if (!hasRange) note('position_limits', `position limits are ${lower ?? 'missing'} to ${upper ?? 'missing'}, expected the lower below the upper. Fill them in.`)
+  if (!hasRange)
+    note(
+      'position_limits',
+      `position limits are ${lower ?? 'missing'} to ${upper ?? 'missing'}, expected the lower below the upper. Fill them in.`,
+    )
   return { name, kind, lower: hasRange ? lower : undefined, upper: hasRange ? upper : undefined, velocity: speed, torque }
 }
 

@@ -51,7 +51,8 @@ export function createController({ nominal, limits, tuning }: SimulatedArm, cycl
     for (let j = 0; j < n; j++) {
       velocity[j] += smoothing * ((position[j] - lastPosition[j]) / cycle - velocity[j])
       lastPosition[j] = position[j]
-      correction[j] = bandwidth * bandwidth * (desired.position[j] - position[j]) + 2 * bandwidth * (desired.velocity[j] - velocity[j])
+      correction[j] =
+        bandwidth * bandwidth * (desired.position[j] - position[j]) + 2 * bandwidth * (desired.velocity[j] - velocity[j])
     }
     massMatrix(chain, position, inertia)
     for (let i = 0; i < n; i++) {

@@ -142,5 +142,6 @@ function interpolate({ time, torque }: TorqueHorizon, at: number, out: Float64Ar
     else high = middle
   }
   const share = high === low ? 0 : (at - time[low]) / (time[high] - time[low])
-  for (let j = 0; j < joints; j++) out[j] = torque[low * joints + j] + share * (torque[high * joints + j] - torque[low * joints + j])
+  for (let j = 0; j < joints; j++)
+    out[j] = torque[low * joints + j] + share * (torque[high * joints + j] - torque[low * joints + j])
 }

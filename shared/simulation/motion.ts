@@ -33,7 +33,9 @@ export function multiSineMotion(arm: SimulatedArm, random: Random, duration: num
   const { middle, halfWidth } = arm.workspace
   const joints = middle.map((center, j) => {
     const waves = [0, 1, 2].map(() => ({
-      amplitude: 0.5 + random.uniform(), rate: 2 * Math.PI * pace * (0.02 + 0.07 * random.uniform()), phase: 2 * Math.PI * random.uniform(),
+      amplitude: 0.5 + random.uniform(),
+      rate: 2 * Math.PI * pace * (0.02 + 0.07 * random.uniform()),
+      phase: 2 * Math.PI * random.uniform(),
     }))
     const scale = halfWidth[j] / waves.reduce((sum, wave) => sum + wave.amplitude, 0)
     return { center, waves: waves.map((wave) => ({ ...wave, amplitude: wave.amplitude * scale })) }
@@ -83,10 +85,11 @@ interface Leg {
 export function pickMotion(arm: SimulatedArm, random: Random, duration: number, vigour = 1): Motion {
   const { middle, halfWidth } = arm.workspace
   const legs: Leg[] = []
-  const pose = (side: number): number[] => middle.map((center, j) => {
-    if (j === 0 && side !== 0) return center + side * halfWidth[0] * (0.3 + 0.7 * random.uniform())
-    return center + halfWidth[j] * (2 * random.uniform() - 1)
-  })
+  const pose = (side: number): number[] =>
+    middle.map((center, j) => {
+      if (j === 0 && side !== 0) return center + side * halfWidth[0] * (0.3 + 0.7 * random.uniform())
+      return center + halfWidth[j] * (2 * random.uniform() - 1)
+    })
   let end = 0.2
   let from: readonly number[] = [...middle]
   for (let leg = 0; end < duration; leg++) {
@@ -95,7 +98,11 @@ export function pickMotion(arm: SimulatedArm, random: Random, duration: number, 
     // Peaks of the quintic: 1.875 d/T and 5.774 d/T².
     const travel = to.reduce((longest, target, j) => {
       const distance = Math.abs(target - from[j])
-      return Math.max(longest, (1.875 * distance) / (0.8 * pace * arm.limits[j].velocity), Math.sqrt((5.774 * distance) / (4 * pace)))
+      return Math.max(
+        longest,
+        (1.875 * distance) / (0.8 * pace * arm.limits[j].velocity),
+        Math.sqrt((5.774 * distance) / (4 * pace)),
+      )
     }, 0.3)
     legs.push({ start: end, travel, from, to })
     end += travel + 0.1 + 0.15 * random.uniform()

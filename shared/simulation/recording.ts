@@ -28,7 +28,11 @@ export interface RecordOptions {
  *
  * @param motion  its whole duration is recorded, less the logger's window
  */
-export function recordMotion(arm: SimulatedArm, motion: Motion, { seed, rate = 50, payload, gripAfter, releaseAfter }: RecordOptions): SimulatedRecording {
+export function recordMotion(
+  arm: SimulatedArm,
+  motion: Motion,
+  { seed, rate = 50, payload, gripAfter, releaseAfter }: RecordOptions,
+): SimulatedRecording {
   const n = arm.limits.length
   const cell = createCell({ arm, motion, source: nominalTorque(arm), seed, logRate: rate })
   const gripAt = payload === undefined ? Infinity : gripAfter === undefined ? 0 : restAfter(motion, gripAfter)
@@ -62,7 +66,12 @@ export function restAfter(motion: Motion, time: number): number {
 }
 
 // Decimals that carry what the sensors and the logger's filter leave: 1e-5 rad, 1e-4 rad/s, 1e-3 rad/s², 1e-4 N·m.
-const columns = [['position', 'position', 5], ['velocity', 'velocity', 4], ['acceleration', 'acceleration', 3], ['effort', 'torque', 4]] as const
+const columns = [
+  ['position', 'position', 5],
+  ['velocity', 'velocity', 4],
+  ['acceleration', 'acceleration', 3],
+  ['effort', 'torque', 4],
+] as const
 
 /**
  * A recording as CSV: time in seconds, then position_<joint> of all joints, velocity_<joint>, acceleration_<joint> and
@@ -74,7 +83,8 @@ export function toCsv(recording: SimulatedRecording): string {
   const header = ['time', ...columns.flatMap(([title]) => jointNames.map((joint) => `${title}_${joint}`))].join(',')
   const lines = Array.from(time, (t, row) => {
     const cells = columns.flatMap(([, quantity, decimals]) =>
-      Array.from(recording[quantity].subarray(row * n, (row + 1) * n), (value) => value.toFixed(decimals)))
+      Array.from(recording[quantity].subarray(row * n, (row + 1) * n), (value) => value.toFixed(decimals)),
+    )
     return `${t.toFixed(3)},${cells.join(',')}`
   })
   return `${header}\n${lines.join('\n')}\n`

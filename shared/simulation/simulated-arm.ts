@@ -32,8 +32,8 @@ export interface SimulatedArm {
   readonly limits: readonly JointLimits[]
   readonly truth: ArmTruth
   /** Of the joint controller: bandwidth of its feedback (rad/s), and a spring on top of it, against friction (N·m/rad). */
-  readonly tuning: { readonly bandwidth: number, readonly stiffness: readonly number[] }
+  readonly tuning: { readonly bandwidth: number; readonly stiffness: readonly number[] }
   readonly fallback: Fallback
   /** Where motions are: middle and half width of the box of positions they visit, rad. */
-  readonly workspace: { readonly middle: readonly number[], readonly halfWidth: readonly number[] }
+  readonly workspace: { readonly middle: readonly number[]; readonly halfWidth: readonly number[] }
 }

@@ -1,6 +1,11 @@
 import type { Random } from '../dynamics/random.ts'
 import {
-  attachPayload, createChain, detachPayload, forwardDynamics, jointFriction, jointFrictionSlope,
+  attachPayload,
+  createChain,
+  detachPayload,
+  forwardDynamics,
+  jointFriction,
+  jointFrictionSlope,
 } from '../dynamics/rigid-body/index.ts'
 import type { Payload } from '../dynamics/rigid-body/index.ts'
 import { checkLength } from '../dynamics/shape-error.ts'

@@ -6,9 +6,21 @@ import { beforeAll, describe, expect, it } from 'vitest'
 import { createRandom } from '../../shared/dynamics/random.ts'
 import type { Random } from '../../shared/dynamics/random.ts'
 import {
-  attachPayload, createChain, detachPayload, inverseDynamics, massMatrix, rotationFromRollPitchYaw,
+  attachPayload,
+  createChain,
+  detachPayload,
+  inverseDynamics,
+  massMatrix,
+  rotationFromRollPitchYaw,
 } from '../../shared/dynamics/rigid-body/index.ts'
-import type { ChainDescription, ChainJoint, Inertial, JointKind, Matrix3, Vector3 } from '../../shared/dynamics/rigid-body/index.ts'
+import type {
+  ChainDescription,
+  ChainJoint,
+  Inertial,
+  JointKind,
+  Matrix3,
+  Vector3,
+} from '../../shared/dynamics/rigid-body/index.ts'
 import { alder7 } from '../../shared/simulation/alder-7.ts'
 
 // Both sides work in doubles over a few hundred operations; MuJoCo stores orientations as quaternions.
@@ -21,7 +33,7 @@ const GIVEN_BY_ENTRIES = 1e-9
 let mujoco: MainModule & { FS: { writeFile(path: string, content: string): void } }
 
 beforeAll(async () => {
-  mujoco = await loadMujoco() as unknown as typeof mujoco
+  mujoco = (await loadMujoco()) as unknown as typeof mujoco
 })
 
 describe('inverse dynamics against MuJoCo', () => {
@@ -152,17 +164,22 @@ function openArm({ description, bodies }: RandomChain, payload?: Body): Referenc
 
 function mjcf(description: ChainDescription, bodies: (Body | Inertial)[], payload?: Body): string {
   const tail = payload === undefined ? '' : `<body ${placement(description.flange)}>${inertial(payload)}</body>`
-  const arm = description.joints.reduceRight((inner, joint, i) => `<body ${placement(joint.offset)}>
+  const arm = description.joints.reduceRight(
+    (inner, joint, i) => `<body ${placement(joint.offset)}>
     <joint type="${joint.kind === 'prismatic' ? 'slide' : 'hinge'}" pos="0 0 0" axis="${joint.axis.join(' ')}"/>
-    ${inertial(bodies[i])}${inner}</body>`, tail)
-  return `<mujoco><compiler angle="radian"/><option gravity="${description.gravity.join(' ')}"/><worldbody>${arm}</worldbody></mujoco>`
+    ${inertial(bodies[i])}${inner}</body>`,
+    tail,
+  )
+  const settings = `<compiler angle="radian"/><option gravity="${description.gravity.join(' ')}"/>`
+  return `<mujoco>${settings}<worldbody>${arm}</worldbody></mujoco>`
 }
 
 // Principal moments and axes where known: the six entries MuJoCo diagonalises itself, to a few parts in 1e9 only.
 function inertial(body: Body | Inertial): string {
   if ('inertia' in body) {
     const [xx, xy, xz, yy, yz, zz] = body.inertia
-    return `<inertial mass="${body.mass}" pos="${body.centerOfMass.join(' ')}" fullinertia="${[xx, yy, zz, xy, xz, yz].join(' ')}"/>`
+    const entries = [xx, yy, zz, xy, xz, yz].join(' ')
+    return `<inertial mass="${body.mass}" pos="${body.centerOfMass.join(' ')}" fullinertia="${entries}"/>`
   }
   const { mass, centerOfMass, moments, axes } = body
   return `<inertial mass="${mass}" diaginertia="${moments.join(' ')}" ${placement({ position: centerOfMass, rotation: axes })}/>`

@@ -10,14 +10,18 @@ const published = [74.69616155, -33.06766016, -3.23057314]
 
 // Frames of the links at home, in the base frame: each M(i, i+1) of the example multiplied out.
 const turned: Matrix3 = [0, 0, 1, 0, 1, 0, -1, 0, 0]
-const home: { position: Vector3, rotation: Matrix3 }[] = [
+const home: { position: Vector3; rotation: Matrix3 }[] = [
   { position: [0, 0, 0.089159], rotation: IDENTITY },
   { position: [0.28, 0.13585, 0.089159], rotation: turned },
   { position: [0.28 + 0.395, 0.13585 - 0.1197, 0.089159], rotation: turned },
   { position: [0.28 + 0.395 + 0.14225, 0.13585 - 0.1197, 0.089159], rotation: turned },
 ]
 const mass = [3.7, 8.393, 2.275]
-const inertia: Vector3[] = [[0.010267, 0.010267, 0.00666], [0.22689, 0.22689, 0.0151074], [0.0494433, 0.0494433, 0.004095]]
+const inertia: Vector3[] = [
+  [0.010267, 0.010267, 0.00666],
+  [0.22689, 0.22689, 0.0151074],
+  [0.0494433, 0.0494433, 0.004095],
+]
 const screws = [
   { angular: [1, 0, 1], linear: [0, 1, 0] },
   { angular: [0, 1, 0], linear: [-0.089, 0, 0] },
@@ -47,7 +51,9 @@ function threeLinks(): ChainDescription {
   })
   return {
     joints: screws.map(({ angular }, i) => ({
-      name: `joint_${i + 1}`, kind: 'revolute', axis: angular as unknown as Vector3,
+      name: `joint_${i + 1}`,
+      kind: 'revolute',
+      axis: angular as unknown as Vector3,
       offset: { position: i === 0 ? origins[0] : subtract(origins[i], origins[i - 1]), rotation: IDENTITY },
       inertial: {
         mass: mass[i],
@@ -62,7 +68,8 @@ function threeLinks(): ChainDescription {
 
 function turn(rotation: Matrix3, diagonal: Vector3): [number, number, number, number, number, number] {
   const columns = transpose(rotation)
-  const entry = (r: number, c: number): number => diagonal.reduce((sum, moment, k) => sum + columns[3 * k + r] * moment * columns[3 * k + c], 0)
+  const entry = (r: number, c: number): number =>
+    diagonal.reduce((sum, moment, k) => sum + columns[3 * k + r] * moment * columns[3 * k + c], 0)
   return [entry(0, 0), entry(0, 1), entry(0, 2), entry(1, 1), entry(1, 2), entry(2, 2)]
 }
 

@@ -33,7 +33,7 @@ const mixed = `<robot name="mixed">
 let mujoco: MainModule & { FS: { writeFile(path: string, content: string): void } }
 
 beforeAll(async () => {
-  mujoco = await loadMujoco() as unknown as typeof mujoco
+  mujoco = (await loadMujoco()) as unknown as typeof mujoco
 })
 
 describe('a URDF read by us and by MuJoCo', () => {

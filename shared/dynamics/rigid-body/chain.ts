@@ -46,7 +46,7 @@ export interface ChainDescription {
 /** No rotation. */
 export const IDENTITY: Matrix3 = [1, 0, 0, 0, 1, 0, 0, 0, 1]
 
-/** Parameters of a link that torque is linear in: m, m·c (3), and the inertia about the link's origin (xx, xy, xz, yy, yz, zz). */
+/** Parameters of a link that torque is linear in: m, m·c (3), inertia about the link's origin (xx, xy, xz, yy, yz, zz). */
 export const PARAMETERS_PER_LINK = 10
 
 /**
@@ -78,7 +78,7 @@ export interface Chain {
   readonly work: ChainWork
 }
 
-/** Work arrays of a chain. Vectors are in the frames of the links they belong to; row i + 1 belongs to link i, row 0 to the base. */
+/** Work arrays of a chain. Vectors are in their links' frames; row i + 1 belongs to link i, row 0 to the base. */
 export interface ChainWork {
   readonly trig: Float64Array
   /** n × 9, from link to the link before. */
@@ -105,7 +105,7 @@ export interface ChainWork {
  * Makes a chain ready for evaluation.
  *
  * @param description  n ≥ 1 joints; axes are normalised here
- * @throws {RangeError} there is no joint, an axis is zero, a rotation is not orthonormal, a mass is negative, or a number is not finite
+ * @throws {RangeError} no joint, an axis that is zero, a rotation that is not orthonormal, a negative mass, a number not finite
  */
 export function createChain(description: ChainDescription): Chain {
   const size = description.joints.length
@@ -157,11 +157,21 @@ export function inertialParameters(inertial: Inertial, name = 'inertial'): Float
   requireVector(`${name}: centre of mass`, centerOfMass)
   checkLength(`${name}: inertia`, inertia.length, 6, 'xx, xy, xz, yy, yz, zz')
   if (!(mass >= 0) || !Number.isFinite(mass)) throw new RangeError(`${name}: mass is ${mass}, expected a number ≥ 0`)
-  if (!inertia.every(Number.isFinite)) throw new RangeError(`${name}: inertia has a value that is not a finite number: ${inertia.join(', ')}`)
+  if (!inertia.every(Number.isFinite))
+    throw new RangeError(`${name}: inertia has a value that is not a finite number: ${inertia.join(', ')}`)
   const [x, y, z] = centerOfMass
-  return Float64Array.of(mass, mass * x, mass * y, mass * z,
-    inertia[0] + mass * (y * y + z * z), inertia[1] - mass * x * y, inertia[2] - mass * x * z,
-    inertia[3] + mass * (x * x + z * z), inertia[4] - mass * y * z, inertia[5] + mass * (x * x + y * y))
+  return Float64Array.of(
+    mass,
+    mass * x,
+    mass * y,
+    mass * z,
+    inertia[0] + mass * (y * y + z * z),
+    inertia[1] - mass * x * y,
+    inertia[2] - mass * x * z,
+    inertia[3] + mass * (x * x + z * z),
+    inertia[4] - mass * y * z,
+    inertia[5] + mass * (x * x + y * y),
+  )
 }
 
 /**
@@ -180,8 +190,14 @@ export function inertialFromParameters(parameters: Float64Array, at = 0): Inerti
   return {
     mass,
     centerOfMass: [x, y, z],
-    inertia: [parameters[at + 4] - mass * (y * y + z * z), parameters[at + 5] + mass * x * y, parameters[at + 6] + mass * x * z,
-      parameters[at + 7] - mass * (x * x + z * z), parameters[at + 8] + mass * y * z, parameters[at + 9] - mass * (x * x + y * y)],
+    inertia: [
+      parameters[at + 4] - mass * (y * y + z * z),
+      parameters[at + 5] + mass * x * y,
+      parameters[at + 6] + mass * x * z,
+      parameters[at + 7] - mass * (x * x + z * z),
+      parameters[at + 8] + mass * y * z,
+      parameters[at + 9] - mass * (x * x + y * y),
+    ],
   }
 }
 
@@ -224,13 +240,15 @@ function turnMatrices(fixed: Matrix3, [x, y, z]: Vector3): Float64Array {
 function unitAxis(name: string, axis: Vector3): Vector3 {
   requireVector(`${name}: axis`, axis)
   const length = Math.sqrt(axis[0] * axis[0] + axis[1] * axis[1] + axis[2] * axis[2])
-  if (length < 1e-9) throw new RangeError(`${name}: axis has length zero, give the direction that positive motion turns about or slides along`)
+  if (length < 1e-9)
+    throw new RangeError(`${name}: axis has length zero, give the direction that positive motion turns about or slides along`)
   return [axis[0] / length, axis[1] / length, axis[2] / length]
 }
 
 function requireVector(name: string, vector: Vector3): void {
   checkLength(name, vector.length, 3, 'x, y, z')
-  if (!vector.every(Number.isFinite)) throw new RangeError(`${name} has a value that is not a finite number: ${vector.join(', ')}`)
+  if (!vector.every(Number.isFinite))
+    throw new RangeError(`${name} has a value that is not a finite number: ${vector.join(', ')}`)
 }
 
 function requirePlacement(name: string, { position, rotation }: Placement): void {
@@ -238,9 +256,12 @@ function requirePlacement(name: string, { position, rotation }: Placement): void
   checkLength(`${name}: rotation`, rotation.length, 9, '3 × 3')
   for (let r = 0; r < 3; r++) {
     for (let s = r; s < 3; s++) {
-      const dot = rotation[3 * r] * rotation[3 * s] + rotation[3 * r + 1] * rotation[3 * s + 1] + rotation[3 * r + 2] * rotation[3 * s + 2]
+      const dot =
+        rotation[3 * r] * rotation[3 * s] + rotation[3 * r + 1] * rotation[3 * s + 1] + rotation[3 * r + 2] * rotation[3 * s + 2]
       if (!(Math.abs(dot - (r === s ? 1 : 0)) < 1e-6)) {
-        throw new RangeError(`${name}: rotation is not orthonormal: rows ${r} and ${s} have the product ${dot}, expected ${r === s ? 1 : 0}`)
+        throw new RangeError(
+          `${name}: rotation is not orthonormal: rows ${r} and ${s} have the product ${dot}, expected ${r === s ? 1 : 0}`,
+        )
       }
     }
   }

@@ -26,7 +26,10 @@ export function inertialFaults({ mass, centerOfMass, inertia }: Inertial): Inert
   if (!(a > 0)) faults.push({ rule: 'positive_definite', message: `${moments}, expected all above 0` })
   // Room for values that were rounded to a few digits where a thin rod meets the bound exactly.
   else if (c > (a + b) * (1 + 1e-6)) {
-    faults.push({ rule: 'triangle_inequality', message: `${moments}: the largest is above the sum of the others, ${(a + b).toPrecision(4)}` })
+    faults.push({
+      rule: 'triangle_inequality',
+      message: `${moments}: the largest is above the sum of the others, ${(a + b).toPrecision(4)}`,
+    })
   }
   return faults
 }
@@ -42,7 +45,12 @@ export function principalMoments([xx, xy, xz, yy, yz, zz]: Inertial['inertia']):
   const scale = Math.abs(xx) + Math.abs(yy) + Math.abs(zz) + Math.abs(xy) + Math.abs(xz) + Math.abs(yz)
   for (let sweep = 0; sweep < 30; sweep++) {
     if (Math.abs(m[1]) + Math.abs(m[2]) + Math.abs(m[5]) <= 1e-16 * scale) break
-    for (const [p, q] of [[0, 1], [0, 2], [1, 2]]) annihilate(m, p, q)
+    for (const [p, q] of [
+      [0, 1],
+      [0, 2],
+      [1, 2],
+    ])
+      annihilate(m, p, q)
   }
   const [a, b, c] = [m[0], m[4], m[8]].sort((left, right) => left - right)
   return [a, b, c]

@@ -6,7 +6,7 @@ import { placeLinks, requireState, torquesOfMotion } from './inverse-dynamics.ts
  * The joint-space mass matrix M(q), with the payload that is attached.
  *
  * @param q    position, length n
- * @param out  out, n × n, row-major, symmetric to the bit, positive definite when every link that a joint moves has mass; overwritten
+ * @param out  out, n × n, row-major, overwritten; symmetric to the bit, positive definite when every joint moves mass
  * @throws {ShapeError} a length is wrong
  * Source: a column is the torque of unit acceleration of one joint, at rest, without gravity (Walker & Orin 1982, method 1).
  */
@@ -30,7 +30,12 @@ export function massMatrix(chain: Chain, q: Float64Array, out: Float64Array): vo
  * Source: M q̈ = τ − τ(q, q̇, 0), solved by Cholesky factors.
  */
 export function forwardDynamics(
-  chain: Chain, q: Float64Array, qd: Float64Array, tau: Float64Array, qdd: Float64Array, damping?: Float64Array,
+  chain: Chain,
+  q: Float64Array,
+  qd: Float64Array,
+  tau: Float64Array,
+  qdd: Float64Array,
+  damping?: Float64Array,
 ): void {
   requireState(chain, q, qd, tau)
   checkLength('qdd', qdd.length, chain.size, 'one per joint')
@@ -71,7 +76,8 @@ export function solvePositiveDefinite(a: Float64Array, size: number, b: Float64A
   for (let j = 0; j < size; j++) {
     let pivot = a[size * j + j]
     for (let k = 0; k < j; k++) pivot -= a[size * j + k] * a[size * j + k]
-    if (!(pivot > 0)) throw new RangeError(`mass matrix: not positive definite at joint ${j} (pivot ${pivot}); does it move any mass?`)
+    if (!(pivot > 0))
+      throw new RangeError(`mass matrix: not positive definite at joint ${j} (pivot ${pivot}); does it move any mass?`)
     const diagonal = Math.sqrt(pivot)
     a[size * j + j] = diagonal
     for (let i = j + 1; i < size; i++) {

@@ -38,7 +38,10 @@ export function jointFriction({ viscous, coulomb, stribeck, stribeckVelocity, sm
 }
 
 /** Derivative of {@link jointFriction} with respect to velocity; negative where the Stribeck part falls. */
-export function jointFrictionSlope({ viscous, coulomb, stribeck, stribeckVelocity, smoothing }: JointFriction, v: number): number {
+export function jointFrictionSlope(
+  { viscous, coulomb, stribeck, stribeckVelocity, smoothing }: JointFriction,
+  v: number,
+): number {
   const ratio = v / stribeckVelocity
   const fading = stribeck * exp(-ratio * ratio)
   const sign = tanh(v / smoothing)

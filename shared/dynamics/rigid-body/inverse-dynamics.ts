@@ -22,7 +22,12 @@ export interface TorqueTerms {
  * parameters about the links' origins, in which torque is linear.
  */
 export function inverseDynamics(
-  chain: Chain, q: Float64Array, qd: Float64Array, qdd: Float64Array, tau: Float64Array, wrench?: Float64Array,
+  chain: Chain,
+  q: Float64Array,
+  qd: Float64Array,
+  qdd: Float64Array,
+  tau: Float64Array,
+  wrench?: Float64Array,
 ): void {
   requireState(chain, q, qd, qdd)
   checkLength('tau', tau.length, chain.size, 'one per joint')
@@ -108,25 +113,49 @@ export function moveLinks(chain: Chain, qd: Float64Array, qdd: Float64Array, gra
     const b = 3 * i
     const o = b + 3
     const r = 9 * i
-    const r0 = rotation[r], r1 = rotation[r + 1], r2 = rotation[r + 2]
-    const r3 = rotation[r + 3], r4 = rotation[r + 4], r5 = rotation[r + 5]
-    const r6 = rotation[r + 6], r7 = rotation[r + 7], r8 = rotation[r + 8]
-    const wx = w[b], wy = w[b + 1], wz = w[b + 2]
-    const dx = dw[b], dy = dw[b + 1], dz = dw[b + 2]
-    const px = offset[b], py = offset[b + 1], pz = offset[b + 2]
+    const r0 = rotation[r],
+      r1 = rotation[r + 1],
+      r2 = rotation[r + 2]
+    const r3 = rotation[r + 3],
+      r4 = rotation[r + 4],
+      r5 = rotation[r + 5]
+    const r6 = rotation[r + 6],
+      r7 = rotation[r + 7],
+      r8 = rotation[r + 8]
+    const wx = w[b],
+      wy = w[b + 1],
+      wz = w[b + 2]
+    const dx = dw[b],
+      dy = dw[b + 1],
+      dz = dw[b + 2]
+    const px = offset[b],
+      py = offset[b + 1],
+      pz = offset[b + 2]
     // ω × p, then acceleration of the link's origin: a + ω̇ × p + ω × (ω × p)
-    const ux = wy * pz - wz * py, uy = wz * px - wx * pz, uz = wx * py - wy * px
+    const ux = wy * pz - wz * py,
+      uy = wz * px - wx * pz,
+      uz = wx * py - wy * px
     const sx = a[b] + dy * pz - dz * py + wy * uz - wz * uy
     const sy = a[b + 1] + dz * px - dx * pz + wz * ux - wx * uz
     const sz = a[b + 2] + dx * py - dy * px + wx * uy - wy * ux
-    const nwx = r0 * wx + r3 * wy + r6 * wz, nwy = r1 * wx + r4 * wy + r7 * wz, nwz = r2 * wx + r5 * wy + r8 * wz
-    const ndx = r0 * dx + r3 * dy + r6 * dz, ndy = r1 * dx + r4 * dy + r7 * dz, ndz = r2 * dx + r5 * dy + r8 * dz
-    const nax = r0 * sx + r3 * sy + r6 * sz, nay = r1 * sx + r4 * sy + r7 * sz, naz = r2 * sx + r5 * sy + r8 * sz
+    const nwx = r0 * wx + r3 * wy + r6 * wz,
+      nwy = r1 * wx + r4 * wy + r7 * wz,
+      nwz = r2 * wx + r5 * wy + r8 * wz
+    const ndx = r0 * dx + r3 * dy + r6 * dz,
+      ndy = r1 * dx + r4 * dy + r7 * dz,
+      ndz = r2 * dx + r5 * dy + r8 * dz
+    const nax = r0 * sx + r3 * sy + r6 * sz,
+      nay = r1 * sx + r4 * sy + r7 * sz,
+      naz = r2 * sx + r5 * sy + r8 * sz
     const v = qd[i]
     const c = qdd[i]
-    const ex = axis[b], ey = axis[b + 1], ez = axis[b + 2]
+    const ex = axis[b],
+      ey = axis[b + 1],
+      ez = axis[b + 2]
     // ω × e q̇: what the moving frame adds to the joint's own acceleration
-    const mx = (nwy * ez - nwz * ey) * v, my = (nwz * ex - nwx * ez) * v, mz = (nwx * ey - nwy * ex) * v
+    const mx = (nwy * ez - nwz * ey) * v,
+      my = (nwz * ex - nwx * ez) * v,
+      mz = (nwx * ey - nwy * ex) * v
     if (slides[i] === 1) {
       w[o] = nwx
       w[o + 1] = nwy
@@ -153,7 +182,12 @@ export function moveLinks(chain: Chain, qd: Float64Array, qdd: Float64Array, gra
 
 /** Torques of a motion of links already placed; trusts lengths. See {@link inverseDynamics}. */
 export function torquesOfMotion(
-  chain: Chain, qd: Float64Array, qdd: Float64Array, gravity: Float64Array, tau: Float64Array, wrench?: Float64Array,
+  chain: Chain,
+  qd: Float64Array,
+  qdd: Float64Array,
+  gravity: Float64Array,
+  tau: Float64Array,
+  wrench?: Float64Array,
 ): void {
   const { size, parameters } = chain
   const { angularVelocity: w, angularAcceleration: dw, acceleration: a, force, moment } = chain.work
@@ -161,17 +195,34 @@ export function torquesOfMotion(
   for (let i = 0; i < size; i++) {
     const o = 3 * i + 3
     const p = 10 * i
-    const m = parameters[p], hx = parameters[p + 1], hy = parameters[p + 2], hz = parameters[p + 3]
-    const xx = parameters[p + 4], xy = parameters[p + 5], xz = parameters[p + 6]
-    const yy = parameters[p + 7], yz = parameters[p + 8], zz = parameters[p + 9]
-    const wx = w[o], wy = w[o + 1], wz = w[o + 2]
-    const dx = dw[o], dy = dw[o + 1], dz = dw[o + 2]
-    const ax = a[o], ay = a[o + 1], az = a[o + 2]
-    const ux = wy * hz - wz * hy, uy = wz * hx - wx * hz, uz = wx * hy - wy * hx
+    const m = parameters[p],
+      hx = parameters[p + 1],
+      hy = parameters[p + 2],
+      hz = parameters[p + 3]
+    const xx = parameters[p + 4],
+      xy = parameters[p + 5],
+      xz = parameters[p + 6]
+    const yy = parameters[p + 7],
+      yz = parameters[p + 8],
+      zz = parameters[p + 9]
+    const wx = w[o],
+      wy = w[o + 1],
+      wz = w[o + 2]
+    const dx = dw[o],
+      dy = dw[o + 1],
+      dz = dw[o + 2]
+    const ax = a[o],
+      ay = a[o + 1],
+      az = a[o + 2]
+    const ux = wy * hz - wz * hy,
+      uy = wz * hx - wx * hz,
+      uz = wx * hy - wy * hx
     force[o] = m * ax + dy * hz - dz * hy + wy * uz - wz * uy
     force[o + 1] = m * ay + dz * hx - dx * hz + wz * ux - wx * uz
     force[o + 2] = m * az + dx * hy - dy * hx + wx * uy - wy * ux
-    const lx = xx * wx + xy * wy + xz * wz, ly = xy * wx + yy * wy + yz * wz, lz = xz * wx + yz * wy + zz * wz
+    const lx = xx * wx + xy * wy + xz * wz,
+      ly = xy * wx + yy * wy + yz * wz,
+      lz = xz * wx + yz * wy + zz * wz
     moment[o] = xx * dx + xy * dy + xz * dz + wy * lz - wz * ly + hy * az - hz * ay
     moment[o + 1] = xy * dx + yy * dy + yz * dz + wz * lx - wx * lz + hz * ax - hx * az
     moment[o + 2] = xz * dx + yz * dy + zz * dz + wx * ly - wy * lx + hx * ay - hy * ax
@@ -187,16 +238,24 @@ function gatherTorques(chain: Chain, tau: Float64Array): void {
   for (let i = size - 1; i >= 0; i--) {
     const b = 3 * i
     const o = b + 3
-    const fx = force[o], fy = force[o + 1], fz = force[o + 2]
-    const nx = moment[o], ny = moment[o + 1], nz = moment[o + 2]
-    const ex = axis[b], ey = axis[b + 1], ez = axis[b + 2]
+    const fx = force[o],
+      fy = force[o + 1],
+      fz = force[o + 2]
+    const nx = moment[o],
+      ny = moment[o + 1],
+      nz = moment[o + 2]
+    const ex = axis[b],
+      ey = axis[b + 1],
+      ez = axis[b + 2]
     tau[i] = slides[i] === 1 ? ex * fx + ey * fy + ez * fz : ex * nx + ey * ny + ez * nz
     if (i === 0) break
     const r = 9 * i
     const gx = rotation[r] * fx + rotation[r + 1] * fy + rotation[r + 2] * fz
     const gy = rotation[r + 3] * fx + rotation[r + 4] * fy + rotation[r + 5] * fz
     const gz = rotation[r + 6] * fx + rotation[r + 7] * fy + rotation[r + 8] * fz
-    const px = offset[b], py = offset[b + 1], pz = offset[b + 2]
+    const px = offset[b],
+      py = offset[b + 1],
+      pz = offset[b + 2]
     force[b] = force[b] + gx
     force[b + 1] = force[b + 1] + gy
     force[b + 2] = force[b + 2] + gz
@@ -210,8 +269,12 @@ function addFlangeWrench(chain: Chain, wrench: Float64Array): void {
   const { size, flangeRotation: r, flangeOrigin: p } = chain
   const { force, moment } = chain.work
   const o = 3 * size
-  const nx = wrench[0], ny = wrench[1], nz = wrench[2]
-  const fx = wrench[3], fy = wrench[4], fz = wrench[5]
+  const nx = wrench[0],
+    ny = wrench[1],
+    nz = wrench[2]
+  const fx = wrench[3],
+    fy = wrench[4],
+    fz = wrench[5]
   const gx = r[0] * fx + r[1] * fy + r[2] * fz
   const gy = r[3] * fx + r[4] * fy + r[5] * fz
   const gz = r[6] * fx + r[7] * fy + r[8] * fz

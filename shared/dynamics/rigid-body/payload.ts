@@ -22,11 +22,14 @@ export function attachPayload(chain: Chain, payload: Payload): void {
   const own = inertialParameters({ mass: payload.mass, centerOfMass: [0, 0, 0], inertia: payload.inertia ?? POINT }, 'payload')
   const [cx, cy, cz] = payload.centerOfMass
   const place = (k: number): number => flangeOrigin[k] + r[3 * k] * cx + r[3 * k + 1] * cy + r[3 * k + 2] * cz
-  const added = inertialParameters({
-    mass: payload.mass,
-    centerOfMass: [place(0), place(1), place(2)],
-    inertia: rotateInertia(r, own),
-  }, 'payload')
+  const added = inertialParameters(
+    {
+      mass: payload.mass,
+      centerOfMass: [place(0), place(1), place(2)],
+      inertia: rotateInertia(r, own),
+    },
+    'payload',
+  )
   const at = PARAMETERS_PER_LINK * (chain.size - 1)
   for (let k = 0; k < PARAMETERS_PER_LINK; k++) chain.parameters[at + k] = chain.linkParameters[at + k] + added[k]
 }
@@ -38,8 +41,17 @@ export function detachPayload(chain: Chain): void {
 
 // R · I · Rᵀ of the inertia in parameters 4 to 9.
 function rotateInertia(r: Float64Array, parameters: Float64Array): Inertial['inertia'] {
-  const inertia = [parameters[4], parameters[5], parameters[6], parameters[5], parameters[7], parameters[8],
-    parameters[6], parameters[8], parameters[9]]
+  const inertia = [
+    parameters[4],
+    parameters[5],
+    parameters[6],
+    parameters[5],
+    parameters[7],
+    parameters[8],
+    parameters[6],
+    parameters[8],
+    parameters[9],
+  ]
   const entry = (row: number, column: number): number => {
     let sum = 0
     for (let j = 0; j < 3; j++) for (let k = 0; k < 3; k++) sum += r[3 * row + j] * inertia[3 * j + k] * r[3 * column + k]

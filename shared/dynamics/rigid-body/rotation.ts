@@ -6,10 +6,23 @@ import type { Matrix3, Placement, Vector3 } from './chain.ts'
  * @param roll   rad; pitch and yaw likewise
  */
 export function rotationFromRollPitchYaw(roll: number, pitch: number, yaw: number): Matrix3 {
-  const sr = Math.sin(roll), cr = Math.cos(roll)
-  const sp = Math.sin(pitch), cp = Math.cos(pitch)
-  const sy = Math.sin(yaw), cy = Math.cos(yaw)
-  return [cy * cp, cy * sp * sr - sy * cr, cy * sp * cr + sy * sr, sy * cp, sy * sp * sr + cy * cr, sy * sp * cr - cy * sr, -sp, cp * sr, cp * cr]
+  const sr = Math.sin(roll),
+    cr = Math.cos(roll)
+  const sp = Math.sin(pitch),
+    cp = Math.cos(pitch)
+  const sy = Math.sin(yaw),
+    cy = Math.cos(yaw)
+  return [
+    cy * cp,
+    cy * sp * sr - sy * cr,
+    cy * sp * cr + sy * sr,
+    sy * cp,
+    sy * sp * sr + cy * cr,
+    sy * sp * cr - cy * sr,
+    -sp,
+    cp * sr,
+    cp * cr,
+  ]
 }
 
 /** a · b. */

@@ -5,7 +5,7 @@
 // (Cody & Waite, Software Manual for the Elementary Functions, 1980; the split is fdlibm's, e_rem_pio2.c).
 const TWO_OVER_PI = 6.36619772367581382433e-1
 const HALF_PI_1 = 1.57079632673412561417
-const HALF_PI_2 = 6.07710050630396597660e-11
+const HALF_PI_2 = 6.0771005063039659766e-11
 const HALF_PI_3 = 2.02226624879595063154e-21
 
 /** Largest |angle| that {@link sineCosine} reduces accurately: beyond it the quotient no longer fits the split of π/2. */
@@ -36,11 +36,20 @@ export function sineCosine(angles: Float64Array, index: number, out: Float64Arra
   const tail = middle - x - correction
   const z = x * x
   const cube = z * x
-  const sinePolynomial = 8.33333333332248946124e-3 + z * (-1.98412698298579493134e-4 + z * (2.75573137070700676789e-6
-    + z * (-2.50507602534068634195e-8 + z * 1.58969099521155010221e-10)))
+  const sinePolynomial =
+    8.33333333332248946124e-3 +
+    z *
+      (-1.98412698298579493134e-4 +
+        z * (2.75573137070700676789e-6 + z * (-2.50507602534068634195e-8 + z * 1.58969099521155010221e-10)))
   const sine = x - (z * (0.5 * tail - cube * sinePolynomial) - tail - cube * -1.66666666666666324348e-1)
-  const cosinePolynomial = z * (4.16666666666666019037e-2 + z * (-1.38888888888741095749e-3 + z * (2.48015872894767294178e-5
-    + z * (-2.75573143513906633035e-7 + z * (2.08757232129817482790e-9 + z * -1.13596475577881948265e-11)))))
+  const cosinePolynomial =
+    z *
+    (4.16666666666666019037e-2 +
+      z *
+        (-1.38888888888741095749e-3 +
+          z *
+            (2.48015872894767294178e-5 +
+              z * (-2.75573143513906633035e-7 + z * (2.0875723212981748279e-9 + z * -1.13596475577881948265e-11)))))
   const half = 0.5 * z
   const near = 1 - half
   const cosine = near + (1 - near - half + (z * cosinePolynomial - x * tail))

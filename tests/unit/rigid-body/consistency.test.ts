@@ -6,7 +6,7 @@ import { exampleChain } from './example-chain.ts'
 const sound: Inertial = { mass: 2, centerOfMass: [0, 0, 0.1], inertia: [0.02, 0.001, 0, 0.018, 0, 0.008] }
 
 describe('inertial parameters', () => {
-  const cases: { given: Partial<Inertial>, rules: string[] }[] = [
+  const cases: { given: Partial<Inertial>; rules: string[] }[] = [
     { given: {}, rules: [] },
     { given: { mass: 0 }, rules: ['positive_mass'] },
     { given: { inertia: [0.02, 0, 0, 0.018, 0, -0.001] }, rules: ['positive_definite'] },
@@ -40,10 +40,17 @@ describe('a chain', () => {
     const description = exampleChain()
     const second = description.joints[1]
 
-    const withSecond = (change: object): (() => unknown) => () =>
-      createChain({ ...description, joints: description.joints.map((joint, i) => (i === 1 ? { ...second, ...change } : joint)) })
+    const withSecond =
+      (change: object): (() => unknown) =>
+      () =>
+        createChain({
+          ...description,
+          joints: description.joints.map((joint, i) => (i === 1 ? { ...second, ...change } : joint)),
+        })
     expect(withSecond({ axis: [0, 0, 0] })).toThrow(/joint "joint_2": axis has length zero/)
-    expect(withSecond({ offset: { position: [0, 0, 0], rotation: [1, 0, 0, 0, 2, 0, 0, 0, 1] } })).toThrow(/joint "joint_2": offset: rotation is not orthonormal/)
+    expect(withSecond({ offset: { position: [0, 0, 0], rotation: [1, 0, 0, 0, 2, 0, 0, 0, 1] } })).toThrow(
+      /joint "joint_2": offset: rotation is not orthonormal/,
+    )
     expect(() => createChain({ ...description, joints: [] })).toThrow(/at least one is needed/)
   })
 })

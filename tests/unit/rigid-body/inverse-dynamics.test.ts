@@ -1,8 +1,18 @@
 import { describe, expect, it } from 'vitest'
 import { createRandom } from '../../../shared/dynamics/random.ts'
 import {
-  attachPayload, createChain, detachPayload, forwardDynamics, frictionTorque, gravityTorque, inertialFromParameters, inertialRegressor,
-  inverseDynamics, inverseDynamicsTerms, massMatrix, payloadRegressor,
+  attachPayload,
+  createChain,
+  detachPayload,
+  forwardDynamics,
+  frictionTorque,
+  gravityTorque,
+  inertialFromParameters,
+  inertialRegressor,
+  inverseDynamics,
+  inverseDynamicsTerms,
+  massMatrix,
+  payloadRegressor,
 } from '../../../shared/dynamics/rigid-body/index.ts'
 import { ShapeError } from '../../../shared/dynamics/shape-error.ts'
 import { exampleChain, vector } from './example-chain.ts'
@@ -21,7 +31,10 @@ describe('inverse dynamics', () => {
     inverseDynamics(chain, q, qd, qdd, whole)
     inverseDynamicsTerms(chain, q, qd, qdd, terms)
 
-    expectClose(whole.map((value, i) => value - terms.inertia[i] - terms.coriolis[i] - terms.gravity[i]), new Float64Array(n))
+    expectClose(
+      whole.map((value, i) => value - terms.inertia[i] - terms.coriolis[i] - terms.gravity[i]),
+      new Float64Array(n),
+    )
     const still = new Float64Array(n)
     gravityTorque(chain, q, still)
     expect(still).toEqual(terms.gravity)
@@ -36,8 +49,11 @@ describe('inverse dynamics', () => {
     const power = tau.reduce((sum, value, i) => sum + value * qd[i], 0)
 
     const h = 1e-5
-    const along = (t: number): number => kineticEnergy(
-      q.map((value, i) => value + t * qd[i] + 0.5 * t * t * qdd[i]), qd.map((value, i) => value + t * qdd[i]))
+    const along = (t: number): number =>
+      kineticEnergy(
+        q.map((value, i) => value + t * qd[i] + 0.5 * t * t * qdd[i]),
+        qd.map((value, i) => value + t * qdd[i]),
+      )
     // Central differences of step 1e-5 err by about 1e-9 of a quantity near 100.
     expect(Math.abs((along(h) - along(-h)) / (2 * h) - power)).toBeLessThan(1e-6)
 
@@ -141,7 +157,11 @@ describe('a payload', () => {
     const inertia = [-(y * y + z * z), x * y, x * z, -(x * x + z * z), y * z, -(x * x + y * y)].map((value) => mass * value)
     const [without, withIt, columns] = [new Float64Array(n), new Float64Array(n), new Float64Array(n * 4)]
     inverseDynamics(chain, q, qd, qdd, without)
-    attachPayload(chain, { mass, centerOfMass: center, inertia: inertia as unknown as [number, number, number, number, number, number] })
+    attachPayload(chain, {
+      mass,
+      centerOfMass: center,
+      inertia: inertia as unknown as [number, number, number, number, number, number],
+    })
     inverseDynamics(chain, q, qd, qdd, withIt)
     payloadRegressor(chain, q, qd, qdd, columns)
 
@@ -160,7 +180,7 @@ describe('a payload', () => {
 })
 
 describe('the regressor of inertial parameters', () => {
-  it('times the links\' parameters is the torque', () => {
+  it("times the links' parameters is the torque", () => {
     const chain = createChain(exampleChain())
     const random = createRandom(9)
     const [q, qd, qdd] = [vector(random, n, 2), vector(random, n, 2), vector(random, n, 3)]
@@ -169,7 +189,10 @@ describe('the regressor of inertial parameters', () => {
     inverseDynamics(chain, q, qd, qdd, tau)
     inertialRegressor(chain, q, qd, qdd, matrix)
 
-    expectClose(tau.map((_, i) => chain.linkParameters.reduce((sum, p, k) => sum + matrix[10 * n * i + k] * p, 0)), tau)
+    expectClose(
+      tau.map((_, i) => chain.linkParameters.reduce((sum, p, k) => sum + matrix[10 * n * i + k] * p, 0)),
+      tau,
+    )
   })
 
   it('uses parameters that lead back to mass, centre of mass and inertia', () => {
@@ -178,7 +201,10 @@ describe('the regressor of inertial parameters', () => {
     const { mass, centerOfMass, inertia } = inertialFromParameters(chain.linkParameters, 20)
 
     const given = description.joints[2].inertial
-    expectClose(Float64Array.of(mass, ...centerOfMass, ...inertia), Float64Array.of(given.mass, ...given.centerOfMass, ...given.inertia))
+    expectClose(
+      Float64Array.of(mass, ...centerOfMass, ...inertia),
+      Float64Array.of(given.mass, ...given.centerOfMass, ...given.inertia),
+    )
   })
 })
 

@@ -2,7 +2,7 @@ import { expect, it } from 'vitest'
 import { createRandom } from '../../../shared/dynamics/random.ts'
 import { sineCosine } from '../../../shared/dynamics/rigid-body/trigonometry.ts'
 
-it('sine and cosine agree with the engine\'s to the last two bits, over many turns', () => {
+it("sine and cosine agree with the engine's to the last two bits, over many turns", () => {
   const random = createRandom(1)
   const out = new Float64Array(2)
   for (let k = 0; k < 100_000; k++) {

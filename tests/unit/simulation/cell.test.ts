@@ -45,7 +45,7 @@ describe('a cell', () => {
     expect(perfect).toBeLessThan(nominal / 3)
   })
 
-  it('logs position and torque of the same moment, lagging by half the logger\'s window', () => {
+  it("logs position and torque of the same moment, lagging by half the logger's window", () => {
     const motion = pickMotion(alder7, createRandom(2), 4)
     const cell = createCell({ arm: alder7, motion, source: nominalTorque(alder7), seed: 1, logRate: 50 })
     const truth: Float64Array[] = []
@@ -65,7 +65,11 @@ describe('a cell', () => {
   it('slows down along its path and stands when predictions stop for long, and goes on when they are back', () => {
     const motion = pickMotion(alder7, createRandom(2), 10)
     const feedForward = createFeedForward({
-      joints: n, rampRate: alder7.limits.map((limit) => limit.torqueRate), holdCycles: 5, localSeconds: 0.5, returnCycles: 50,
+      joints: n,
+      rampRate: alder7.limits.map((limit) => limit.torqueRate),
+      holdCycles: 5,
+      localSeconds: 0.5,
+      returnCycles: 50,
     })
     const cell = createCell({ arm: alder7, motion, source: predictedTorque(alder7, feedForward), seed: 1, logRate: 50 })
     hand(0, 1)
@@ -86,7 +90,12 @@ describe('a cell', () => {
 
     function hand(from: number, to: number): void {
       const time = Float64Array.from({ length: Math.round((to - from) * 50) + 1 }, (_, k) => from + k * 0.02)
-      const [torque, desired, one, source] = [new Float64Array(time.length * n), createJointState(n), new Float64Array(n), trueTorque()]
+      const [torque, desired, one, source] = [
+        new Float64Array(time.length * n),
+        createJointState(n),
+        new Float64Array(n),
+        trueTorque(),
+      ]
       time.forEach((t, row) => {
         motion.sample(t, desired)
         source.next(desired, t, t, one)
@@ -128,8 +137,9 @@ describe('the logger', () => {
   it('gives position, velocity and acceleration of a parabola exactly, at the middle of its window', () => {
     const logger = createLogger({ joints: 1, cycle: 0.001, rate: 100, window: 0.04 })
     const of = (t: number): number => 0.3 + 0.7 * t - 2.5 * t * t
-    const rows = Array.from({ length: 200 }, (_, k) => logger.push(k * 0.001, Float64Array.of(of(k * 0.001)), Float64Array.of(4)))
-      .filter((row) => row !== undefined)
+    const rows = Array.from({ length: 200 }, (_, k) =>
+      logger.push(k * 0.001, Float64Array.of(of(k * 0.001)), Float64Array.of(4)),
+    ).filter((row) => row !== undefined)
 
     expect(rows).toHaveLength(16)
     for (const { time, position, velocity, acceleration, torque } of rows) {

@@ -22,7 +22,11 @@ function createService(failures = { left: 0, isStored: false }) {
       throw new ConnectionError('no answer')
     }
     if (entry.sequence - (entry.skipped ?? 0) !== expected) {
-      throw new ProblemError(409, { type: 'x', title: 'gap', status: 409, detail: '', expected_sequence: expected } as unknown as Schemas['Problem'], {})
+      throw new ProblemError(
+        409,
+        { type: 'x', title: 'gap', status: 409, detail: '', expected_sequence: expected } as unknown as Schemas['Problem'],
+        {},
+      )
     }
     log.push(entry)
   }
@@ -50,7 +54,7 @@ function open(heftwise: Heftwise, source: Source = { adaptation: 'a' }) {
   return createLink({ heftwise, joints: 'x', source, motion: shift.motion, size: n, signal })
 }
 
-describe('the demo\'s link to the service', () => {
+describe("the demo's link to the service", () => {
   it('sends an event between the rows before and after it, in one sequence', async () => {
     const { heftwise, log } = createService()
     const link = open(heftwise)
@@ -59,7 +63,11 @@ describe('the demo\'s link to the service', () => {
     link.log(row(0.04))
     await link.exchange(0.08, 0.08)
 
-    expect(log.map((entry) => [entry.sequence, 'kind' in entry ? entry.kind : entry.time])).toEqual([[1, [0.02]], [2, 'gripped'], [3, [0.04]]])
+    expect(log.map((entry) => [entry.sequence, 'kind' in entry ? entry.kind : entry.time])).toEqual([
+      [1, [0.02]],
+      [2, 'gripped'],
+      [3, [0.04]],
+    ])
   })
 
   it('repeats what was not answered under its sequence, and goes on', async () => {
@@ -70,7 +78,10 @@ describe('the demo\'s link to the service', () => {
     link.log(row(0.1))
     expect(await link.exchange(0.16, 0.16)).toBeDefined()
 
-    expect(log.map(({ sequence, time }) => [sequence, time])).toEqual([[1, [0.02]], [2, [0.1]]])
+    expect(log.map(({ sequence, time }) => [sequence, time])).toEqual([
+      [1, [0.02]],
+      [2, [0.1]],
+    ])
     expect(link.counters).toMatchObject({ failed: 1, skipped: 0, batches: { accepted: 2 } })
   })
 
@@ -124,7 +135,12 @@ describe('a trial of the demo', () => {
   it('stops early and keeps what it measured when it is told to', async () => {
     const stop = new AbortController()
     const result = await runTrial({
-      name: 'a', shift, seed: 1, isRealtime: false, signal: stop.signal, onProgress: (now) => {
+      name: 'a',
+      shift,
+      seed: 1,
+      isRealtime: false,
+      signal: stop.signal,
+      onProgress: (now) => {
         if (now >= 2) stop.abort()
       },
     })

@@ -3,7 +3,10 @@ import { createRandom } from '../../../shared/dynamics/random.ts'
 import { alder7 } from '../../../shared/simulation/alder-7.ts'
 import { createJointState, multiSineMotion, pickMotion } from '../../../shared/simulation/motion.ts'
 
-const makers = [['multi-sine', multiSineMotion], ['pick', pickMotion]] as const
+const makers = [
+  ['multi-sine', multiSineMotion],
+  ['pick', pickMotion],
+] as const
 
 for (const [name, make] of makers) {
   describe(`a ${name} motion`, () => {

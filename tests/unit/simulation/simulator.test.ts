@@ -1,7 +1,12 @@
 import { describe, expect, it } from 'vitest'
 import { createRandom } from '../../../shared/dynamics/random.ts'
 import {
-  attachPayload, createChain, frictionTorque, gravityTorque, inverseDynamics, massMatrix,
+  attachPayload,
+  createChain,
+  frictionTorque,
+  gravityTorque,
+  inverseDynamics,
+  massMatrix,
 } from '../../../shared/dynamics/rigid-body/index.ts'
 import { alder7 } from '../../../shared/simulation/alder-7.ts'
 import { pickMotion } from '../../../shared/simulation/motion.ts'
@@ -21,7 +26,8 @@ describe('the simulator', () => {
     const energy = (): number => {
       massMatrix(model, simulator.position, matrix)
       let sum = 0
-      for (let i = 0; i < n; i++) for (let j = 0; j < n; j++) sum += 0.5 * simulator.velocity[i] * matrix[n * i + j] * simulator.velocity[j]
+      for (let i = 0; i < n; i++)
+        for (let j = 0; j < n; j++) sum += 0.5 * simulator.velocity[i] * matrix[n * i + j] * simulator.velocity[j]
       return sum
     }
     for (let k = 0; k < 100; k++) simulator.step(Float64Array.of(5, 5, 2, 3, 0.1, 0.3, 0.001), 1e-3)
@@ -93,7 +99,11 @@ describe('a recording', () => {
 
     expect(header).toHaveLength(1 + 4 * n)
     expect([header[0], header[1], header[8], header[15], header[22]]).toEqual([
-      'time', 'position_alder_waist', 'velocity_alder_waist', 'acceleration_alder_waist', 'effort_alder_waist',
+      'time',
+      'position_alder_waist',
+      'velocity_alder_waist',
+      'acceleration_alder_waist',
+      'effort_alder_waist',
     ])
     expect(lines[1].split(',')[0]).toBe('0.000')
     expect(lines[2].split(',')[0]).toBe('0.020')
