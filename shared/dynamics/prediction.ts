@@ -1,5 +1,3 @@
-import { coverageOfRow, prepareCoverage } from './coverage.ts'
-import type { Coverage } from './coverage.ts'
 import { fade } from './deterministic.ts'
 import type { Kernels, NetworkHandle, NormalisationHandle } from './kernels/kernels.ts'
 import type { ArmLimits } from './limits.ts'
@@ -106,20 +104,21 @@ export function createRowPredictor(kernels: Kernels, version: Version, limits: A
   checkLength('limits.torque', limits.torque.length, joints, `${joints} joints`)
   if (limits.torqueRate) checkLength('limits.torqueRate', limits.torqueRate.length, joints, `${joints} joints`)
   const scales: NormalisationHandle = kernels.loadNormalisation(normalisation)
-  const coverage = prepareCoverage(statistics, 3 * joints)
+  const coverage = kernels.loadCoverage(statistics)
   const outputStd = Float64Array.from(normalisation.outputStd)
-  const channels = new Float64Array(3 * joints)
 
   return {
     predict(network, query, into, bias, ahead) {
       checkQuery(query, joints, into, ahead)
-      kernels.predict(network, scales, query, query.rows, into.torque)
+      kernels.predict(network, scales, query, query.rows, into.torque, { coverage, out: into.coverage })
       if (bias) addBias(bias, outputStd, ahead, query.rows, joints, into.torque)
       clamp(limits, query, joints, into)
       if (!allFinite(into.torque, query.rows * joints)) throw outOfRange(query, normalisation, joints)
-      coverRows(coverage, query, joints, channels, into.coverage)
     },
-    release: () => scales.free(),
+    release() {
+      scales.free()
+      coverage.free()
+    },
   }
 }
 
@@ -172,18 +171,6 @@ function clamp({ torque: bounds, torqueRate }: ArmLimits, { rows, time }: Predic
     }
   }
   into.limitedCount = count / 2
-}
-
-function coverRows(coverage: Coverage, query: PredictQuery, joints: number, channels: Float64Array, out: Float64Array): void {
-  const { rows, position, velocity, acceleration } = query
-  for (let row = 0, at = 0; row < rows; row++) {
-    for (let j = 0; j < joints; j++, at++) {
-      channels[j] = position[at]
-      channels[joints + j] = velocity[at]
-      channels[2 * joints + j] = acceleration[at]
-    }
-    out[row] = coverageOfRow(coverage, channels)
-  }
 }
 
 function allFinite(values: Float64Array, count: number): boolean {

@@ -1,6 +1,7 @@
 import type { LossName, LossShape } from '../losses/index.ts'
 import type { NetworkShape } from '../network.ts'
 import { checkLength, ShapeError } from '../shape-error.ts'
+import type { CoverageStatistics } from '../version.ts'
 import type { Arena } from './arena.ts'
 import { readBlock, writeBlock, type PaddedNetwork } from './layout.ts'
 
@@ -56,6 +57,12 @@ export interface Normalisation {
 
 /** A normalisation in kernel memory. */
 export interface NormalisationHandle {
+  readonly joints: number
+  free(): void
+}
+
+/** Coverage statistics in kernel memory. */
+export interface CoverageHandle {
   readonly joints: number
   free(): void
 }
@@ -314,6 +321,32 @@ export class LoadedNormalisation implements NormalisationHandle {
   /** Address of the output's means and standard deviations. */
   get outputAddress(): number {
     return this.address + 8 * 6 * this.joints
+  }
+
+  free(): void {
+    this.#block.free()
+  }
+}
+
+export class LoadedCoverage implements CoverageHandle {
+  readonly arena: Arena
+  readonly joints: number
+  readonly #block: Block
+
+  constructor(arena: Arena, { low, high, mean, whitening, d99 }: CoverageStatistics) {
+    const channels = low.length
+    if (channels === 0 || channels % 3 !== 0) throw new ShapeError(`low has ${channels} values, expected 3 per joint.`)
+    checkLength('high', high.length, channels, `${channels} channels`)
+    checkLength('mean', mean.length, channels, `${channels} channels`)
+    checkLength('whitening', whitening.length, (channels * (channels + 1)) / 2, `lower triangle of ${channels} channels`)
+    this.arena = arena
+    this.joints = channels / 3
+    this.#block = new Block(arena, 8 * (1 + 3 * channels + whitening.length), 'coverage')
+    arena.f64.set([d99, ...low, ...high, ...mean, ...whitening], this.address / 8)
+  }
+
+  get address(): number {
+    return this.#block.address
   }
 
   free(): void {

@@ -1,10 +1,12 @@
 import type { LossName, LossShape } from '../losses/index.ts'
 import { firstTrainedLayer, type NetworkShape } from '../network.ts'
 import { checkLength, ShapeError } from '../shape-error.ts'
+import type { CoverageStatistics } from '../version.ts'
 import { Arena } from './arena.ts'
 import { checkCount, checkRoom, LoadedBatch } from './batch.ts'
 import {
-  LoadedLoss, LoadedMoments, LoadedNetwork, LoadedNormalisation, lossNetwork, own, type BatchHandle, type LossHandle,
+  LoadedCoverage, LoadedLoss, LoadedMoments, LoadedNetwork, LoadedNormalisation, lossNetwork, own, type BatchHandle,
+  type CoverageHandle, type LossHandle,
   type MomentsHandle, type Motion, type NetworkHandle, type Normalisation, type NormalisationHandle,
 } from './handles.ts'
 import { layOut, padded, readBlock, type PaddedNetwork } from './layout.ts'
@@ -12,7 +14,7 @@ import { instantiate, type KernelExports } from './module.ts'
 import { copyIn, copyOut, Scratch } from './scratch.ts'
 
 export type {
-  BatchHandle, LossHandle, MomentsHandle, Motion, NetworkHandle, Normalisation, NormalisationHandle,
+  BatchHandle, CoverageHandle, LossHandle, MomentsHandle, Motion, NetworkHandle, Normalisation, NormalisationHandle,
 } from './handles.ts'
 
 /** What of a network is trained. */
@@ -155,6 +157,15 @@ export class Kernels {
   }
 
   /**
+   * Puts coverage statistics into kernel memory.
+   *
+   * @throws {ShapeError} lengths don't belong together
+   */
+  loadCoverage(statistics: CoverageStatistics): CoverageHandle {
+    return new LoadedCoverage(this.#arena, statistics)
+  }
+
+  /**
    * An empty batch, to be loaded again and again; it grows with what is loaded.
    *
    * @param inputs  length of an input row (3n); joints: n
@@ -209,10 +220,12 @@ export class Kernels {
    *
    * @param motion  rows × joints each, in the arm's joint order; left out: what was written into `motionArea(joints, rows)`
    * @param torque  out, rows × joints, N·m (prismatic N)
-   * @throws {ShapeError} an array is too short, or network and normalisation are of different arms
+   * @param cover  statistics to judge the same rows by, and `out`, one value per row: to the bit what `coverageOfRow` gives
+   * @throws {ShapeError} an array is too short, or network, normalisation and coverage are of different arms
    */
   predict(
     network: NetworkHandle, normalisation: NormalisationHandle, motion: Motion | undefined, rows: number, torque: Float64Array,
+    cover?: { readonly coverage: CoverageHandle; readonly out: Float64Array },
   ): Float64Array {
     const { layout, description, address } = own(this.#arena, network, LoadedNetwork)
     const { joints, address: scales } = own(this.#arena, normalisation, LoadedNormalisation)
@@ -234,6 +247,7 @@ export class Kernels {
     }
     this.#exports.predictMotion(description, address, at, at + 8 * count, at + 16 * count, joints, scales, rows, work, out)
     copyOut(this.#arena.f64, out / 8, count, torque)
+    if (cover !== undefined) this.#cover(cover.coverage, at, joints, rows, cover.out)
     return torque
   }
 
@@ -473,6 +487,18 @@ export class Kernels {
     this.#exports.elementary(numbersOfElementary[which], from, count, to)
     copyOut(this.#arena.f32, to / 4, values.length, out)
     return out
+  }
+
+  /** Coverage of the motion at an address. */
+  #cover(coverage: CoverageHandle, motion: number, joints: number, rows: number, out: Float64Array): void {
+    const { address, joints: coveredJoints } = own(this.#arena, coverage, LoadedCoverage)
+    if (coveredJoints !== joints) throw new ShapeError(`The coverage is of ${coveredJoints} joints, the motion of ${joints}.`)
+    checkRoom('coverage', out.length, rows)
+    const shares = this.#scratch.room('coverage', 8 * rows)
+    const work = this.#scratch.room('coverage work', this.#exports.coverageWorkBytes(3 * joints))
+    const bytes = 8 * rows * joints
+    this.#exports.coverage(address, motion, motion + bytes, motion + 2 * bytes, joints, rows, work, shares)
+    copyOut(this.#arena.f64, shares / 8, rows, out)
   }
 
   /** One description per shape; there are few shapes, so they are kept. */

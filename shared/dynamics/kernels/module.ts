@@ -12,6 +12,11 @@ export interface KernelExports {
     net: number, parameters: number, position: number, velocity: number, acceleration: number, joints: number, scales: number,
     rows: number, work: number, torque: number,
   ): void
+  coverageWorkBytes(channels: number): number
+  coverage(
+    statistics: number, position: number, velocity: number, acceleration: number, joints: number, rows: number, work: number,
+    out: number,
+  ): void
   spread(dense: number, width: number, rows: number, padded: number, stride: number): void
   gather(padded: number, stride: number, width: number, rows: number, dense: number): void
   normalise(dense: number, scales: number, width: number, rows: number, padded: number, stride: number): void

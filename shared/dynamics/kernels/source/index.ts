@@ -1,4 +1,5 @@
 import { exp4, sigmoid4, softplus4, tanh4 } from './elementary'
+export { coverage, coverageWorkBytes } from './coverage'
 export { metaGradient, metaGradientWorkBytes } from './meta-gradient'
 export { gather, normalise, normaliseMotion, predictMotion, predictNormalised, spread } from './rows'
 export { addGradient, addLossSums, applySteps, squaredErrors, stepWorkBytes, weightsOfRows } from './step'
