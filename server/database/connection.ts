@@ -34,7 +34,8 @@ export function openDatabase(address: DatabaseAddress, sizes: { models?: number;
     timezone: '+00:00',
     isolationLevel: Transaction.ISOLATION_LEVELS.READ_COMMITTED,
     pool: { max: sizes.models ?? 8, acquire: 20_000, idle: 60_000 },
-    dialectOptions: { connectTimeout: 5_000, allowPublicKeyRetrieval: false },
+    // Sequelize deletes the connector's `meta` from result lists, which must therefore be an ordinary property.
+    dialectOptions: { connectTimeout: 5_000, allowPublicKeyRetrieval: false, metaEnumerable: true },
     define: { timestamps: false, underscored: true, freezeTableName: true },
   })
   const pool = mariadb.createPool({

@@ -74,6 +74,7 @@ async function serve(address: DatabaseAddress, clock: Clock, overrides: Settings
   await startDependencies(dependencies)
   const services = createServices(dependencies)
   const http = createServer(createApp(dependencies, services))
+  http.keepAliveTimeout = 75_000
   await new Promise<void>((done) => http.listen(0, '127.0.0.1', done))
   const { port } = http.address() as AddressInfo
   const origin = `http://127.0.0.1:${port}`
@@ -132,6 +133,7 @@ function testSettings(databaseAddress: DatabaseAddress, { limits, session, ...ov
     peerAddress: null,
     groupCommit: { largestGroup: 256, lanes: 1 },
     secret: 'a secret of the tests, long enough to sign with',
+    jobThreads: 1,
     seedDemo: false,
     logLevel: 'silent',
     // bcrypt's least; the real cost is a setting too.
