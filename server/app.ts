@@ -16,6 +16,7 @@ import { armRoutes } from './routes/arms.ts'
 import { consoleRoutes } from './routes/console.ts'
 import { docsRoutes } from './routes/docs.ts'
 import { hotRoutes } from './routes/hot/index.ts'
+import { jobRoutes } from './routes/jobs.ts'
 import { keyRoutes } from './routes/keys.ts'
 import { lossRoutes } from './routes/losses.ts'
 import { modelRoutes } from './routes/models.ts'
@@ -59,6 +60,7 @@ export function createApp(d: Dependencies, services: Services = createServices(d
   app.use(modelRoutes(services, contract))
   app.use(releaseRoutes(services, contract))
   app.use(lossRoutes(services, contract))
+  app.use(jobRoutes(services, contract))
   app.use(adaptationRoutes(services, contract))
 
   app.use('/v1', (req) => {

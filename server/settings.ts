@@ -21,6 +21,8 @@ export interface Settings {
   readonly peerAddress: string | null
   /** How batches share transactions (services/adaptations/group-commit.ts). */
   readonly groupCommit: { readonly largestGroup: number; readonly lanes: number }
+  /** Jobs that this process works on at a time; 0: it leaves them to others. */
+  readonly jobThreads: number
   readonly seedDemo: boolean
   readonly logLevel: string
   readonly session: { readonly idleMs: number; readonly absoluteMs: number }
@@ -51,6 +53,7 @@ export function readSettings(env: NodeJS.ProcessEnv = process.env): Settings {
     secret: env.HEFTWISE_SECRET || storedSecret(dataFolder),
     peerAddress: env.HEFTWISE_PEER_ADDRESS ? originOf(env.HEFTWISE_PEER_ADDRESS, 'HEFTWISE_PEER_ADDRESS') : null,
     groupCommit: { largestGroup: 256, lanes: 1 },
+    jobThreads: integer(env, 'HEFTWISE_JOB_THREADS', 1, 0, 64),
     seedDemo: flag(env, 'HEFTWISE_DEMO', !production),
     logLevel: oneOf(env, 'HEFTWISE_LOG_LEVEL', 'warn', ['trace', 'debug', 'info', 'warn', 'error', 'silent']),
     session: {

@@ -42,9 +42,11 @@ export type JobParameters = FitParameters | MetaTrainParameters
 export interface JobWork {
   readonly armId: string
   readonly modelId: string
+  /** Names and checksums of the recordings learned from, as they were when the job was asked for. */
+  readonly recordings: readonly { readonly name: string; readonly checksum: string }[]
   /** Recordings with use validate, for the recommended rate of `mse`; of a fit. */
   readonly validation?: readonly string[]
-  /** Of a meta-training. */
-  readonly lossId?: string
-  readonly baseVersionId?: string
+  /** Of a meta-training; empty otherwise. */
+  readonly lossId: string
+  readonly baseVersionId: string
 }

@@ -1,5 +1,6 @@
 import { DataTypes } from 'sequelize'
 import type { CreationOptional, InferAttributes, InferCreationAttributes, Model, Sequelize } from 'sequelize'
+import type { ProblemSlug } from '../../shared/contract/problems.ts'
 import type { JobParameters, JobWork } from '../jobs/job-kinds.ts'
 
 export type JobState = 'queued' | 'running' | 'done' | 'failed' | 'cancelled'
@@ -18,7 +19,7 @@ export interface Job extends Model<InferAttributes<Job>, InferCreationAttributes
   work: JobWork
   result: { model?: string; loss?: string; version: number } | null
   /** A problem's slug and sentence. */
-  problem: { slug: string; detail: string } | null
+  problem: { slug: ProblemSlug; detail: string } | null
   /** Rises with every change, so that a reader knows whether he has seen it. */
   changeNumber: CreationOptional<number>
   createdAt: Date

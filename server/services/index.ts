@@ -2,6 +2,7 @@ import { createKernels } from '../../shared/dynamics/index.ts'
 import type { Dependencies } from '../dependencies.ts'
 import { createAdaptationService } from './adaptations/index.ts'
 import { createArmService } from './arms.ts'
+import { createJobService } from './jobs/jobs.ts'
 import { createKeyService } from './keys.ts'
 import { createLiveVersions } from './live-versions.ts'
 import { createLossService } from './losses.ts'
@@ -24,11 +25,12 @@ export function createServices(d: Dependencies) {
   const versions = createVersionService(d)
   const releases = createReleaseService(d)
   const losses = createLossService(d)
+  const jobs = createJobService({ ...d, recordings, versions, losses })
   const kernels = createKernels()
   const liveVersions = createLiveVersions({ ...d, kernels })
   const predictions = createPredictions()
   const adaptations = createAdaptationService({ ...d, kernels, liveVersions, predictions, versions })
-  return { sessions, people, keys, arms, recordings, models, versions, releases, losses, liveVersions, predictions, adaptations }
+  return { sessions, people, keys, arms, recordings, models, versions, releases, losses, jobs, liveVersions, predictions, adaptations }
 }
 
 export type Services = ReturnType<typeof createServices>

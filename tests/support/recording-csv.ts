@@ -14,6 +14,7 @@ export function twoJointArm(name = 'tinker-2'): NewArm {
     gravity: [0, 0, -9.81],
     torque: { side: 'link', positive_accelerates: true, controller_adds: [] },
     fallback: 'controlled_stop',
+    horizon: 1,
   }
 }
 

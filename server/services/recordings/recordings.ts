@@ -1,4 +1,4 @@
-import { Op } from 'sequelize'
+import { Op, QueryTypes, type Transaction } from 'sequelize'
 import { Refusal } from '../../../shared/contract/problems.ts'
 import type { Motion } from '../../../shared/dynamics/motion.ts'
 import { duplicateKey } from '../../database/connection.ts'
@@ -79,6 +79,14 @@ export function createRecordingService({ database, clock, audit, log }: Dependen
     await database.pool.query('DELETE FROM recording_uploads WHERE recording_id = ?', [id])
   }
 
+  /** False when the upload had been given up and its chunks taken away. */
+  async function endUpload(id: string, transaction: Transaction): Promise<boolean> {
+    const ended = await database.sequelize.query('DELETE FROM recording_uploads WHERE recording_id = ?', {
+      replacements: [id], transaction, type: QueryTypes.BULKDELETE,
+    })
+    return ended === 1
+  }
+
   async function sweep(): Promise<void> {
     const abandoned = await database.pool.query<{ recording_id: string }[]>(
       `SELECT recording_id FROM recording_uploads WHERE touched_at < UTC_TIMESTAMP(3) - INTERVAL ${ABANDONED_MINUTES} MINUTE`,
@@ -132,8 +140,7 @@ export function createRecordingService({ database, clock, audit, log }: Dependen
             { transaction },
           )
           // The sweep takes abandoned uploads away; this one must still be there to become a recording.
-          const [, kept] = await database.sequelize.query('DELETE FROM recording_uploads WHERE recording_id = ?', { replacements: [id], transaction })
-          if ((kept as { affectedRows?: number }).affectedRows === 0) throw new Refusal('upload-incomplete', 'The upload took too long and was given up. Send it again.')
+          if (!(await endUpload(id, transaction))) throw new Refusal('upload-incomplete', 'The upload took too long and was given up. Send it again.')
           const record = recordOf(Object.assign(recording, { arm }))
           await audit.record(transaction, {
             by: caller, action: 'recording.upload', subject: { kind: 'recording', id, name: given.name }, after: record, requestId,
