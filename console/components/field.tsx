@@ -91,7 +91,7 @@ export function Filter({
   options: { value: string; label: string }[]
 }) {
   return (
-    <label className="inline-flex items-center gap-2 text-12 text-soft">
+    <label className="inline-flex items-center gap-2 text-12 whitespace-nowrap text-soft">
       {label}
       <select
         className={`${box} w-auto max-w-48`}
@@ -119,7 +119,7 @@ export function Search({
   onChange: (value: string | undefined) => void
 }) {
   return (
-    <label className="inline-flex items-center gap-2 text-12 text-soft">
+    <label className="inline-flex items-center gap-2 text-12 whitespace-nowrap text-soft">
       {label}
       <input
         type="search"

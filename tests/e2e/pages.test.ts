@@ -1,6 +1,7 @@
+import type { Browser } from 'playwright-core'
 import { afterAll, beforeAll, describe, expect, it } from 'vitest'
 import { axeFindings } from './support/accessibility.ts'
-import { openBrowser, takePicture, type OpenBrowser } from './support/browser.ts'
+import { openPage, startBrowser, takePicture, type OpenPage } from './support/browser.ts'
 import { buildConsole } from './support/build-console.ts'
 import { startInventedApi, type InventedApi } from './support/invented-api.ts'
 import { inventTeam } from './support/invented-team.ts'
@@ -26,12 +27,14 @@ const pages: { name: string; path: string; ready: string }[] = [
 describe.each(['light', 'dark'] as const)('in the %s theme', (theme) => {
   describe.each([1440, 390])('%i px wide', (width) => {
     let api: InventedApi
-    let browser: OpenBrowser
+    let browser: Browser
+    let open: OpenPage
 
     beforeAll(async () => {
       await buildConsole()
       api = await startInventedApi(team)
-      browser = await openBrowser({ width, height: width === 390 ? 844 : 900, theme })
+      browser = await startBrowser()
+      open = await openPage(browser, { width, height: width === 390 ? 844 : 900, theme })
     })
     afterAll(async () => {
       await browser.close()
@@ -41,7 +44,7 @@ describe.each(['light', 'dark'] as const)('in the %s theme', (theme) => {
     it.each(pages)(
       '$name is free of accessibility findings and console errors, and fits the width',
       async ({ name, path, ready }) => {
-        const { page, errors } = browser
+        const { page, errors } = open
 
         await page.goto(api.origin + path)
         await page

@@ -1,7 +1,5 @@
-import { mkdtemp, mkdir, rm } from 'node:fs/promises'
-import { tmpdir } from 'node:os'
-import { join } from 'node:path'
-import { chromium, type BrowserContext, type Page } from 'playwright-core'
+import { mkdir } from 'node:fs/promises'
+import { chromium, type Browser, type BrowserContext, type Page } from 'playwright-core'
 
 const flags = [
   '--headless',
@@ -14,7 +12,7 @@ const flags = [
   '--disable-sync',
 ]
 
-export interface OpenBrowser {
+export interface OpenPage {
   page: Page
   context: BrowserContext
   /** What went wrong in the page unasked: console errors and exceptions. Clear what a test brings about on purpose. */
@@ -28,35 +26,28 @@ export interface Look {
   theme?: 'light' | 'dark'
 }
 
-/** A fresh browser with an empty profile. */
-export async function openBrowser({ width = 1440, height = 900, theme = 'light' }: Look = {}): Promise<OpenBrowser> {
-  const profile = await mkdtemp(join(tmpdir(), 'heftwise-e2e-'))
-  const context = await chromium.launchPersistentContext(profile, {
-    executablePath: process.env.CHROMIUM ?? '/usr/bin/chromium',
-    args: flags,
+/** One browser with an empty profile of its own; each test gets a fresh context in it. */
+export async function startBrowser(): Promise<Browser> {
+  return chromium.launch({ executablePath: process.env.CHROMIUM ?? '/usr/bin/chromium', args: flags })
+}
+
+export async function openPage(browser: Browser, { width = 1440, height = 900, theme = 'light' }: Look = {}): Promise<OpenPage> {
+  const context = await browser.newContext({
     viewport: { width, height },
     colorScheme: theme,
     reducedMotion: 'reduce',
     locale: 'en-GB',
     timezoneId: 'Europe/Berlin',
   })
-  const page = context.pages()[0] ?? (await context.newPage())
-  page.setDefaultTimeout(10_000)
+  const page = await context.newPage()
+  page.setDefaultTimeout(15_000)
   const errors: string[] = []
   page.on('pageerror', (error) => errors.push(String(error)))
   page.on('console', (message) => {
     // The browser itself notes each 4xx answer; what the page makes of it is tested where it shows.
     if (message.type() === 'error' && !message.text().startsWith('Failed to load resource')) errors.push(message.text())
   })
-  return {
-    page,
-    context,
-    errors,
-    close: async () => {
-      await context.close()
-      await rm(profile, { recursive: true, force: true })
-    },
-  }
+  return { page, context, errors, close: () => context.close() }
 }
 
 const output = new URL('../../output/', import.meta.url)
