@@ -14,7 +14,7 @@ export interface DatabaseAddress {
 export interface Database {
   readonly sequelize: Sequelize
   readonly models: Models
-  /** The raw connector, for the hot path and for SQL that needs no model. DATETIME columns come and go as UTC Date. */
+  /** The raw connector, for the hot path and for SELECTs that need no model (an untyped sequelize.query of one fails with this connector). DATETIME columns come and go as UTC Date. */
   readonly pool: mariadb.Pool
   /** A managed transaction; run again, from the start, when MariaDB chose it as a deadlock's victim. */
   transaction<T>(work: (transaction: Transaction) => Promise<T>): Promise<T>
@@ -34,8 +34,7 @@ export function openDatabase(address: DatabaseAddress, sizes: { models?: number;
     timezone: '+00:00',
     isolationLevel: Transaction.ISOLATION_LEVELS.READ_COMMITTED,
     pool: { max: sizes.models ?? 8, acquire: 20_000, idle: 60_000 },
-    // Sequelize deletes the connector's `meta` from result lists, which must therefore be an ordinary property.
-    dialectOptions: { connectTimeout: 5_000, allowPublicKeyRetrieval: false, metaEnumerable: true },
+    dialectOptions: { connectTimeout: 5_000, allowPublicKeyRetrieval: false },
     define: { timestamps: false, underscored: true, freezeTableName: true },
   })
   const pool = mariadb.createPool({

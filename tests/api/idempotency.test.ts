@@ -90,7 +90,7 @@ test('an answer with a secret is not kept: the repeat is told what to do, and no
   expect(second.status).toBe(409)
   expect(second.body.type).toBe('tag:heftwise.invalid,2026:secret-not-repeated')
   expect(await server.database.models.ApiKey.count({ where: { name: 'only one' } })).toBe(1)
-  const [rows] = await server.database.sequelize.query('SELECT * FROM idempotency_answers')
+  const rows = await server.database.pool.query('SELECT * FROM idempotency_answers')
   expect(JSON.stringify(rows)).not.toContain(first.body.secret)
 })
 
