@@ -60,6 +60,7 @@ export function createLink({
   signal: AbortSignal
 }): Link {
   const counters: LinkCounters = { predictions: 0, batches: { accepted: 0, rejected: 0, stored: 0 }, skipped: 0, failed: 0 }
+  const call = { signal, timeoutMs: 2000 }
   const queue: Entry[] = []
   const announced: Extract<Entry, { kind: 'event' }>[] = []
   let rows: LogRow[] = []
@@ -85,10 +86,10 @@ export function createLink({
         const { verdict } = await heftwise.adaptations.postBatch(
           adaptation,
           { ...place, ...toBatch(joints, entry.rows) },
-          { signal },
+          call,
         )
         counters.batches[verdict]++
-      } else await heftwise.adaptations.postEvent(adaptation, { ...place, ...entry.event }, { signal })
+      } else await heftwise.adaptations.postEvent(adaptation, { ...place, ...entry.event }, call)
       sequence += skipped + 1
       skipped = 0
       queue.shift()
@@ -100,12 +101,12 @@ export function createLink({
     const body = { joints, ...desiredStates(motion, times, size) }
     const flat = (torque: readonly (readonly number[])[]): Float64Array => Float64Array.from(torque.flat())
     if ('model' in source) {
-      const { torque } = await heftwise.predict(source.model, body, { signal })
+      const { torque } = await heftwise.predict(source.model, body, call)
       return { time: times, torque: flat(torque), expires: now + 1 }
     }
     // The motion's clock and the robot's differ by what the arm stood still for.
     const ahead = Array.from(times, (at) => Math.max(0, at - time + now - (asOf ?? now)))
-    const answer = await heftwise.adaptations.predict(source.adaptation, { ...body, ahead }, { signal })
+    const answer = await heftwise.adaptations.predict(source.adaptation, { ...body, ahead }, call)
     asOf = answer.as_of
     return { time: times, torque: flat(answer.torque), expires: answer.valid_until ?? now + 1 }
   }

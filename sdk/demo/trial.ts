@@ -2,6 +2,7 @@ import { alder7 } from '../../shared/simulation/alder-7.ts'
 import { CYCLE, createCell, nominalTorque, predictedTorque } from '../../shared/simulation/cell.ts'
 import { createFeedForward } from '../../shared/simulation/feed-forward.ts'
 import type { FeedForwardCounters } from '../../shared/simulation/feed-forward.ts'
+import { DemoError } from './connection.ts'
 import { REQUEST_EVERY } from './link.ts'
 import type { Link } from './link.ts'
 import type { Shift } from './scenario.ts'
@@ -10,6 +11,9 @@ const JOINTS = alder7.limits.length
 
 // What an answer takes on the simulated line where the simulation does not run in real time, s.
 const SIMULATED_LATENCY = 0.02
+
+// Exchanges in a row.
+const MOST_UNANSWERED = 5
 
 /** Root mean square errors of a trial, per joint, while a payload is carried and while not. */
 export interface TrialErrors {
@@ -62,6 +66,7 @@ export async function runTrial({ name, shift, seed, link, isRealtime, signal, on
   let carried: (typeof loads)[number] | undefined
   let next = 0
   let failure: unknown
+  let unanswered = 0
 
   function exchange(): Promise<void> {
     const [time, now] = [cell.motionTime, cell.now]
@@ -70,6 +75,9 @@ export async function runTrial({ name, shift, seed, link, isRealtime, signal, on
       .then(
         (horizon) => {
           if (horizon) feedForward!.accept(horizon, cell.motionTime, cell.now)
+        unanswered = horizon ? 0 : unanswered + 1
+        // A real cell falls back and waits; a run that nobody paces would only wait.
+        if (unanswered === MOST_UNANSWERED && !isRealtime) failure = new DemoError('Heftwise has stopped answering. Is it still running?')
         },
         (error: unknown) => {
           failure = error

@@ -16,7 +16,8 @@ afterEach(() => rmSync(folder, { recursive: true }))
 
 describe('where the demo finds the service', () => {
   it('is what the first start left in the data folder', () => {
-    writeFileSync(join(folder, 'demo-credentials.json'), JSON.stringify({ origin: 'http://127.0.0.1:8080', sign_ins: [], api_key: 'k' }))
+    const credentials = { origin: 'http://127.0.0.1:8080', sign_ins: [], api_key: 'k' }
+    writeFileSync(join(folder, 'demo-credentials.json'), JSON.stringify(credentials))
 
     expect(findAddress({ HEFTWISE_DATA_DIR: folder })).toEqual({ url: 'http://127.0.0.1:8080', key: 'k' })
     expect(findAddress({ HEFTWISE_DATA_DIR: folder, HEFTWISE_URL: 'http://other' })).toEqual({ url: 'http://other', key: 'k' })
@@ -43,7 +44,8 @@ describe('connecting', () => {
     const { port } = server.address() as AddressInfo
     await new Promise((resolve) => server.close(resolve))
 
-    await expect(connect({ url: `http://127.0.0.1:${port}`, key: 'k' }, 'alder-7', signal)).rejects.toThrow(/does not answer .* npm start/)
+    const url = `http://127.0.0.1:${port}`
+    await expect(connect({ url, key: 'k' }, 'alder-7', signal)).rejects.toThrow(/does not answer .* npm start/)
   })
 
   const answers: [number, RegExp][] = [
@@ -53,7 +55,8 @@ describe('connecting', () => {
   for (const [status, want] of answers) {
     it(`explains an answer of ${status}`, async () => {
       const server = createServer((_request, response) => {
-        response.writeHead(status, { 'content-type': 'application/problem+json' }).end(JSON.stringify({ type: 'x', title: 't', status, detail: 'd' }))
+        const problem = { type: 'x', title: 't', status, detail: 'd' }
+        response.writeHead(status, { 'content-type': 'application/problem+json' }).end(JSON.stringify(problem))
       }).listen(0, '127.0.0.1')
       await new Promise((resolve) => server.once('listening', resolve))
       const { port } = server.address() as AddressInfo

@@ -123,6 +123,13 @@ describe('a trial of the demo', () => {
     expect(late).toBe(0)
   })
 
+  it('ends with a sentence when the service stops answering', async () => {
+    const { heftwise } = createService({ left: Infinity, isStored: false })
+    const trial = { name: 'a', shift, seed: 1, link: open(heftwise), isRealtime: false, signal, onProgress: () => undefined }
+
+    await expect(runTrial(trial)).rejects.toThrow('Heftwise has stopped answering. Is it still running?')
+  })
+
   it('is as good without a service as the controller alone can be, and the same every time', async () => {
     const run = () => runTrial({ name: 'alone', shift, seed: 1, isRealtime: false, signal, onProgress: () => undefined })
     const [first, again] = [await run(), await run()]
