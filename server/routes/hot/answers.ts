@@ -26,10 +26,10 @@ export function answerPrediction(
 ): void {
   send(res, format, format === 'json'
     ? predictionJson(of, joints, rows, prediction, state)
-    : writeCbor(predictionObject(of, joints, rows, prediction, state)))
+    : writeCbor(predictionObject(of, joints, rows, prediction, state)).latin1Slice())
 }
 
-function predictionJson(of: Predicted, joints: JointOrder, rows: number, prediction: Prediction, state?: ServedState): Buffer {
+function predictionJson(of: Predicted, joints: JointOrder, rows: number, prediction: Prediction, state?: ServedState): string {
   const n = of.arm.jointNames.length
   writer.clear()
   writer.bytes(beginningOf(of, joints))
@@ -93,10 +93,10 @@ function inOrder<T>(values: ArrayLike<T>, { order }: JointOrder): T[] {
 /** Answers a batch, joints in the order in which the request named them. */
 export function answerBatch(res: Response, format: Format, result: BatchResult, arm: AdaptedArm, joints: JointOrder): void {
   const text = batchJson(result, arm, joints)
-  send(res, format, format === 'json' ? text : writeCbor(JSON.parse(text.toString())))
+  send(res, format, format === 'json' ? text : writeCbor(JSON.parse(Buffer.from(text, 'latin1').toString())).latin1Slice())
 }
 
-function batchJson(result: BatchResult, { jointNames }: AdaptedArm, joints: JointOrder): Buffer {
+function batchJson(result: BatchResult, { jointNames }: AdaptedArm, joints: JointOrder): string {
   const { revision, verdict, reasons, before, after, weights, stepNorm } = result
   const jointBefore = inOrder(result.jointBefore, joints)
   const jointAfter = result.jointAfter && inOrder(result.jointAfter, joints)
@@ -140,8 +140,9 @@ function numberOrNull(value: number | null): void {
   else writer.number(value)
 }
 
-function send(res: Response, format: Format, body: Buffer): void {
+/** The bytes go as a Latin-1 text, one character each: Node then writes head and body with one system call instead of two. */
+function send(res: Response, format: Format, bytes: string): void {
   res.setHeader('Content-Type', contentType(format))
-  res.setHeader('Content-Length', body.length)
-  res.end(body)
+  res.setHeader('Content-Length', bytes.length)
+  res.end(bytes, 'latin1')
 }

@@ -39,9 +39,9 @@ export class JsonWriter {
     this.#at = 0
   }
 
-  /** A copy of what was written. */
-  take(): Buffer {
-    return Buffer.from(this.#bytes.subarray(0, this.#at))
+  /** What was written, its UTF-8 bytes as one Latin-1 character each. */
+  take(): string {
+    return this.#view.latin1Slice(0, this.#at)
   }
 
   /** JSON text as it stands. */
