@@ -112,8 +112,9 @@ export function createRowPredictor(kernels: Kernels, version: Version, limits: A
       checkQuery(query, joints, into, ahead)
       kernels.predict(network, scales, query, query.rows, into.torque, { coverage, out: into.coverage })
       if (bias) addBias(bias, outputStd, ahead, query.rows, joints, into.torque)
-      clamp(limits, query, joints, into)
+      // Before clamping, which would hand out an overflow as the joint's full torque.
       if (!allFinite(into.torque, query.rows * joints)) throw outOfRange(query, normalisation, joints)
+      clamp(limits, query, joints, into)
     },
     release() {
       scales.free()
@@ -174,7 +175,7 @@ function clamp({ torque: bounds, torqueRate }: ArmLimits, { rows, time }: Predic
 }
 
 function allFinite(values: Float64Array, count: number): boolean {
-  // The sum of finite torques, each clamped to its limit, is finite.
+  // Torques that come from f32 are too small for their sum to overflow.
   let sum = 0
   for (let k = 0; k < count; k++) sum += values[k]
   return sum - sum === 0
