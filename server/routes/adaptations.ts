@@ -100,6 +100,7 @@ const guardNames = {
   torque_change: 'torqueChange',
   drift: 'drift',
   tolerance: 'tolerance',
+  tolerance_floor: 'toleranceFloor',
   excitation: 'excitation',
   gap_periods: 'gapPeriods',
   rejections_before_freeze: 'rejectionsBeforeFreeze',
