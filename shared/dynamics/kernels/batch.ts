@@ -89,7 +89,6 @@ export class LoadedBatch implements BatchHandle {
     if (rows <= this.#capacity) return
     if (this.#capacity > 0) this.arena.free(this.#address)
     const capacity = Math.max(16, 2 ** Math.ceil(Math.log2(rows)))
-    // Allocated zero: the padding of the rows is never written.
     this.#address = this.arena.allocate(capacity * (this.xStride + this.width))
     this.#capacity = capacity
   }

@@ -269,8 +269,7 @@ export class Kernels {
     if (predicted !== undefined) checkRoom('predicted', predicted.length, count * joints)
     const sums = this.#clearedSums(joints)
     const y = this.#scratch.room('y', count * width)
-    // Behind the input rows of that area, whose padding has to stay zero.
-    const work = this.#workFor(layout) + 4 * chunkRows * layout.inputStride
+    const work = this.#workFor(layout)
     this.#exports.squaredErrors(description, address, x, measured, count, work, joints, y, sums)
     for (let joint = 0; joint < joints; joint++) squares[joint] = this.#arena.f64[sums / 8 + joint] / count
     if (predicted !== undefined) this.#gather(y, width, joints, count, predicted)
@@ -388,8 +387,7 @@ export class Kernels {
     checkRoom('slope', slope.length, count * joints)
     checkRoom('weights', weights.length, joints)
     const dense = this.#scratch.room('x', 4 * count * joints)
-    // One area per width: its padding stays zero.
-    const y = this.#scratch.room(`predicted ${joints}`, count * width)
+    const y = this.#scratch.room('predicted', count * width)
     const out = this.#scratch.room('slope', count * width)
     copyIn(predicted, count * joints, this.#arena.f32, dense / 4)
     this.#exports.spread(dense, joints, count, y, width)
@@ -515,9 +513,9 @@ export class Kernels {
     return known
   }
 
-  /** Work area for evaluation, one per shape: the padding of its input rows was zero when made and is never written. */
+  /** Work area for evaluation. */
   #workFor(layout: PaddedNetwork): number {
-    return this.#scratch.room(layout, 4 * chunkRows * (layout.inputStride + layout.outputStride + 2 * layout.widestStride))
+    return this.#scratch.room('evaluate', 4 * chunkRows * (layout.inputStride + layout.outputStride + 2 * layout.widestStride))
   }
 
   #rowsOf(batch: BatchHandle, { from = 0, to = batch.rows }: RowRange): Rows {

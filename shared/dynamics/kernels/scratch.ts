@@ -1,19 +1,16 @@
 import type { Arena } from './arena.ts'
 
-/**
- * Work areas that calls share, one per use, grown when a call needs more. What an area held is lost when it grows; a new
- * one is zero.
- */
+/** Work areas that calls share, one per use, grown when a call needs more. What an area held is lost when it grows. */
 export class Scratch {
   readonly #arena: Arena
-  readonly #areas = new Map<unknown, { address: number; bytes: number }>()
+  readonly #areas = new Map<string, { address: number; bytes: number }>()
 
   constructor(arena: Arena) {
     this.#arena = arena
   }
 
   /** Address of an area of at least `bytes`, the same one for the same use. */
-  room(use: unknown, bytes: number): number {
+  room(use: string, bytes: number): number {
     const known = this.#areas.get(use)
     if (known !== undefined && known.bytes >= bytes) return known.address
     if (known !== undefined) this.#arena.free(known.address)

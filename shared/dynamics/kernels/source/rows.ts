@@ -12,10 +12,19 @@ function copyRow(from: usize, to: usize, bytes: usize): void {
   for (let at: usize = 0; at < bytes; at += 4) store<u32>(to + at, load<u32>(from + at))
 }
 
-/** Dense f32 rows → padded rows. The padding is left as it is: areas are cleared when they are made. */
+/** Zeros the last eight values of a padded row, which hold its padding; what belongs there is written after. */
+// @ts-ignore: decorator
+@inline
+function clearEnd(padded: usize, stride: usize): void {
+  v128.store(padded + stride - 32, f32x4.splat(0))
+  v128.store(padded + stride - 16, f32x4.splat(0))
+}
+
+/** Dense f32 rows → padded rows. */
 export function spread(dense: usize, width: i32, rows: i32, padded: usize, stride: usize): void {
   const bytes = <usize>width << 2
   for (let row = 0; row < rows; row++) {
+    clearEnd(padded, stride)
     copyRow(dense, padded, bytes)
     dense += bytes
     padded += stride
@@ -46,6 +55,7 @@ function normalisePart(values: usize, means: usize, stds: usize, width: i32, out
 export function normalise(dense: usize, scales: usize, width: i32, rows: i32, padded: usize, stride: usize): void {
   const bytes = <usize>width << 3
   for (let row = 0; row < rows; row++) {
+    clearEnd(padded, stride)
     normalisePart(dense, scales, scales + bytes, width, padded)
     dense += bytes
     padded += stride
@@ -63,6 +73,7 @@ export function normaliseMotion(
   const bytes = <usize>joints << 3
   const stds = scales + 3 * bytes
   for (let row = 0; row < rows; row++) {
+    clearEnd(x, stride)
     normalisePart(position, scales, stds, joints, x)
     normalisePart(velocity, scales + bytes, stds + bytes, joints, x + (bytes >> 1))
     normalisePart(acceleration, scales + 2 * bytes, stds + 2 * bytes, joints, x + bytes)
@@ -90,7 +101,7 @@ function denormalise(padded: usize, stride: usize, scales: usize, width: i32, ro
 /**
  * Dense normalised f32 rows in, dense f32 rows out.
  *
- * @param work  chunkRows × (padded inputs + padded outputs + twice the widest row), cleared when made
+ * @param work  chunkRows × (padded inputs + padded outputs + twice the widest row)
  */
 export function predictNormalised(
   net: usize, parameters: usize, x: usize, inputs: i32, rows: i32, work: usize, y: usize, outputs: i32,
