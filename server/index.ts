@@ -6,6 +6,7 @@ import { lockDataFolder } from './data-folder-lock.ts'
 import { databaseErrno, openDatabase } from './database/connection.ts'
 import { migrate } from './database/migrator.ts'
 import { startPrivateMariaDb } from './database/private-mariadb.ts'
+import { seedDemo } from './demo/seed.ts'
 import { demoCredentials, prepareDemo, recordSeeded } from './demo/team.ts'
 import { createDependencies, createLog, startDependencies, stopDependencies } from './dependencies.ts'
 import { createServices, startServices, stopServices } from './services/index.ts'
@@ -47,6 +48,10 @@ export async function run(): Promise<void> {
     undo.push(lockDataFolder(settings.dataFolder))
     // The port first: when it is taken, that is told at once. Until all is up, requests are asked to wait.
     const http = createServer(notReady)
+    // Longer than proxies and clients keep idle connections, so that none is closed just as a request is sent on it.
+    http.keepAliveTimeout = 75_000
+    // A recording of 200 MB over a slow line; headers still have a minute.
+    http.requestTimeout = 1_800_000
     await listen(http, settings)
     undo.push(() => drain(http))
     const { port } = http.address() as AddressInfo
@@ -66,11 +71,13 @@ export async function run(): Promise<void> {
 
     const seeder = await prepareDemo(d, services, origin)
     if (seeder) {
+      await seedDemo(services, seeder)
       await recordSeeded(d, seeder)
     }
     // Once more in reverse: requests end before the services that answer them.
     undo.push(() => drain(http))
     http.off('request', notReady).on('request', app)
+    await services.adaptations.announce(port)
     tell(settings, origin)
   } catch (error) {
     await stop()

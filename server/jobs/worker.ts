@@ -1,8 +1,6 @@
 import { setPriority } from 'node:os'
 import { parentPort, workerData } from 'node:worker_threads'
 import { Refusal } from '../../shared/contract/problems.ts'
-import { runFit } from './fit.ts'
-import { runMetaTrain } from './meta-train.ts'
 import { JobCancelled, type JobInput, type JobOutput, type JobReport, type WorkerMessage, type WorkerStart } from './worker-messages.ts'
 
 // On Linux a priority belongs to the thread that sets it (setpriority(2), notes); elsewhere it is the process's, which
@@ -22,13 +20,17 @@ const report: JobReport = {
   },
 }
 
-const handlers: { [K in JobInput['kind']]: (input: JobInput & { kind: K }, report: JobReport) => JobOutput | Promise<JobOutput> } = {
-  fit: runFit,
-  meta_train: runMetaTrain,
+type Handler<K extends JobInput['kind']> = (input: JobInput & { kind: K }, report: JobReport) => JobOutput | Promise<JobOutput>
+
+/** Loaded when needed: tfjs alone takes a second, and a meta-training has no use for it. */
+const handlers: { [K in JobInput['kind']]: () => Promise<Handler<K>> } = {
+  fit: async () => (await import('./fit.ts')).runFit,
+  meta_train: async () => (await import('./meta-train.ts')).runMetaTrain,
 }
 
 try {
-  const output = await (handlers[input.kind] as (input: JobInput, report: JobReport) => JobOutput | Promise<JobOutput>)(input, report)
+  const handler = (await handlers[input.kind]()) as (input: JobInput, report: JobReport) => JobOutput | Promise<JobOutput>
+  const output = await handler(input, report)
   send({ kind: 'done', output })
 } catch (error) {
   if (error instanceof JobCancelled) send({ kind: 'cancelled' })
