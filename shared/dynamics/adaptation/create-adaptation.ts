@@ -258,8 +258,10 @@ class Machine implements Adaptation {
     const pause = this.#longestPause(entry, next)
     const isSmall = rows < HOLD_OUT_ROWS
     this.#sumMotion(rows, motion)
-    this.#learner.predict(this.#learner.base, this.#rows, 0, rows, this.#base)
-    this.#sumErrors(this.#base, 0, rows, baseSums)
+    if (isSmall) {
+      this.#learner.predict(this.#learner.base, this.#rows, 0, rows, this.#base)
+      this.#sumErrors(this.#base, 0, rows, baseSums)
+    }
     const errorRows = isSmall && isFinite ? rows : 0
     if (isFinite) this.#enterWindow(next, entry.time[0], now, errorRows, rows)
     next.lastTime = now
@@ -287,7 +289,9 @@ class Machine implements Adaptation {
     const longest = settings.gapPeriods * this.#tipPeriod(next)
     if (given.pause > longest) return void (outcome.reasons = [reasons.gap(given.pause, longest)])
     if (!given.isFinite) return this.#reject(next, outcome, [reasons.notFinite('The prediction error')])
-    const implausible = judgePlausibility(this.#guard, entry.torque, this.#base, entry.rows, this.#scales.outputMean)
+    // Base where it is known anyway: a served state gone wrong must not make good torque look wrong.
+    const predicted = given.isSmall ? this.#base : this.#served
+    const implausible = judgePlausibility(this.#guard, entry.torque, predicted, entry.rows, this.#scales.outputMean)
     if (implausible) {
       next.windowEnd--
       return this.#reject(next, outcome, [implausible])
@@ -296,7 +300,7 @@ class Machine implements Adaptation {
     if (isProven) {
       const worse = this.#judgeWindow(entry, next)
       if (worse) {
-        this.#serveLastGood(next, entry.rows)
+        this.#serveLastGood(next)
         return this.#reject(next, outcome, [worse])
       }
     }
@@ -362,6 +366,7 @@ class Machine implements Adaptation {
     const before = meanOf(served, count)
     const after = meanOf(candidate, count)
     if (!(after < before)) found.push(reasons.noHelp(finiteOrMost(after), before))
+    this.#learner.predict(this.#learner.base, this.#rows, from, rows, this.#base)
     this.#sumErrors(this.#base, from, rows, base)
     const joint = worseJoint(this.#guard, { served: candidate, base, rows: count })
     if (joint >= 0) {
@@ -388,13 +393,17 @@ class Machine implements Adaptation {
   }
 
   /** Serves the last good state again, or base where this batch shows the last good one to be worse than base too. */
-  #serveLastGood(next: State, rows: number): void {
+  #serveLastGood(next: State): void {
     const { base } = this.#learner
+    const { rows } = this.#rows
+    const { candidate, base: baseSums } = this.#sums
     let { lastGood } = next
     if (lastGood !== base) {
-      this.#learner.predict(lastGood, this.#rows, 0, rows, this.#candidate)
-      this.#sumErrors(this.#candidate, 0, rows, this.#sums.candidate)
-      if (worseJoint(this.#guard, { served: this.#sums.candidate, base: this.#sums.base, rows }) >= 0) lastGood = base
+      for (const [learned, out, sums] of [[lastGood, this.#candidate, candidate], [base, this.#base, baseSums]] as const) {
+        this.#learner.predict(learned, this.#rows, 0, rows, out)
+        this.#sumErrors(out, 0, rows, sums)
+      }
+      if (worseJoint(this.#guard, { served: candidate, base: baseSums, rows }) >= 0) lastGood = base
     }
     this.#serveAgain(next, lastGood)
   }
@@ -437,7 +446,7 @@ class Machine implements Adaptation {
     next.rejections++
     if (next.rejections >= this.#guard.settings.rejectionsBeforeFreeze) {
       // A frozen state is served for long: it must be one that has shown itself good.
-      if (next.learned !== next.lastGood) this.#serveLastGood(next, this.#rows.rows)
+      if (next.learned !== next.lastGood) this.#serveLastGood(next)
       next.mode = {
         state: 'frozen', cause: 'rejections',
         reason: `${next.rejections} batches in a row were rejected, the last because: ${why[0].detail}`,

@@ -8,7 +8,7 @@ export interface GuardTable {
   readonly units: readonly string[]
   /** N·m per base standard deviation, length n. */
   readonly outputStd: Float64Array
-  /** Largest plausible distance of measured torque from base's, N·m, length n. */
+  /** Largest plausible distance of measured from predicted torque, N·m, length n. */
   readonly plausibleError: Float64Array
   /** One over the torque limit, length n: puts joints on one scale. */
   readonly inverseLimit: Float64Array
@@ -45,7 +45,7 @@ export function worseJoint({ settings, floorSquared }: GuardTable, { served, bas
 }
 
 /**
- * A measured torque further than this share of the joint's limit from base's prediction is a fault of the sensor, of the
+ * A measured torque further than this share of the joint's limit from the prediction is a fault of the sensor, of the
  * unit or of the order of joints. Payloads of 4 kg reach 0.25 on a simulated arm; an arm loaded beyond 0.75 has no reserve.
  */
 const PLAUSIBLE_ERROR = 0.75
@@ -76,35 +76,35 @@ export function createGuardTable({ version, settings, limits, jointNames, units 
 }
 
 /**
- * Whether measured torque can be what it says: within three quarters of each joint's limit of the base version's
- * prediction, and not opposed to it, as it is when a sign convention is wrong. The first reason against it, or null.
+ * Whether measured torque can be what it says: within three quarters of each joint's limit of the prediction, and not
+ * opposed to it, as it is when a sign convention is wrong. The first reason against it, or null.
  *
  * @param measured  rows × n, N·m
- * @param base  the base version's prediction, rows × n, base standard deviations
+ * @param predicted  rows × n, base standard deviations
  */
 export function judgePlausibility(
-  table: GuardTable, measured: Float64Array, base: Float64Array, rows: number, outputMean: Float64Array,
+  table: GuardTable, measured: Float64Array, predicted: Float64Array, rows: number, outputMean: Float64Array,
 ): Reason | null {
   const { plausibleError, inverseLimit, outputStd, noiseSquared } = table
   const joints = outputStd.length
   let product = 0
   let measuredSquared = 0
-  let baseSquared = 0
+  let expectedSquared = 0
   let noise = 0
   for (let k = 0, j = 0; k < rows * joints; k++, j = j + 1 === joints ? 0 : j + 1) {
-    const predicted = base[k] * outputStd[j] + outputMean[j]
-    const error = measured[k] - predicted
-    if (error > plausibleError[j] || error < -plausibleError[j]) return reasons.tooFar(table, j, measured[k], predicted)
+    const torque = predicted[k] * outputStd[j] + outputMean[j]
+    const error = measured[k] - torque
+    if (error > plausibleError[j] || error < -plausibleError[j]) return reasons.tooFar(table, j, measured[k], torque)
     const given = measured[k] * inverseLimit[j]
-    const expected = predicted * inverseLimit[j]
+    const expected = torque * inverseLimit[j]
     product += given * expected
     measuredSquared += given * given
-    baseSquared += expected * expected
+    expectedSquared += expected * expected
     noise += noiseSquared[j] * outputStd[j] * outputStd[j] * inverseLimit[j] * inverseLimit[j]
   }
   const telling = TELLING_NOISE * TELLING_NOISE * noise
-  if (measuredSquared < telling || baseSquared < telling) return null
-  const cosine = product / Math.sqrt(measuredSquared * baseSquared)
+  if (measuredSquared < telling || expectedSquared < telling) return null
+  const cosine = product / Math.sqrt(measuredSquared * expectedSquared)
   return cosine < LEAST_COSINE ? reasons.opposed(cosine) : null
 }
 
@@ -139,13 +139,13 @@ export const reasons = {
 
   tooFar: (table: GuardTable, joint: number, measured: number, predicted: number): Reason => {
     const [name, unit, bound] = [table.jointNames[joint], table.units[joint], table.plausibleError[joint]]
-    return reason('implausible', `${name}: a measured torque of ${shown(measured)} ${unit} lies further from the base version's ` +
+    return reason('implausible', `${name}: a measured torque of ${shown(measured)} ${unit} lies further from the predicted ` +
       `${shown(predicted)} ${unit} than ${shown(bound)} ${unit} (75 % of the joint's limit); check sensor, unit and order of joints.`,
       joint, Math.abs(measured - predicted), bound)
   },
 
   opposed: (found: number): Reason =>
-    reason('implausible', `Measured torque runs against what the base version predicts (cosine ${shown(found)}, least ` +
+    reason('implausible', `Measured torque runs against what is predicted (cosine ${shown(found)}, least ` +
       `${shown(LEAST_COSINE)}); check the sign convention and the order of joints.`, null, found, LEAST_COSINE),
 
   stepNorm: (found: number, bound: number): Reason =>
