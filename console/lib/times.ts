@@ -21,7 +21,8 @@ function subscribe(listener: () => void): () => void {
 
 export function useNow(): number {
   return useSyncExternalStore(subscribe, () => {
-    if (timer === undefined) now = Date.now()
+    // Without a listener the clock stands still; it may not move between two looks of one render.
+    if (timer === undefined && Date.now() - now > 1000) now = Date.now()
     return now
   })
 }

@@ -247,7 +247,7 @@ function Uprights({
           x2={px}
           y1={row === 1 ? 26 : 12}
           y2={axis}
-          className={entry.entry === 'event' ? 'stroke-soft' : 'stroke-stop'}
+          className={entry.command === 'freeze' ? 'stroke-stop' : 'stroke-soft'}
           strokeDasharray={entry.entry === 'event' ? '4 3' : undefined}
         />
         {row >= 0 && (
@@ -255,7 +255,7 @@ function Uprights({
             x={turned ? px - 4 : px + 4}
             y={row === 1 ? 30 : 14}
             textAnchor={turned ? 'end' : 'start'}
-            className={`stroke-paper text-11 [paint-order:stroke] [stroke-width:3] ${entry.entry === 'event' ? 'fill-soft' : 'fill-stop'}`}
+            className={`stroke-paper text-11 [paint-order:stroke] [stroke-width:3] ${entry.command === 'freeze' ? 'fill-stop' : 'fill-soft'}`}
           >
             {words}
           </text>

@@ -12,10 +12,10 @@ interface Row {
   codes: Code[]
 }
 
-const share = (value: number | undefined, of: string) =>
+const share = (value: number | undefined, of?: string) =>
   value === undefined ? undefined : (
-    <span className="num">
-      {percent(value, 0)} <span className="text-12 text-soft">{of}</span>
+    <span className="whitespace-nowrap">
+      <span className="num">{percent(value, 0)}</span> {of && <span className="text-12 text-soft">{of}</span>}
     </span>
   )
 
@@ -30,7 +30,9 @@ function guards(adaptation: Adaptation, newest: LogEntry | undefined): Row[] {
     },
     { name: 'Torque change by a step', bound: share(guard.torque_change, 'of limit'), codes: ['torque_change'] },
     { name: 'Distance from base', bound: share(guard.drift, 'of limit'), codes: ['drift'] },
-    { name: 'Worse than base, unseen data', bound: share(guard.tolerance, ''), codes: ['worse_than_base', 'no_help'] },
+    { name: 'Better on unseen rows', bound: <span className="text-12 text-soft">less error</span>, codes: ['no_help'] },
+    { name: 'Worse than base', bound: share(guard.tolerance), codes: ['worse_than_base'] },
+    { name: 'Torque of a plausible sign', bound: <span className="text-12 text-soft">as base</span>, codes: ['implausible'] },
     { name: 'Least motion', bound: <Quantity value={guard.excitation} unit="std" />, codes: ['excitation'] },
     { name: 'Longest gap', bound: <Quantity value={guard.gap_periods} unit="periods" digits={2} />, codes: ['gap'] },
     {
@@ -90,10 +92,7 @@ export function GuardPanel({ adaptation, history }: { adaptation: Adaptation; hi
                   {last && <span className="block text-12 text-soft">last: {last.detail}</span>}
                 </th>
                 <td className={`${cell} text-right`}>{row.bound ?? '–'}</td>
-                <td className={`${cell} text-right`}>
-                  {row.newest ??
-                    (last?.found === undefined ? <span className="text-soft">–</span> : <Quantity value={last.found} />)}
-                </td>
+                <td className={`${cell} text-right`}>{row.newest ?? <span className="text-soft">–</span>}</td>
                 <td className={`${cell} num text-right ${times > 0 ? 'font-semibold text-load' : 'text-soft'}`}>
                   {row.codes.length === 0 ? '' : times}
                 </td>

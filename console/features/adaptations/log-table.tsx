@@ -3,7 +3,7 @@ import { Button, TextLink } from '../../components/button.tsx'
 import { Filter } from '../../components/field.tsx'
 import { Quantity } from '../../components/quantity.tsx'
 import { Section } from '../../components/page.tsx'
-import { Stamp } from '../../components/stamp.tsx'
+import { Stamp, type MarkName, type Tone } from '../../components/stamp.tsx'
 import { Empty, Failed, SkeletonRows } from '../../components/states.tsx'
 import { TimeAgo } from '../../components/time-ago.tsx'
 import { counted } from '../../lib/numbers.ts'
@@ -99,11 +99,25 @@ function kindOf(item: LogEntry) {
         {eventWords(item)}
       </Stamp>
     )
+  const [tone, mark] = commandLook(item)
   return (
-    <Stamp tone="stop" mark="pause">
+    <Stamp tone={tone} mark={mark}>
       {commandWords(item)}
     </Stamp>
   )
+}
+
+function commandLook(item: LogEntry): [Tone, MarkName] {
+  switch (item.command) {
+    case 'resume':
+      return ['live', 'wave']
+    case 'reset':
+      return ['ink', 'ring']
+    case 'end':
+      return ['soft', 'bar']
+    default:
+      return ['stop', 'pause']
+  }
 }
 
 function detailOf(id: string, item: LogEntry) {
