@@ -62,7 +62,11 @@ function evaluations(rows: number): Timed[] {
     { name: `forward ${rows} tanh`, calls, run: () => kernels.forward(tanh, single, rows, y) },
     { name: `predict ${rows} relu`, calls, run: () => kernels.predict(relu, normalisation, motion, rows, torque) },
     { name: `predict ${rows} tanh`, calls, run: () => kernels.predict(tanh, normalisation, motion, rows, torque) },
-    { name: `predict ${rows} relu, coverage`, calls, run: () => kernels.predict(relu, normalisation, motion, rows, torque, cover) },
+    {
+      name: `predict ${rows} relu, coverage`,
+      calls,
+      run: () => kernels.predict(relu, normalisation, motion, rows, torque, cover),
+    },
     { name: `reference forward ${rows} relu`, calls, run: () => forward(pass, theta, x, rows, exact) },
     { name: `reference forward ${rows} tanh`, calls, run: () => forward(tanhPass, theta, x, rows, exact) },
   ]
@@ -80,18 +84,21 @@ function steps(): Timed[] {
   const moments = kernels.createMoments(candidate)
   const squares = new Float64Array(joints)
   const settings = { scheme: 'all', rate: 1e-6 } as const
-  const [x, measured, predicted, slope] = [values(rows * inputs), values(rows * joints), values(rows * joints), values(rows * joints)]
+  const whole = { ...settings, rowsPerStep: 64 }
+  const fours = { ...settings, rowsPerStep: 4 }
+  const x = values(rows * inputs)
+  const [measured, predicted, slope] = [1, 2, 3].map(() => values(rows * joints))
   const pass = createNetworkPass(shape, rows)
   const exactLoss = lossKinds.state_dependent.create(lossShape, rows)
   const gradient = new Float64Array(parameterCount(shape))
   const exactTheta = theta.slice()
   return [
-    { name: 'step 64 sgd relu', calls, run: () => kernels.step(candidate, loss, batch, { ...settings, rowsPerStep: 64 }) },
-    { name: 'step 64 sgd tanh', calls, run: () => kernels.step(tanhCandidate, loss, batch, { ...settings, rowsPerStep: 64 }) },
-    { name: 'step 64 adam relu', calls, run: () => kernels.step(candidate, loss, batch, { ...settings, rowsPerStep: 64, moments }) },
-    { name: '16 steps of 4 sgd relu', calls, run: () => kernels.step(candidate, loss, batch, { ...settings, rowsPerStep: 4 }) },
-    { name: '16 steps of 4 adam relu', calls, run: () => kernels.step(candidate, loss, batch, { ...settings, rowsPerStep: 4, moments }) },
-    { name: 'one step of 4 sgd relu', calls, run: () => kernels.step(candidate, loss, batch, { ...settings, rowsPerStep: 4, to: 4 }) },
+    { name: 'step 64 sgd relu', calls, run: () => kernels.step(candidate, loss, batch, whole) },
+    { name: 'step 64 sgd tanh', calls, run: () => kernels.step(tanhCandidate, loss, batch, whole) },
+    { name: 'step 64 adam relu', calls, run: () => kernels.step(candidate, loss, batch, { ...whole, moments }) },
+    { name: '16 steps of 4 sgd relu', calls, run: () => kernels.step(candidate, loss, batch, fours) },
+    { name: '16 steps of 4 adam relu', calls, run: () => kernels.step(candidate, loss, batch, { ...fours, moments }) },
+    { name: 'one step of 4 sgd relu', calls, run: () => kernels.step(candidate, loss, batch, { ...fours, to: 4 }) },
     { name: 'load 64', calls, run: () => batch.load(normalisation, motion, torque, rows) },
     { name: 'errors 64', calls, run: () => kernels.errors(candidate, batch, {}, squares) },
     { name: 'copy of a network', calls, run: () => candidate.copyFrom(relu) },
@@ -164,7 +171,8 @@ for (let round = 0; round < rounds; round++) {
 }
 const median = (name: string) => times.get(name)!.sort((a, b) => a - b)[rounds >> 1]
 for (const { name } of timed) {
-  const reference = times.has(`reference ${name}`) ? `   ${(median(`reference ${name}`) / median(name)).toFixed(1)} × faster than the reference` : ''
+  const factor = times.has(`reference ${name}`) ? (median(`reference ${name}`) / median(name)).toFixed(1) : undefined
+  const reference = factor === undefined ? '' : `   ${factor} × faster than the reference`
   console.log(`${name.padEnd(30)} ${median(name).toFixed(2).padStart(11)} µs${reference}`)
 }
 const ratio = (name: string) => (median(name) / median('512 × 512 product')).toFixed(4)

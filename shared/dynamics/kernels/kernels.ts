@@ -378,7 +378,8 @@ export class Kernels {
    * @throws {ShapeError} an array is too short, or loss and batch are not of one arm
    */
   predictionGradient(
-    loss: LossHandle, batch: BatchHandle, range: RowRange, predicted: ArrayLike<number>, slope: Float32Array, weights: Float64Array,
+    loss: LossHandle, batch: BatchHandle, range: RowRange, predicted: ArrayLike<number>, slope: Float32Array,
+    weights: Float64Array,
   ): void {
     const rows = this.#rowsOf(batch, range)
     const { count, joints, width } = rows
@@ -461,7 +462,8 @@ export class Kernels {
         this.#arena.f32.fill(0, phiGradient.address / 4, phiGradient.address / 4 + phiGradient.layout.blockCount)
       }
       this.#exports.metaGradient(
-        description, network.address, loss.address, x, measured, steps, rowsPerStep, from, rate, work, phiGradient?.address ?? 0, sums,
+        description, network.address, loss.address, x, measured, steps, rowsPerStep, from, rate, work,
+        phiGradient?.address ?? 0, sums,
       )
       if (phiGradient !== undefined) readBlock(phiGradient.layout, this.#arena.f32, phiGradient.address / 4, gradient)
       gradient[loss.parameterCount] = this.#arena.f64[sums / 8 + 1]
@@ -598,5 +600,7 @@ function checkNetwork(layout: PaddedNetwork, { inputs, joints }: Rows): void {
 
 function checkLoss(shape: LossShape, { inputs, joints }: { inputs: number; joints: number }): void {
   if (shape.inputs === inputs && shape.joints === joints) return
-  throw new ShapeError(`The loss is for ${shape.inputs} inputs and ${shape.joints} joints; the rows have ${inputs} and ${joints}.`)
+  throw new ShapeError(
+    `The loss is for ${shape.inputs} inputs and ${shape.joints} joints; the rows have ${inputs} and ${joints}.`,
+  )
 }

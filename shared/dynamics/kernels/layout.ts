@@ -71,7 +71,10 @@ export function layOut(shape: NetworkShape): PaddedNetwork {
   const outputStride = padded(last.outputs)
   const widestStride = Math.max(...layers.map(({ stride }) => stride))
   description.set(
-    [places.length, shape.activation === 'tanh' ? 1 : 0, 4 * at, 4 * inputStride, 4 * tapeStride, 4 * widestStride, 4 * outputStride],
+    [
+      places.length, shape.activation === 'tanh' ? 1 : 0, 4 * at, 4 * inputStride, 4 * tapeStride, 4 * widestStride,
+      4 * outputStride,
+    ],
     0,
   )
   return {

@@ -29,15 +29,15 @@ describe('coverage beside a prediction', () => {
       const part = (seed: number) => numbers(seed, rows * joints).map((value, k) => value * (0.5 + (k % 5) / 2))
       const motion = { position: part(3), velocity: part(4), acceleration: part(5) }
       const out = new Float64Array(rows)
+      const coverage = kernels.loadCoverage(statistics)
 
-      kernels.predict(
-        network, normalisation, motion, rows, new Float64Array(rows * joints), { coverage: kernels.loadCoverage(statistics), out },
-      )
+      kernels.predict(network, normalisation, motion, rows, new Float64Array(rows * joints), { coverage, out })
 
       const prepared = prepareCoverage(statistics, 3 * joints)
       const want = Array.from({ length: rows }, (_, row) => {
         const of = (values: Float64Array) => [...values.subarray(row * joints, (row + 1) * joints)]
-        return coverageOfRow(prepared, Float64Array.from([...of(motion.position), ...of(motion.velocity), ...of(motion.acceleration)]))
+        const { position, velocity, acceleration } = motion
+        return coverageOfRow(prepared, Float64Array.from([...of(position), ...of(velocity), ...of(acceleration)]))
       })
       expect([...out]).toEqual(want)
     },

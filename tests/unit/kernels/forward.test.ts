@@ -1,6 +1,8 @@
 import { describe, expect, it } from 'vitest'
 import { createKernels } from '../../../shared/dynamics/kernels/kernels.ts'
-import { createNetworkPass, forward, initialParameters, parameterCount, type NetworkShape } from '../../../shared/dynamics/network.ts'
+import {
+  createNetworkPass, forward, initialParameters, parameterCount, type NetworkShape,
+} from '../../../shared/dynamics/network.ts'
 import { createRandom } from '../../../shared/dynamics/random.ts'
 import { numbers } from './numbers.ts'
 
@@ -108,7 +110,8 @@ describe('predict', () => {
       })
     }
     const y = kernels.forward(network, x, rows, new Float32Array(rows * 7))
-    expect([...torque]).toEqual([...y].map((value, k) => value * normalisation.outputStd[k % 7] + normalisation.outputMean[k % 7]))
+    const { outputStd, outputMean } = normalisation
+    expect([...torque]).toEqual([...y].map((value, k) => value * outputStd[k % 7] + outputMean[k % 7]))
   })
 
   it('takes what was written into the motion area', () => {
@@ -133,7 +136,8 @@ describe('predict', () => {
     const handle = kernels.loadNormalisation(normalisation)
 
     expect(() => kernels.predict(network, handle, motion(1), 1, new Float64Array(7))).toThrow(/6 inputs.*7 joints/)
-    expect(() => kernels.loadNormalisation({ ...normalisation, inputStd: new Float64Array(21) })).toThrow(/inputStd: value 0 is 0/)
+    const zero = { ...normalisation, inputStd: new Float64Array(21) }
+    expect(() => kernels.loadNormalisation(zero)).toThrow(/inputStd: value 0 is 0/)
   })
 })
 

@@ -14,7 +14,8 @@ const cases = names.flatMap((loss, index) =>
       (['all', 'last_layer'] as NetworkScheme[]).map((scheme, shift) => {
         const joints = 1 + ((index * 2 + third * 3 + offset + shift * 5) % 7)
         const hidden = [[5], [17, 5], [64, 64]][(joints + shift) % 3]
-        return { loss, positive, activation, scheme, joints, hidden, steps: [1, 4, 15][(index + offset) % 3], rowsPerStep: [4, 3, 6][third + shift] }
+        const steps = [1, 4, 15][(index + offset) % 3]
+        return { loss, positive, activation, scheme, joints, hidden, steps, rowsPerStep: [4, 3, 6][third + shift] }
       }),
     ),
   ),
@@ -73,7 +74,8 @@ describe('the hypergradient of the kernels', () => {
   })
 
   it('is the same to the bit in two instances and when asked again', () => {
-    const { shape, stretch, theta, learned } = setUp(cases.find(({ loss, scheme }) => loss === 'state_dependent' && scheme === 'all')!)
+    const given = cases.find(({ loss, scheme }) => loss === 'state_dependent' && scheme === 'all')!
+    const { shape, stretch, theta, learned } = setUp(given)
     const [first, second] = [createKernelMetaGradient(createKernels(), shape), createKernelMetaGradient(createKernels(), shape)]
     const results = [first, second, first].map((fast) => {
       const gradient = new Float64Array(fast.learnedCount)

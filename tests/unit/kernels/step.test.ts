@@ -301,7 +301,9 @@ describe('errors', () => {
     const { predicted } = reference('mse', 'all', start, rows)
     const want = new Float64Array(6)
     for (let row = 2; row < 40; row++) {
-      for (let joint = 0; joint < 6; joint++) want[joint] += (start.measured[row * 6 + joint] - predicted[row * 6 + joint]) ** 2 / 38
+      for (let joint = 0; joint < 6; joint++) {
+        want[joint] += (start.measured[row * 6 + joint] - predicted[row * 6 + joint]) ** 2 / 38
+      }
     }
     expect(furthest(squares, want)).toBeLessThan(relative * largest(want))
   })

@@ -37,8 +37,13 @@ export function coverage(
     }
     const whitening = statistics + (<usize>(1 + 3 * channels) << 3)
     // A block of one or two costs more than those rows alone; lanes without a row hold what was there before.
-    if (count > 2) finishBlock(statistics, whitening, channels, work, inside)
-    else for (let row = 0; row < count; row++) finishRow(statistics, whitening, channels, work + (<usize>row << 3), inside + (<usize>row << 3))
+    if (count > 2) {
+      finishBlock(statistics, whitening, channels, work, inside)
+    } else {
+      for (let lane: usize = 0; lane < <usize>count << 3; lane += 8) {
+        finishRow(statistics, whitening, channels, work + lane, inside + lane)
+      }
+    }
     for (let row = 0; row < count; row++, out += 8) store<f64>(out, load<f64>(inside + (<usize>row << 3)))
     rows -= count
   }

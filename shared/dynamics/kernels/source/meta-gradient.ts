@@ -42,8 +42,8 @@ export function metaGradientWorkBytes(net: usize, loss: usize, steps: i32, rowsP
  * @param sums  out, f64: outer error, ∂outer/∂ln(step size)
  */
 export function metaGradient(
-  net: usize, theta: usize, loss: usize, x: usize, measured: usize, steps: i32, rowsPerStep: i32, from: i32, rate: f32, work: usize,
-  phiGradient: usize, sums: usize,
+  net: usize, theta: usize, loss: usize, x: usize, measured: usize, steps: i32, rowsPerStep: i32, from: i32, rate: f32,
+  work: usize, phiGradient: usize, sums: usize,
 ): void {
   const count = parameterBytes(net)
   const start = weightsOf(layerAt(net, from))
@@ -127,7 +127,8 @@ export function metaGradient(
       )
     } else {
       unstructuredSecondOrder(
-        loss, pairTapes + <usize>t * pairTapeBytes, sumTangents + top, width, rows, share, pairWork, slopeTangents + top, phiGradient,
+        loss, pairTapes + <usize>t * pairTapeBytes, sumTangents + top, width, rows, share, pairWork, slopeTangents + top,
+        phiGradient,
       )
     }
     if (t == 0) break

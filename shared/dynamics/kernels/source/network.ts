@@ -5,7 +5,8 @@ import { addOuter, multiplyAdd, multiplyTransposed } from './products'
 //   0 layers   4 activation (0 relu, 1 tanh)   8 bytes of its parameters   12 bytes of an input row
 //   16 bytes of all layers' outputs for one row   20 bytes of the widest row   24 bytes of an output row
 //   32 + 32 · layer: 0 depth (padded inputs, values)  4 bytes of an output row  8 offset of W  12 offset of b, both in bytes
-//                    16 bytes of the outputs of the layers before it, for one row  20 inputs  24 outputs  28 bytes of an input row
+//                    16 bytes of the outputs of the layers before it, for one row   20 inputs   24 outputs
+//                    28 bytes of an input row
 
 // @ts-ignore: decorator
 @inline
@@ -149,7 +150,8 @@ export function backward(
       addOuter(input, xStrideOf(at), inputsOf(at), own, width, rows, gradient + weightsOf(at), gradient + biasesOf(at))
     }
     if (layer == from) {
-      if (xGradient) multiplyTransposed(own, width, parameters + weightsOf(at), depthOf(at), rows, xGradient, xStrideOf(at), false)
+      const weights = parameters + weightsOf(at)
+      if (xGradient) multiplyTransposed(own, width, weights, depthOf(at), rows, xGradient, xStrideOf(at), false)
       return
     }
     const below = intoLayer(net, layer, 0, slopes, rows)
@@ -218,7 +220,8 @@ export function addBackwardTangent(
     if (inputTangent) addOuter(inputTangent, stride, inputsOf(at), slopes + offset, width, rows, sum + weights, 0)
     if (layer == from) {
       if (xGradientTangent) {
-        multiplyTransposed(slopeTangents + offset, width, parameters + weights, depthOf(at), rows, xGradientTangent, stride, false)
+        const own = slopeTangents + offset
+        multiplyTransposed(own, width, parameters + weights, depthOf(at), rows, xGradientTangent, stride, false)
       }
       return
     }

@@ -51,7 +51,7 @@ function normalisePart(values: usize, means: usize, stds: usize, width: i32, out
   }
 }
 
-/** Dense f64 rows of a width, normalised → padded f32 rows. Means and standard deviations: `width` f64 each, one after the other. */
+/** Dense f64 rows, normalised → padded f32 rows. Scales: `width` means, then as many standard deviations, f64. */
 export function normalise(dense: usize, scales: usize, width: i32, rows: i32, padded: usize, stride: usize): void {
   const bytes = <usize>width << 3
   for (let row = 0; row < rows; row++) {

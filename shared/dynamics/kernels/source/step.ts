@@ -128,8 +128,8 @@ export function applySteps(
 
 /** Loss weights of rows, as after a step: adds to the sums. net = 0: the prediction is given, else it is computed here. */
 export function addLossSums(
-  net: usize, parameters: usize, loss: usize, x: usize, xStride: usize, measured: usize, predicted: usize, width: usize, rows: i32,
-  work: usize, slope: usize, sums: usize,
+  net: usize, parameters: usize, loss: usize, x: usize, xStride: usize, measured: usize, predicted: usize, width: usize,
+  rows: i32, work: usize, slope: usize, sums: usize,
 ): void {
   const share = shareOf(loss, rows)
   while (rows > 0) {
