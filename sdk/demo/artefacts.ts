@@ -24,7 +24,16 @@ import { alder7Arm, demoRecordings, scenario } from './scenario.ts'
 const folder = join(import.meta.dirname, '../../server/demo/artefacts')
 
 // All recordings teach; so many of each kind are kept in the repository, for the console's lists and for trying jobs.
-const kept: Record<string, number> = { slow: 1, unloaded: 3, loaded: 4, validation: 2, evaluation: 2, 'grip-release': 1 }
+const kept: Record<string, number> = {
+  slow: 1,
+  unloaded: 3,
+  loaded: 4,
+  switching: 2,
+  validation: 2,
+  'validation-switching': 1,
+  evaluation: 2,
+  'grip-release': 1,
+}
 
 const recordings = demoRecordings().map((recording) => {
   const made = recording.make()
@@ -72,9 +81,7 @@ function learnLoss({ version: { description, parameters } }: FitResult): MetaTra
     const { value, done } = steps.next()
     if (done) return value
     if (value.phase === 'updates' && value.validation !== undefined) {
-      say(
-        `loss: update ${value.update} of ${value.updates}, next-batch error ${value.validation.toPrecision(3)} on validation`,
-      )
+      say(`loss: update ${value.update} of ${value.updates}, next-batch error ${value.validation.toPrecision(3)} on validation`)
     }
   }
 }

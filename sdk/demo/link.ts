@@ -83,11 +83,7 @@ export function createLink({
       const [entry] = queue
       const place = { sequence: sequence + skipped, skipped }
       if (entry.kind === 'batch') {
-        const { verdict } = await heftwise.adaptations.postBatch(
-          adaptation,
-          { ...place, ...toBatch(joints, entry.rows) },
-          call,
-        )
+        const { verdict } = await heftwise.adaptations.postBatch(adaptation, { ...place, ...toBatch(joints, entry.rows) }, call)
         counters.batches[verdict]++
       } else await heftwise.adaptations.postEvent(adaptation, { ...place, ...entry.event }, call)
       sequence += skipped + 1

@@ -65,28 +65,27 @@ async function main(signal: AbortSignal): Promise<void> {
   const shift = planShift(seconds, seed)
   const carried = shift.loads.map(({ payload }) => `${payload.mass} kg`).join(', then ')
   console.log(CAUTION)
-  console.log(
-    `\n${robot} works for ${seconds} s and carries ${carried}; nobody tells the service how much.`,
-  )
+  console.log(`\n${robot} works for ${seconds} s and carries ${carried}; nobody tells the service how much.`)
 
   const { live_version: version } = await heftwise.models.get(scenario.model, { signal })
-  if (version === null)
-    throw new DemoError(`Model ${scenario.model} has no live version. Release one in the console, then try again.`)
+  if (version === null) throw new DemoError(`Model ${scenario.model} has no live version. Release one in the console, then try again.`)
   const mseRobot = `${robot} (mse)`
   await endEarlier(heftwise, [robot, mseRobot], signal)
-  const adapt = (loss: Schemas['NewAdaptation']['loss'], of: string): Promise<Schemas['Adaptation']> =>
+  const { loss, mseRate } = await findLoss(heftwise, signal)
+  const adapt = (settings: Pick<Schemas['NewAdaptation'], 'loss' | 'robot' | 'update'>): Promise<Schemas['Adaptation']> =>
     heftwise.adaptations.create(
       {
         model: scenario.model,
-        version,
-        loss,
-        robot: of,
+        // A loss belongs to the version it was learned for, whichever is live.
+        version: loss.base_version,
         context: { tool: 'flat gripper', payload_class: '0.8 to 3 kg' },
-        scheme: 'all',
+        scheme: loss.scheme,
+        ...settings,
       },
       { signal },
     )
-  const [mse, learned] = [await adapt('mse', mseRobot), await adapt({ name: scenario.loss }, robot)]
+  const mse = await adapt({ loss: 'mse', robot: mseRobot, ...(mseRate && { update: { kind: 'sgd', rate: mseRate } }) })
+  const learned = await adapt({ loss: { name: scenario.loss, version: loss.version }, robot })
 
   const trials: { name: string; source?: Source }[] = [
     { name: 'without Heftwise' },
@@ -95,44 +94,56 @@ async function main(signal: AbortSignal): Promise<void> {
     { name: 'adapting, learned loss', source: { adaptation: learned.id } },
   ]
   const progress = createProgress(seconds)
+  // One that fails ends the others.
+  const failed = new AbortController()
+  const anyEnd = AbortSignal.any([signal, failed.signal])
   const start = (trial: (typeof trials)[number], index: number): Promise<TrialResult> =>
     runTrial({
       name: trial.name,
       shift: planShift(seconds, seed),
       seed,
       isRealtime,
-      signal,
+      signal: anyEnd,
       onProgress: (now) => progress.report(index, now),
       link:
         trial.source &&
-        createLink({ heftwise, joints, source: trial.source, motion: shift.motion, size: alder7.limits.length, signal }),
+        createLink({ heftwise, joints, source: trial.source, motion: shift.motion, size: alder7.limits.length, signal: anyEnd }),
+    }).catch((error: unknown) => {
+      failed.abort()
+      throw error
     })
   // Side by side: at a real cell's pace one after the other would take four times as long.
   const results = await Promise.all(trials.map(start))
   progress.end()
 
   if (signal.aborted) console.log('Stopped. The table covers what ran until then.')
-  console.log(
-    `\n${formatResults(
-      results,
-      alder7.nominal.joints.map(({ name }) => name),
-    )}\n`,
-  )
+  const jointNames = alder7.nominal.joints.map(({ name }) => name)
+  console.log(`\n${formatResults(results, jointNames)}\n`)
   console.log(`Without Heftwise the controller feeds forward its published rigid-body model: no friction, no payload.`)
   console.log(`Both adaptations go on living in the console: ${address.url}`)
 }
 
+// The newest version of the demo's loss, and the rate that plain squared error was found best with on the same recordings.
+async function findLoss(
+  heftwise: Heftwise,
+  signal: AbortSignal,
+): Promise<{ loss: Schemas['LossVersion']; mseRate: number | undefined }> {
+  const { newest_version: newest } = await heftwise.losses.get(scenario.loss, { signal })
+  if (newest === null) throw new DemoError(`Loss ${scenario.loss} has no version. Meta-train one in the console, then try again.`)
+  const loss = await heftwise.losses.version(scenario.loss, newest, { signal })
+  return { loss, mseRate: loss.validation.find(({ name }) => name === 'mse, sgd')?.rate }
+}
+
 // One run's adaptations are enough on the overview: those of an earlier run are ended, their logs stay.
 async function endEarlier(heftwise: Heftwise, robots: readonly string[], signal: AbortSignal): Promise<void> {
+  const earlier: string[] = []
   for (const robot of robots) {
     for (const state of ['adapting', 'frozen'] as const) {
-      for await (const { id } of everyItem((cursor) =>
-        heftwise.adaptations.list({ robot, model: scenario.model, state, cursor, signal }),
-      )) {
-        await heftwise.adaptations.end(id, 'The demo starts again', { signal })
-      }
+      const page = (cursor: string | undefined) => heftwise.adaptations.list({ robot, model: scenario.model, state, cursor, signal })
+      for await (const { id } of everyItem(page)) earlier.push(id)
     }
   }
+  for (const id of earlier) await heftwise.adaptations.end(id, 'The demo starts again', { signal })
 }
 
 function createProgress(seconds: number): { report(index: number, now: number): void; end(): void } {

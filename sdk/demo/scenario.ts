@@ -123,8 +123,11 @@ export function demoRecordings(): DemoRecording[] {
   }
   add('slow', 6, 'fit', 60, false)
   add('unloaded', 30, 'fit', 30, false)
-  add('loaded', 24, 'meta_train', 30, true)
+  add('loaded', 20, 'meta_train', 30, true)
+  add('switching', 10, 'meta_train', 30, true, true)
   add('validation', 3, 'validate', 30, true)
+  // Rates that are good while a payload is carried can be too high for the moment it is gripped.
+  add('validation-switching', 3, 'validate', 30, true, true)
   add('evaluation', 2, 'evaluate', 30, true)
   add('grip-release', 1, 'evaluate', 30, true, true)
   return list

@@ -75,9 +75,10 @@ export async function runTrial({ name, shift, seed, link, isRealtime, signal, on
       .then(
         (horizon) => {
           if (horizon) feedForward!.accept(horizon, cell.motionTime, cell.now)
-        unanswered = horizon ? 0 : unanswered + 1
-        // A real cell falls back and waits; a run that nobody paces would only wait.
-        if (unanswered === MOST_UNANSWERED && !isRealtime) failure = new DemoError('Heftwise has stopped answering. Is it still running?')
+          unanswered = horizon ? 0 : unanswered + 1
+          // A real cell falls back and waits; a run that nobody paces would only wait.
+          if (unanswered === MOST_UNANSWERED && !isRealtime)
+            failure = new DemoError('Heftwise has stopped answering. Is it still running?')
         },
         (error: unknown) => {
           failure = error
