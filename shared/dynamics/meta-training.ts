@@ -2,7 +2,7 @@ import { exp } from './elementary.ts'
 import { lossKinds, type LossName, type LossShape } from './losses/index.ts'
 import { createMetaGradient, type ChainShape, type MetaGradient, type Scheme, type Stretch } from './meta-gradient.ts'
 import type { NormalisedMotion } from './motion.ts'
-import { meanNextBatchError, predictMotion, type AdaptationRule, type Base } from './prequential.ts'
+import { meanNextBatchError, predictMotion, type AdaptationRule, type Base, type NextBatchMeasure } from './prequential.ts'
 import { createRandom, type Random } from './random.ts'
 import { adam } from './updates/adam.ts'
 import type { UpdateName } from './updates/index.ts'
@@ -26,6 +26,8 @@ export interface MetaTrainingOptions {
   readonly seed: number
   /** Computes the hypergradient; the double-precision reference unless given. */
   readonly createMetaGradient?: (shape: ChainShape) => MetaGradient
+  /** Measures next-batch errors; the double-precision reference unless given. */
+  readonly measure?: NextBatchMeasure
 }
 
 /** The settings that win in our experiments. */
@@ -110,9 +112,9 @@ export function* metaTrain(
     lossParameters: new Float64Array(0),
     fadingRate: 0,
   })
-  const none = meanNextBatchError(base, validation, plain('sgd'))
-  const sgd = yield* tuneRule('mse, sgd', base, validation, plain('sgd'), startRates.sgd)
-  const adamRule = yield* tuneRule('mse, adam', base, validation, plain('adam'), startRates.adam)
+  const none = meanNextBatchError(base, validation, plain('sgd'), options.measure)
+  const sgd = yield* tuneRule('mse, sgd', base, validation, plain('sgd'), startRates.sgd, options.measure)
+  const adamRule = yield* tuneRule('mse, adam', base, validation, plain('adam'), startRates.adam, options.measure)
   const rivals = [sgd, adamRule]
   if (options.loss === 'mse') return { learned: sgd, none, rivals }
 
@@ -128,7 +130,7 @@ export function* metaTrain(
   const start = startValues(shape, sgd.rule, random)
   const best = yield* learn(base, long, validation, shape, start, options, random)
   const rule = ruleOf(shape, Float64Array.from(Float32Array.from(best)))
-  const learned = yield* tuneRule(options.loss, base, validation, rule, rule.rate)
+  const learned = yield* tuneRule(options.loss, base, validation, rule, rule.rate, options.measure)
   return { learned, none, rivals }
 }
 
@@ -185,7 +187,7 @@ function* learn(
   const state = adam.initialState(learned.length)
   const gradient = new Float64Array(learned.length)
   const mean = new Float64Array(learned.length)
-  let best = { learned: learned.slice(), error: meanNextBatchError(base, validation, ruleOf(shape, learned)) }
+  let best = { learned: learned.slice(), error: meanNextBatchError(base, validation, ruleOf(shape, learned), options.measure) }
 
   for (let update = 1; update <= options.updates; update++) {
     mean.fill(0)
@@ -210,7 +212,7 @@ function* learn(
     }
     let validationError: number | undefined
     if (update % checkEvery === 0 || update === options.updates) {
-      validationError = meanNextBatchError(base, validation, ruleOf(shape, learned))
+      validationError = meanNextBatchError(base, validation, ruleOf(shape, learned), options.measure)
       if (validationError < best.error) best = { learned: learned.slice(), error: validationError }
     }
     yield { phase: 'updates', update, updates: options.updates, outer: finite > 0 ? outer / finite : NaN, validation: validationError }
@@ -292,8 +294,8 @@ function shorten(vector: Float64Array, limit: number): void {
 }
 
 /**
- * Finds the rate, and under `bias` the fading, with the least next-batch error on the validation motions: rates by walking
- * in factors of two from a start until both neighbours are worse, then halving the factor twice.
+ * Finds the rate, and under `bias` the fading, with the least next-batch error on the validation motions: a scan in factors
+ * of two, then two refinements around the best.
  */
 export function* tuneRule(
   name: string,
@@ -301,11 +303,12 @@ export function* tuneRule(
   validation: readonly NormalisedMotion[],
   rule: AdaptationRule,
   startRate: number,
+  measure?: NextBatchMeasure,
 ): Generator<MetaTrainingProgress, TunedRule> {
   const fadings = rule.scheme !== 'bias' ? [0] : rule.loss === 'mse' ? fadingRates : [rule.fadingRate]
   let best: TunedRule = { name, rule, error: Infinity }
   for (const fadingRate of fadings) {
-    const tuned = yield* tuneRate(name, base, validation, { ...rule, fadingRate }, startRate)
+    const tuned = yield* tuneRate(name, base, validation, { ...rule, fadingRate }, startRate, measure)
     if (tuned.error < best.error) best = tuned
   }
   return best
@@ -317,28 +320,34 @@ function* tuneRate(
   validation: readonly NormalisedMotion[],
   rule: AdaptationRule,
   startRate: number,
+  measure?: NextBatchMeasure,
 ): Generator<MetaTrainingProgress, TunedRule> {
-  let best = yield* attempt(startRate)
-  for (const factor of [2, Math.SQRT2, 2 ** 0.25]) {
-    // Where it diverges, only smaller rates can help.
-    for (const direction of best.error === Infinity ? [1 / factor] : [factor, 1 / factor]) {
-      const start: TunedRule = best
-      for (let walked = 0; walked < mostWalked; walked++) {
-        const next: TunedRule = yield* attempt(best.rule.rate * direction)
-        if (!(next.error < best.error) && best.error !== Infinity) break
-        best = next
-      }
-      if (best !== start) break
-    }
+  const none = meanNextBatchError(base, validation, { ...rule, rate: 0 }, measure)
+  let best: TunedRule & { score: number } = { name, rule, error: Infinity, score: Infinity }
+  for (let rate = startRate / searchSpan; rate <= startRate * searchSpan; rate *= 2) {
+    const score = yield* attempt(rate)
+    // Far beyond the best rate everything diverges, and costs time to no end.
+    if (score > 4 * none && score > 4 * best.score) break
   }
-  return best
+  for (const factor of [Math.SQRT2, 2 ** 0.25]) {
+    const middle = best.rule.rate
+    for (const rate of [middle * factor, middle / factor]) yield* attempt(rate)
+  }
+  return { name, rule: best.rule, error: best.error }
 
-  function* attempt(rate: number): Generator<MetaTrainingProgress, TunedRule> {
-    const error = meanNextBatchError(base, validation, { ...rule, rate })
+  /** Measures at the rate and a little above it: a rate whose neighbour is bad stands at the edge of stability. */
+  function* attempt(rate: number): Generator<MetaTrainingProgress, number> {
+    const error = meanNextBatchError(base, validation, { ...rule, rate }, measure)
+    const above = meanNextBatchError(base, validation, { ...rule, rate: rate * stabilityMargin }, measure)
+    const score = 0.5 * (error + above)
+    if (score < best.score) best = { name, rule: { ...rule, rate }, error, score }
     yield { phase: 'rates', name, rate, error }
-    return { name, rule: { ...rule, rate }, error }
+    return score
   }
 }
 
-/** Factors of two a search walks at most in one direction: a million-fold. */
-const mostWalked = 20
+/** Rates are searched from a start divided by this to a start times this. */
+const searchSpan = 64
+
+/** Room a chosen rate has above it. */
+const stabilityMargin = 1.25

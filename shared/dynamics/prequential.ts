@@ -47,10 +47,24 @@ export function measureNextBatch(base: Base, motion: NormalisedMotion, rule: Ada
   return rule.scheme === 'bias' ? measureBias(base, motion, rule, onStep) : measureNetwork(base, motion, rule, rule.scheme, onStep)
 }
 
-/** Mean next-batch error of several motions, each adapted to from the base. */
-export function meanNextBatchError(base: Base, motions: readonly NormalisedMotion[], rule: AdaptationRule): number {
+/** Measures the next-batch error of one motion: `measureNextBatch(…).error`, or the same from faster code. */
+export interface NextBatchMeasure {
+  (base: Base, motion: NormalisedMotion, rule: AdaptationRule): number
+}
+
+/**
+ * Mean next-batch error of several motions, each adapted to from the base.
+ *
+ * @param measure  the double-precision reference unless given
+ */
+export function meanNextBatchError(
+  base: Base,
+  motions: readonly NormalisedMotion[],
+  rule: AdaptationRule,
+  measure: NextBatchMeasure = (...given) => measureNextBatch(...given).error,
+): number {
   let sum = 0
-  for (const motion of motions) sum += measureNextBatch(base, motion, rule).error
+  for (const motion of motions) sum += measure(base, motion, rule)
   return sum / motions.length
 }
 

@@ -2,6 +2,7 @@ import { createRequire } from 'node:module'
 import { dirname, sep } from 'node:path'
 import * as tf from '@tensorflow/tfjs'
 import { setThreadsCount, setWasmPaths } from '@tensorflow/tfjs-backend-wasm'
+import { balanceNetwork } from '../../../shared/dynamics/balance.ts'
 import { fitCoverage } from '../../../shared/dynamics/coverage.ts'
 import { noiseOfResiduals, pickReferenceStates } from '../../../shared/dynamics/fit-statistics.ts'
 import { fitNormalisation, networkOf, normaliseMotion, type Motion, type NormalisedMotion } from '../../../shared/dynamics/motion.ts'
@@ -9,7 +10,8 @@ import {
   createNetworkPass, forward, initialParameters, layerPlaces, parameterCount, type Activation, type NetworkShape,
 } from '../../../shared/dynamics/network.ts'
 import { createRandom, type Random } from '../../../shared/dynamics/random.ts'
-import type { Version } from '../../../shared/dynamics/version.ts'
+import type { Normalisation, Version } from '../../../shared/dynamics/version.ts'
+import { plantFrictionUnits } from './friction-units.ts'
 
 export interface FitOptions {
   readonly joints: number
@@ -32,9 +34,9 @@ export interface FitOptions {
 export const defaultFitOptions = {
   hidden: [64, 64],
   activation: 'relu',
-  epochs: 150,
+  epochs: 60,
   rowsPerStep: 256,
-  rate: 3e-3,
+  rate: 1e-2,
   seed: 1,
 } as const
 
@@ -82,7 +84,11 @@ export async function fitNetwork(training: readonly Motion[], heldOut: readonly 
   const trainingRows = joinRows(training.map(motion => normaliseMotion(motion, normalisation)))
   const heldOutMotions = heldOut.map(motion => normaliseMotion(motion, normalisation))
 
-  const { parameters, curve } = await train(network, trainingRows, heldOutMotions, options)
+  const random = createRandom(options.seed)
+  const start = initialParameters(network, random)
+  plantFrictionUnits(network, start, zeroVelocityOf(normalisation, joints))
+  const { parameters: fitted, curve } = await train(network, start, trainingRows, heldOutMotions, options, random)
+  const parameters = balanced(network, fitted, trainingRows)
 
   const residuals = heldOutMotions.map(motion => residualsOf(network, parameters, motion))
   const states = concatenate(training.map(motion => motion.states))
@@ -106,10 +112,31 @@ interface Rows {
   readonly measured: Float64Array
 }
 
-async function train(network: NetworkShape, given: Rows, heldOut: readonly NormalisedMotion[], options: FitOptions) {
+/** Rows on which the network is balanced, evenly spread. */
+const balanceRows = 400
+
+function balanced(network: NetworkShape, fitted: Float32Array, given: Rows): Float32Array {
+  const inputs = network.sizes[0]
+  const rows = Math.min(balanceRows, given.rows)
+  const x = new Float64Array(rows * inputs)
+  for (let r = 0; r < rows; r++) {
+    const from = Math.floor(((r + 0.5) * given.rows) / rows) * inputs
+    x.set(given.x.subarray(from, from + inputs), r * inputs)
+  }
+  const parameters = Float64Array.from(fitted)
+  balanceNetwork(network, parameters, x, rows)
+  return Float32Array.from(parameters)
+}
+
+function zeroVelocityOf({ inputMean, inputStd }: Normalisation, joints: number): number[] {
+  return Array.from({ length: joints }, (_, joint) => -inputMean[joints + joint] / inputStd[joints + joint])
+}
+
+async function train(
+  network: NetworkShape, start: Float64Array, given: Rows, heldOut: readonly NormalisedMotion[], options: FitOptions, random: Random,
+) {
   await useFastestBackend()
-  const random = createRandom(options.seed)
-  const model = createModel(network, random)
+  const model = createModel(network, start)
   const optimiser = tf.train.adam(options.rate)
   const inputs = network.sizes[0]
   const rowsPerStep = Math.min(options.rowsPerStep, given.rows)
@@ -146,14 +173,13 @@ interface Model {
   readonly biases: tf.Variable<tf.Rank.R1>[]
 }
 
-function createModel(network: NetworkShape, random: Random): Model {
-  const start = initialParameters(network, random)
+function createModel(network: NetworkShape, start: Float64Array): Model {
   const places = layerPlaces(network)
   return {
     activation: network.activation,
     weights: places.map(({ inputs, outputs, weights }) =>
       tf.variable(tf.tensor2d(Float32Array.from(start.subarray(weights, weights + inputs * outputs)), [inputs, outputs]))),
-    biases: places.map(({ outputs }) => tf.variable(tf.zeros([outputs]))),
+    biases: places.map(({ outputs, biases }) => tf.variable(tf.tensor1d(Float32Array.from(start.subarray(biases, biases + outputs))))),
   }
 }
 
