@@ -1,5 +1,6 @@
 import type { Browser } from 'playwright-core'
 import { afterAll, afterEach, beforeAll, beforeEach, describe, expect, it } from 'vitest'
+import { twoJointArm, twoJointCsv } from '../support/recording-csv.ts'
 import { startTestServer, type TestServer, type TestTeam } from '../support/server.ts'
 import { serveModel, simulatedMotion, type ServedModel } from '../support/served-model.ts'
 import { axeFindings } from './support/accessibility.ts'
@@ -139,6 +140,60 @@ describe('an engineer', () => {
 
     await page.getByText(`version ${mine} live`).waitFor()
   })
+
+  it('uploads recordings, starts a model, fits it and finds the version with its figures', async () => {
+    const { page } = browser
+    const build = await team.createKey(['build'])
+    expect((await build.post('/v1/arms', twoJointArm('bench-2'))).status).toBe(201)
+    const files = Array.from({ length: 5 }, (_, number) => ({
+      name: `bench-${number + 1}.csv`,
+      mimeType: 'text/csv',
+      buffer: Buffer.from(twoJointCsv({ seed: number + 1 })),
+    }))
+    await signIn('engineer', '/recordings')
+
+    await page.getByRole('button', { name: 'Upload…' }).click()
+    const dialog = page.getByRole('dialog')
+    await dialog.getByLabel('Arm').selectOption('bench-2')
+    await dialog
+      .getByLabel('Files')
+      .setInputFiles([...files, { name: 'broken.csv', mimeType: 'text/csv', buffer: Buffer.from('time,position_swivel\n0,1\n') }])
+    await takePicture(page, 'upload-dialog')
+    expect(await axeFindings(page)).toEqual([])
+    await dialog.getByRole('button', { name: 'Upload' }).click()
+    await dialog.getByRole('alert').waitFor()
+    await takePicture(page, 'upload-refused')
+    await dialog.getByRole('button', { name: 'Close' }).last().click()
+    await page.getByText('bench-5.csv').waitFor()
+
+    await page.getByRole('link', { name: 'Models' }).click()
+    await page.getByRole('button', { name: 'Start a model…' }).click()
+    await dialog.getByLabel('Name').fill('Bench 2')
+    await dialog.getByRole('button', { name: 'Start model' }).click()
+    await dialog.getByText('Only small letters, digits and hyphens.').waitFor()
+    await dialog.getByLabel('Name').fill('bench-2-base')
+    await dialog.getByLabel('Arm').selectOption('bench-2')
+    await dialog.getByRole('button', { name: 'Start model' }).click()
+    await page.getByText('No version yet').waitFor()
+
+    await page.getByRole('link', { name: 'Jobs', exact: true }).click()
+    await page.getByRole('button', { name: 'Fit…' }).click()
+    await dialog.getByLabel('Model').selectOption('bench-2-base')
+    await dialog.getByLabel('Hidden layers').fill('8')
+    await dialog.getByLabel('Epochs').fill('3')
+    await takePicture(page, 'fit-dialog')
+    expect(await axeFindings(page)).toEqual([])
+    await dialog.getByRole('button', { name: 'Start fitting' }).click()
+    await page.getByRole('heading', { name: 'Fitting of bench-2-base' }).waitFor()
+    const made = page.getByRole('link', { name: 'version 1 of bench-2-base' })
+    await made.waitFor({ timeout: 100_000 })
+    await takePicture(page, 'job-done')
+    expect(await axeFindings(page)).toEqual([])
+    await made.click()
+
+    await page.getByRole('table', { name: 'Error per joint' }).getByRole('row', { name: /^lift/ }).waitFor()
+    await takePicture(page, 'fitted-version')
+  }, 150_000)
 
   it('finds no keys section', async () => {
     const { page } = browser

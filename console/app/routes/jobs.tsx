@@ -1,5 +1,6 @@
-import { useQuery } from '@tanstack/react-query'
-import { TextLink } from '../../components/button.tsx'
+import { useMutation, useQuery, useQueryClient } from '@tanstack/react-query'
+import { useState } from 'react'
+import { Button, TextLink } from '../../components/button.tsx'
 import { DataTable, type Column } from '../../components/data-table.tsx'
 import { Filter, Search } from '../../components/field.tsx'
 import { Page } from '../../components/page.tsx'
@@ -8,6 +9,11 @@ import { Empty, Failed, SkeletonRows } from '../../components/states.tsx'
 import { TimeAgo } from '../../components/time-ago.tsx'
 import { hasEnded, jobKinds, jobsOptions, subjectOf, type Job } from '../../features/jobs/jobs.ts'
 import { JobStamp } from '../../features/jobs/job-stamp.tsx'
+import { FitDialog } from '../../features/jobs/fit-dialog.tsx'
+import { MetaTrainDialog } from '../../features/jobs/meta-train-dialog.tsx'
+import { createLossOptions, learnedKinds, lossesOptions } from '../../features/losses/losses.ts'
+import { modelsOptions } from '../../features/models/models.ts'
+import { useBlocked } from '../../features/session/session.ts'
 import { percent } from '../../lib/numbers.ts'
 import { paths } from '../../lib/paths.ts'
 import { span } from '../../lib/times.ts'
@@ -66,6 +72,14 @@ function duration(job: Job): number | null {
 export function Component() {
   const url = useUrlState()
   const jobs = useQuery(jobsOptions)
+  const client = useQueryClient()
+  const models = useQuery(modelsOptions)
+  const losses = useQuery(lossesOptions)
+  const makeLoss = useMutation(createLossOptions(client))
+  const blocked = useBlocked('build', 'start jobs')
+  const [starting, setStarting] = useState<Job['kind']>()
+  const open = (models.data?.items ?? []).filter((model) => model.archived_at === null).map((model) => model.name)
+  const noModel = blocked ?? (models.data && open.length === 0 ? 'Start a model first.' : undefined)
   const state = oneOf(url.get('state'), states)
   const kind = oneOf(url.get('kind'), kinds)
   const text = url.get('text')
@@ -76,7 +90,20 @@ export function Component() {
       (text === undefined || `${subjectOf(job)} ${job.created_by}`.toLowerCase().includes(text.toLowerCase())),
   )
   return (
-    <Page title="Jobs" facts="Fitting makes a version of a model, meta-training a version of a loss.">
+    <Page
+      title="Jobs"
+      facts="Fitting makes a version of a model, meta-training a version of a loss."
+      actions={
+        <>
+          <Button look="primary" icon="plus" blocked={noModel} onClick={() => setStarting('fit')}>
+            Fit…
+          </Button>
+          <Button icon="plus" blocked={noModel} onClick={() => setStarting('meta_train')}>
+            Meta-train…
+          </Button>
+        </>
+      }
+    >
       {jobs.isPending ? (
         <SkeletonRows rows={6} label="Loading jobs" />
       ) : !jobs.data ? (
@@ -90,7 +117,8 @@ export function Component() {
             </a>
           }
         >
-          Once recordings are there, ask for a fitting through the API: its progress, curves and result are shown here.
+          Once recordings of an arm are there and a model of it is started, fit a first version: progress, curves and result are
+          shown here.
         </Empty>
       ) : (
         <div>
@@ -122,6 +150,16 @@ export function Component() {
             />
           )}
         </div>
+      )}
+      {starting === 'fit' && <FitDialog models={open} onClose={() => setStarting(undefined)} />}
+      {starting === 'meta_train' && (
+        <MetaTrainDialog
+          losses={(losses.data?.items ?? []).filter((loss) => loss.kind !== 'mse')}
+          models={open}
+          kinds={learnedKinds}
+          createLoss={makeLoss.mutateAsync}
+          onClose={() => setStarting(undefined)}
+        />
       )}
     </Page>
   )

@@ -1,12 +1,16 @@
 import { useQuery } from '@tanstack/react-query'
-import { TextLink } from '../../components/button.tsx'
+import { useState } from 'react'
+import { Button, TextLink } from '../../components/button.tsx'
 import { DataTable, type Column } from '../../components/data-table.tsx'
 import { Filter, Search } from '../../components/field.tsx'
 import { Page } from '../../components/page.tsx'
 import { Stamp } from '../../components/stamp.tsx'
 import { Empty, Failed, SkeletonRows } from '../../components/states.tsx'
 import { TimeAgo } from '../../components/time-ago.tsx'
+import { armsOptions } from '../../features/arms/arms.ts'
 import { modelsOptions, type Model } from '../../features/models/models.ts'
+import { NewModelDialog } from '../../features/models/new-model-dialog.tsx'
+import { useBlocked } from '../../features/session/session.ts'
 import { paths } from '../../lib/paths.ts'
 import { oneOf, useUrlState } from '../../lib/url-state.ts'
 
@@ -91,6 +95,9 @@ const columns: Column<Model>[] = [
 export function Component() {
   const url = useUrlState()
   const models = useQuery(modelsOptions)
+  const described = useQuery(armsOptions)
+  const blocked = useBlocked('build', 'start models')
+  const [starting, setStarting] = useState(false)
   const state = oneOf(url.get('state'), states)
   const arm = url.get('arm')
   const text = url.get('text')
@@ -101,9 +108,23 @@ export function Component() {
       (arm === undefined || model.arm === arm) &&
       (text === undefined || `${model.name} ${model.description}`.toLowerCase().includes(text.toLowerCase())),
   )
+  const known = (described.data?.items ?? []).filter((each) => each.archived_at === null).map((each) => each.name)
   const arms = [...new Set(all.map((model) => model.arm))].sort()
   return (
-    <Page title="Models">
+    <Page
+      title="Models"
+      facts="What an arm’s torque is, by version. The live one answers every request that names none."
+      actions={
+        <Button
+          look="primary"
+          icon="plus"
+          blocked={blocked ?? (described.data && known.length === 0 ? 'Describe the arm through the API first.' : undefined)}
+          onClick={() => setStarting(true)}
+        >
+          Start a model…
+        </Button>
+      }
+    >
       {models.isPending ? (
         <SkeletonRows rows={6} label="Loading models" />
       ) : !models.data ? (
@@ -150,6 +171,7 @@ export function Component() {
           )}
         </div>
       )}
+      {starting && <NewModelDialog arms={known} onClose={() => setStarting(false)} />}
     </Page>
   )
 }

@@ -5,6 +5,10 @@ import { everything } from '../../lib/everything.ts'
 
 export type Job = Schemas['Job']
 
+type WithDefaults<T, Needed extends keyof T> = Pick<T, Needed> & Partial<T>
+export type NewJob =
+  WithDefaults<Schemas['NewFitJob'], 'kind' | 'model'> | WithDefaults<Schemas['NewMetaTrainJob'], 'kind' | 'loss'>
+
 export function hasEnded(job: Job): boolean {
   return job.state === 'done' || job.state === 'failed' || job.state === 'cancelled'
 }
@@ -35,7 +39,11 @@ export const curveOptions = (id: string, ended: boolean) =>
 const refreshed = (client: QueryClient) => ({ onSettled: () => client.invalidateQueries({ queryKey: ['jobs'] }) })
 
 export const createJobOptions = (client: QueryClient) =>
-  mutationOptions({ mutationFn: (body: BodyOf<'createJob'>) => heftwise.jobs.create(body), ...refreshed(client) })
+  mutationOptions({
+    // The generated types also ask for what the contract has defaults for; those are the service's to fill in.
+    mutationFn: (body: NewJob) => heftwise.jobs.create(body as BodyOf<'createJob'>),
+    ...refreshed(client),
+  })
 
 export const cancelJobOptions = (client: QueryClient, id: string) =>
   mutationOptions({ mutationFn: (reason: string) => heftwise.jobs.cancel(id, reason), ...refreshed(client) })

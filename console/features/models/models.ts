@@ -40,6 +40,9 @@ const refreshed = (client: QueryClient) => ({
   onSettled: () => client.invalidateQueries({ queryKey: ['models'] }),
 })
 
+export const createModelOptions = (client: QueryClient) =>
+  mutationOptions({ mutationFn: (body: Schemas['NewModel']) => heftwise.models.create(body), ...refreshed(client) })
+
 export const releaseOptions = (client: QueryClient, name: string) =>
   mutationOptions({
     mutationFn: ({ version, reason, etag }: { version: number; reason: string; etag: string }) =>

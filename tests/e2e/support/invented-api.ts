@@ -89,6 +89,8 @@ function read(team: InventedTeam, pathname: string, search: URLSearchParams): ob
       return listed(team.arms, search)
     case 'recordings':
       return listed(team.recordings, search)
+    case 'losses':
+      return listed(team.losses, search)
     case 'keys':
       return listed(team.keys, search)
     case 'models':

@@ -9,6 +9,7 @@ export interface InventedTeam {
   releases: Record<string, Schemas['Release'][]>
   adaptations: Schemas['Adaptation'][]
   logs: Record<string, Schemas['LogEntry'][]>
+  losses: Schemas['Loss'][]
   jobs: Schemas['Job'][]
   curves: Record<string, Schemas['JobCurve']>
   recordings: Schemas['Recording'][]
@@ -381,6 +382,18 @@ export function inventTeam(now: number, role: Schemas['Role'] = 'administrator')
     },
     adaptations,
     logs,
+    losses: [
+      {
+        id: id(9, 1),
+        name: 'alder-7-payload',
+        model: 'alder-7-base',
+        kind: 'state_dependent',
+        description: '',
+        newest_version: 2,
+        created_at: ago(9 * day),
+        created_by: person,
+      },
+    ],
     jobs,
     curves: { [id(5, 9)]: curve(43), [id(5, 1)]: curve(80) },
     recordings: (['fit', 'fit', 'meta_train', 'validate', 'evaluate'] as const).map((use, number) => ({
