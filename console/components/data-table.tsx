@@ -65,7 +65,7 @@ export function DataTable<T>({
                   {each.by ? (
                     <button
                       type="button"
-                      className={`inline-flex items-center gap-1 hover:text-ink ${each.right ? 'flex-row-reverse' : ''} ${active ? 'font-semibold text-ink' : ''}`}
+                      className={`inline-flex items-center gap-1 align-bottom hover:text-ink ${each.right ? 'flex-row-reverse' : ''} ${active ? 'font-semibold text-ink' : ''}`}
                       onClick={() => url.set({ sort: active && !falling ? `-${each.id}` : each.id, page: undefined })}
                     >
                       {each.title}

@@ -13,34 +13,37 @@ interface DialogProps {
   wide?: boolean
 }
 
+const dim = 'fixed inset-0 bg-[rgb(0_0_0/0.45)]'
+
 /** A dialog on a dimmed page; focus stays inside and returns to where it came from. */
 export function Dialog({ open, onClose, title, description, children, held = false, wide = false }: DialogProps) {
   const keep = (event: Event) => held && event.preventDefault()
   return (
     <Primitive.Root open={open} onOpenChange={(next) => !next && onClose()}>
       <Primitive.Portal>
-        <Primitive.Overlay className="fixed inset-0 z-40" style={{ backgroundColor: 'rgb(0 0 0 / 0.45)' }} />
-        <Primitive.Content
-          onEscapeKeyDown={keep}
-          onInteractOutside={keep}
-          {...(description === undefined && { 'aria-describedby': undefined })}
-          className={`fixed top-1/2 left-1/2 z-50 flex max-h-[calc(100dvh-2rem)] w-[calc(100vw-2rem)] -translate-x-1/2 -translate-y-1/2 flex-col overflow-y-auto border border-edge bg-surface p-5 ${wide ? 'max-w-2xl' : 'max-w-lg'}`}
-        >
-          <div className="flex items-start gap-4">
-            <Primitive.Title className="grow text-20 font-semibold">{title}</Primitive.Title>
-            {!held && (
-              <Primitive.Close asChild>
-                <IconButton icon="close" label="Close" className="-mt-1 -mr-2" />
-              </Primitive.Close>
+        <Primitive.Overlay className={`${dim} z-40 grid place-items-center overflow-y-auto p-4`}>
+          <Primitive.Content
+            onEscapeKeyDown={keep}
+            onInteractOutside={keep}
+            {...(description === undefined && { 'aria-describedby': undefined })}
+            className={`w-full border border-edge bg-surface p-5 ${wide ? 'max-w-2xl' : 'max-w-lg'}`}
+          >
+            <div className="flex items-start gap-4">
+              <Primitive.Title className="grow text-20 font-semibold">{title}</Primitive.Title>
+              {!held && (
+                <Primitive.Close asChild>
+                  <IconButton icon="close" label="Close" className="-mt-1 -mr-2" />
+                </Primitive.Close>
+              )}
+            </div>
+            {description !== undefined && (
+              <Primitive.Description asChild>
+                <div className="mt-2">{description}</div>
+              </Primitive.Description>
             )}
-          </div>
-          {description !== undefined && (
-            <Primitive.Description asChild>
-              <div className="mt-2">{description}</div>
-            </Primitive.Description>
-          )}
-          <div className="mt-4 flex flex-col gap-4">{children}</div>
-        </Primitive.Content>
+            <div className="mt-4 flex flex-col gap-4">{children}</div>
+          </Primitive.Content>
+        </Primitive.Overlay>
       </Primitive.Portal>
     </Primitive.Root>
   )
@@ -61,7 +64,7 @@ export function Drawer({
   return (
     <Primitive.Root open={open} onOpenChange={(next) => !next && onClose()}>
       <Primitive.Portal>
-        <Primitive.Overlay className="fixed inset-0 z-40" style={{ backgroundColor: 'rgb(0 0 0 / 0.45)' }} />
+        <Primitive.Overlay className={`${dim} z-40`} />
         <Primitive.Content
           aria-describedby={undefined}
           className="fixed inset-y-0 left-0 z-50 flex w-64 max-w-[85vw] flex-col overflow-y-auto border-r border-edge bg-paper"

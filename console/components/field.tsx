@@ -1,7 +1,7 @@
 import { useId, type ComponentProps, type ReactNode } from 'react'
 
 const box =
-  'w-full rounded-2 border border-edge bg-surface px-2.5 py-1.5 text-14 text-ink placeholder:text-soft hover:border-ink aria-invalid:border-stop max-md:min-h-10 max-md:text-16'
+  'w-full rounded-2 border border-edge bg-surface px-2.5 py-1.5 text-14 text-ink placeholder:text-soft hover:border-ink aria-invalid:border-stop max-md:min-h-10 max-md:text-16 file:mr-3 file:cursor-pointer file:rounded-2 file:border file:border-edge file:bg-sunken file:px-2'
 
 interface FieldProps {
   label: string

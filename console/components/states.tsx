@@ -31,7 +31,7 @@ export function Failed({ error, retry, what }: { error: unknown; retry?: () => v
       <p className="mt-1">
         {failure.title}. {failure.detail}
       </p>
-      <Faults faults={failure.faults} />
+      <Faults faults={failure.faults.filter((fault) => !failure.detail.includes(fault.detail))} />
       {failure.requestId !== undefined && (
         <p className="mt-1 text-12 text-soft">
           Request <code>{failure.requestId}</code>
@@ -53,7 +53,7 @@ export function InlineFailure({ error }: { error: unknown }) {
     <div role="alert" className="border-l-4 border-stop py-0.5 pl-3 text-14">
       <p className="font-semibold text-stop">{failure.title}</p>
       <p>{failure.detail}</p>
-      <Faults faults={failure.faults} />
+      <Faults faults={failure.faults.filter((fault) => !failure.detail.includes(fault.detail))} />
     </div>
   )
 }

@@ -29,6 +29,9 @@ export function Component() {
   )
 }
 
+/** Each row asks for its trend; beyond this many the list of adaptations is the better place. */
+const most = 40
+
 function Robots() {
   const adaptations = useQuery(adaptationsOptions)
   const now = useNow()
@@ -101,7 +104,12 @@ function Robots() {
         note={`${counted(running.length, 'adaptation')} running`}
         actions={<TextLink to={paths.adaptations()}>all adaptations</TextLink>}
       >
-        <RobotList robots={running} />
+        <RobotList robots={running.slice(0, most)} />
+        {running.length > most && (
+          <p className="mt-2 text-12 text-soft">
+            The {most} that most need a look; <TextLink to={paths.adaptations()}>{running.length - most} more</TextLink>.
+          </p>
+        )}
       </Section>
     </>
   )

@@ -1,7 +1,7 @@
 import { useMutation, useQuery, useQueryClient } from '@tanstack/react-query'
 import { useState } from 'react'
 import { ActDialog } from '../../components/act-dialog.tsx'
-import { Button, IconButton, TextLink } from '../../components/button.tsx'
+import { Button, TextLink } from '../../components/button.tsx'
 import { DataTable, type Column } from '../../components/data-table.tsx'
 import { Filter, Search } from '../../components/field.tsx'
 import { useNotice } from '../../components/notices.tsx'
@@ -128,7 +128,9 @@ export function Component() {
             title: '',
             right: true,
             cell: (recording: Recording) => (
-              <IconButton icon="close" label={`Delete ${recording.name}`} onClick={() => setDeleting(recording)} />
+              <Button look="quiet" aria-label={`Delete ${recording.name}`} onClick={() => setDeleting(recording)}>
+                Delete…
+              </Button>
             ),
           },
         ]

@@ -67,7 +67,7 @@ export function LineChart({ series, label, xName, yName }: { series: Series[]; l
               </text>
             </g>
           ))}
-          {x.ticks.map((tick) => (
+          {x.ticks.filter(Number.isInteger).map((tick) => (
             <text
               key={tick}
               x={x.place(tick)}
@@ -123,7 +123,7 @@ export function LineChart({ series, label, xName, yName }: { series: Series[]; l
       const point = each.points.findLast(([px]) => px <= value)
       return point && `${each.name} ${significant(point[1])}`
     })
-    return [`${xName} ${significant(value)}`, ...parts.filter(Boolean)].join(', ')
+    return [`${xName} ${tickLabel(value)}`, ...parts.filter(Boolean)].join(', ')
   }
 }
 

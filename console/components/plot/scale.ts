@@ -43,14 +43,14 @@ export function errorScale(values: number[], start: number, end: number): Scale 
   return high / low > 12 ? logScale(low / 1.3, high * 1.3, start, end) : linearScale(0, high * 1.08, start, end)
 }
 
-/** About `count` round numbers within [from, to]. */
-export function roundTicks(from: number, to: number, count: number): number[] {
+/** About `wanted` round numbers within [from, to]. */
+export function roundTicks(from: number, to: number, wanted: number): number[] {
   if (to <= from) return [from]
-  const rough = (to - from) / count
+  const rough = (to - from) / wanted
   const power = 10 ** Math.floor(Math.log10(rough))
   const step = [1, 2, 5, 10].map((each) => each * power).find((each) => each >= rough)!
   const ticks: number[] = []
-  for (let tick = Math.ceil(from / step - 1e-9) * step; tick <= to + step * 1e-9; tick += step)
-    ticks.push(Math.abs(tick) < step * 1e-9 ? 0 : tick)
+  for (let count = Math.ceil(from / step - 1e-9); count * step <= to + step * 1e-9; count++)
+    ticks.push(Number((count * step).toPrecision(12)))
   return ticks
 }

@@ -32,13 +32,11 @@ export function VersionDetails({ version, live }: { version: Version; live: Vers
     ],
   ]
   if (version.origin.reason) facts.splice(1, 0, ['Reason', version.origin.reason])
-  if (version.origin.recordings)
-    facts.push([
-      'Fitted on',
-      <Recordings key="recordings" names={version.origin.recordings.map((recording) => recording.name)} />,
-    ])
-  if (metrics)
-    facts.push(['Measured on', <Recordings key="measured" names={metrics.recordings.map((recording) => recording.name)} />])
+  const measuredOn = metrics?.recordings.map((recording) => recording.name) ?? []
+  const fittedOn =
+    version.origin.recordings?.map((recording) => recording.name).filter((name) => !measuredOn.includes(name)) ?? []
+  if (fittedOn.length > 0) facts.push(['Fitted on', <Recordings key="recordings" names={fittedOn} />])
+  if (measuredOn.length > 0) facts.push(['Measured on', <Recordings key="measured" names={measuredOn} />])
   return (
     <div className="grid gap-8 lg:grid-cols-[3fr_2fr]">
       <div>
@@ -67,7 +65,7 @@ export function VersionDetails({ version, live }: { version: Version; live: Vers
 
 function Recordings({ names }: { names: string[] }) {
   const shown = names.slice(0, 4).join(', ')
-  return <span title={names.join('\n')}>{names.length > 4 ? `${shown} and ${grouped(names.length - 4)} more` : shown}</span>
+  return <span title={names.join('\n')}>{names.length > 5 ? `${shown} and ${grouped(names.length - 4)} more` : shown}</span>
 }
 
 function JointErrors({ version, against }: { version: Version; against: Version | undefined }) {
