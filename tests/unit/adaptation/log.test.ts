@@ -127,6 +127,21 @@ describe('an event', () => {
     expect(send(adaptation, batch(3, { from: 0 })).verdict).toBe('accepted')
   })
 
+  test('of a restart empties what Adam remembers: its next step moves parameters by the rate, as a first step does', () => {
+    const rate = 0.003
+    const adaptation = createAdaptation(kernels, inputsOf({ scheme: 'all', update: { kind: 'adam', rate } }))
+    for (const sequence of [1, 2, 3, 4, 5]) send(adaptation, batch(sequence, { offset: () => (sequence % 2 === 0 ? 1 : -0.4) }))
+    enter(adaptation, event(6, 0, 'restarted'))
+    const before = adaptation.snapshot().parameters
+
+    send(adaptation, batch(7, { from: 0 }))
+
+    const moved = adaptation.snapshot().parameters.map((value, k) => Math.abs(value - before[k])).filter(change => change > 0)
+    expect(moved.length).toBeGreaterThan(20)
+    // m / √v is ±1 after one gradient; f32 parameters near 1 round to 6e-8.
+    for (const change of moved) expect(Math.abs(change - rate)).toBeLessThan(2e-6)
+  })
+
   test('of a restart drops a bias, since torque sensors are zeroed', () => {
     const adaptation = createAdaptation(kernels, inputsOf({ scheme: 'bias' }))
     send(adaptation, batch(1))
@@ -173,6 +188,20 @@ describe('preparing ahead of publishing', () => {
     expect(discarded.checkpoint()).toEqual(untouched.checkpoint())
     expect(send(discarded, batch(2))).toEqual(send(untouched, batch(2)))
     expect(discarded.checkpoint()).toEqual(untouched.checkpoint())
+  })
+
+  test('takes no more memory however often it is discarded', () => {
+    const adaptation = createAdaptation(kernels, inputsOf(gentle))
+    const prepareAndDiscard = () => {
+      for (const sequence of [1, 2, 3, 4, 5]) adaptation.prepare(batch(sequence))
+      adaptation.discard()
+    }
+    prepareAndDiscard()
+    const used = kernels.usedBytes
+
+    for (let k = 0; k < 10; k++) prepareAndDiscard()
+
+    expect(kernels.usedBytes).toBe(used)
   })
 })
 

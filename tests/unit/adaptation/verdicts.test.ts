@@ -224,6 +224,31 @@ describe('a served state that turns worse than base', () => {
     expect(outcomes[tripped.sequence].before).toBeLessThan(1e-9)
   })
 
+  test.each([
+    ['implausible', 1e3, {}],
+    ['step_norm', 6, { stepNorm: 0.2 }],
+  ])('is found out all the same when a batch is rejected as %s within that second', (code, offset, guard) => {
+    const adaptation = createAdaptation(kernels, inputsOf({ ...slow, guard: { ...slow.guard, ...guard } }))
+    const spikeAt = 103
+    const outcomes = Array.from({ length: 112 }, (_, k) =>
+      send(adaptation, batch(k + 1, { offset: (_row, _joint, time) => (k + 1 === spikeAt ? offset : time < 8 ? 1 : 0) })))
+
+    expect(codesOf(outcomes[spikeAt - 1])).toEqual([code])
+    expect(outcomes.slice(spikeAt).flatMap(codesOf)).toContain('worse_than_base')
+  })
+
+  test('is left alone when it has recovered by the time it is judged', () => {
+    const adaptation = createAdaptation(kernels, inputsOf({ ...slow, update: { ...slow.update, rate: 0.5 } }))
+    for (let k = 1; k <= 30; k++) send(adaptation, batch(k, { offset: () => 1 }))
+    adaptation.prepare({ kind: 'event', sequence: 31, skipped: 0, time: 2.39, event: 'released' })
+    adaptation.publish()
+
+    const outcomes = Array.from({ length: 20 }, (_, k) => send(adaptation, batch(32 + k, { from: (30 + k) * 0.08, offset: () => -0.05 })))
+
+    expect(outcomes.flatMap(codesOf)).not.toContain('worse_than_base')
+    expect(outcomes[0].before).toBeGreaterThan(0.9)
+  })
+
   test('is not judged before a whole second has been seen', () => {
     const adaptation = createAdaptation(kernels, inputsOf(slow))
     const alternating = (_row: number, _joint: number, time: number) => (Math.floor((time + 1e-9) / 0.08) % 2 === 0 ? 0.8 : -0.8)
