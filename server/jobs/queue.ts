@@ -1,3 +1,4 @@
+import { setTimeout as sleep } from 'node:timers/promises'
 import type { Worker } from 'node:worker_threads'
 import type { Logger } from 'pino'
 import type { ProblemSlug } from '../../shared/contract/problems.ts'
@@ -33,9 +34,11 @@ const beatMs = 500
 const leaseSeconds = 10
 /** Handlers look for a cancel several times a second; one that does not is ended. */
 const graceMs = 5_000
+const storeAttempts = 20
 
 interface Running {
   readonly jobId: string
+  readonly lease: string
   cancel(): void
   /** Ends the thread, and the job as failed. */
   abandon(): Promise<void>
@@ -67,14 +70,15 @@ export function createJobQueue({ database, log, threads, readInput, storeOutput 
     return { job: await Job.findOne({ where: { leaseOwner: lease }, rejectOnEmpty: true }), lease }
   }
 
-  /** Jobs whose process has gone. */
+  /** Jobs whose process has gone. Our own are not among them, however long the database was away. */
   async function failLost(): Promise<void> {
+    const ours = [...running.values()].map(({ lease }) => lease)
     const detail = 'The server process that ran this job ended before the job did. Start the job again.'
     await pool.query(
       `UPDATE jobs SET state = IF(cancel_at IS NULL, 'failed', 'cancelled'), message = IF(cancel_at IS NULL, 'Run it again.', 'Cancelled.'),
          problem = IF(cancel_at IS NULL, ?, NULL), ended_at = UTC_TIMESTAMP(3), change_number = change_number + 1, lease_owner = NULL, lease_until = NULL
-       WHERE state = 'running' AND lease_until < UTC_TIMESTAMP(3)`,
-      [JSON.stringify({ slug: 'internal', detail })],
+       WHERE state = 'running' AND lease_until < UTC_TIMESTAMP(3)${ours.length > 0 ? ' AND lease_owner NOT IN (?)' : ''}`,
+      [JSON.stringify({ slug: 'internal', detail }), ...(ours.length > 0 ? [ours] : [])],
     )
   }
 
@@ -201,9 +205,7 @@ function runJob({ database, log, readInput, storeOutput }: Omit<JobQueueParts, '
       }
     }
     const end = await outcome
-    clearInterval(beat)
     clearTimeout(grace)
-    await beating
     await thread?.terminate()
     return end
   }
@@ -211,6 +213,8 @@ function runJob({ database, log, readInput, storeOutput }: Omit<JobQueueParts, '
   /** Stores how it ended, if the lease is still ours. */
   async function store(end: End): Promise<void> {
     if (end.state === 'lost') return
+    // All points before the end, so that who reads of the end has no more to expect.
+    await beating
     await storePoints()
     await database.transaction(async (transaction) => {
       const held = await database.models.Job.findOne({ where: { id: job.id, leaseOwner: lease, state: 'running' }, transaction, lock: transaction.LOCK.UPDATE })
@@ -226,18 +230,28 @@ function runJob({ database, log, readInput, storeOutput }: Omit<JobQueueParts, '
     })
   }
 
-  const ended = work()
-    .then((end) =>
-      store(end).catch(async (error: unknown) => {
+  /** A result that took minutes is not given up because the database is away for a moment. */
+  async function storeSurely(end: End): Promise<void> {
+    for (let attempt = 1; ; attempt++) {
+      try {
+        return await store(end)
+      } catch (error) {
         if (error instanceof Refusal) return store({ state: 'failed', slug: error.kind.slug, detail: error.message })
-        log.error({ err: error, jobId: job.id }, "a job's result could not be stored")
-        return store({ state: 'failed', slug: 'internal', detail: 'The result could not be stored. This has been logged; start the job again.' })
-      }),
-    )
+        log.error({ err: error, jobId: job.id, attempt }, "a job's result could not be stored")
+        if (attempt === storeAttempts) return store({ state: 'failed', slug: 'internal', detail: 'The result could not be stored. This has been logged; start the job again.' })
+        await sleep(1_000)
+      }
+    }
+  }
+
+  const ended = work()
+    .then(storeSurely)
     .catch((error: unknown) => log.error({ err: error, jobId: job.id }, 'the end of a job could not be stored'))
+    .finally(() => clearInterval(beat))
 
   return {
     jobId: job.id,
+    lease,
     cancel,
     ended,
     async abandon() {

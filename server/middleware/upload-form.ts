@@ -20,6 +20,8 @@ const MOST_FIELDS = 20
  * @throws {Refusal} malformed-body, invalid-request, upload-incomplete
  */
 export async function readUploadForm(req: Request, fileField: string, mostFileBytes: number): Promise<UploadForm> {
+  // What is announced as too large need not be read to its limit; fields and boundaries are small.
+  if (Number(req.headers['content-length'] ?? 0) > mostFileBytes + MOST_FIELDS * (FIELD_BYTES + 1_000)) throw tooLarge(mostFileBytes)
   const form = openForm(req, mostFileBytes)
   const fields: Record<string, string> = {}
   let late: string | undefined
@@ -43,6 +45,8 @@ export async function readUploadForm(req: Request, fileField: string, mostFileBy
       else fields[name] = value
     })
     form.on('file', (name, stream, { filename }) => {
+      // When the form is destroyed, so is its file, with an error that is told elsewhere.
+      stream.on('error', () => undefined)
       if (opened || name !== fileField) {
         stream.resume()
         const detail = opened ? 'There is more than one file. Send one file a request.' : `The file is in the part "${shortened(name)}". Name its part "${fileField}".`
@@ -81,7 +85,7 @@ async function* contents(
   let isWhole = false
   try {
     for await (const piece of stream) yield piece as Uint8Array
-    if (stream.truncated) throw new Refusal('body-too-large', `The file is larger than ${mostBytes / 1e6} MB, which is the most a recording may have. Cut the log into several.`)
+    if (stream.truncated) throw tooLarge(mostBytes)
     await ended
     const detail = late()
     if (detail !== undefined) throw new Refusal('invalid-request', detail)
@@ -108,6 +112,10 @@ function openForm(req: Request, mostFileBytes: number): busboy.Busboy {
 function letRunDry(req: Request, form: busboy.Busboy): void {
   req.unpipe(form)
   req.resume()
+}
+
+function tooLarge(mostBytes: number): Refusal {
+  return new Refusal('body-too-large', `The file is larger than ${mostBytes / 1e6} MB, which is the most a recording may have. Cut the log into several.`)
 }
 
 function incomplete(cause: unknown): Refusal {
