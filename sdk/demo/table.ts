@@ -1,22 +1,23 @@
-import type { TrialErrors, TrialResult } from './trial.ts'
+import { CYCLE } from '../../shared/simulation/cell.ts'
+import type { TrialResult } from './trial.ts'
+
+const quantities = [
+  { title: 'Tracking error', unit: 'mrad', key: 'tracking', scale: 1000 },
+  { title: 'Torque error', unit: 'N·m', key: 'torque', scale: 1 },
+] as const
 
 /** A column of the table per trial, a row per joint: root mean square errors with a payload, and a line of means without. */
 export function formatResults(results: readonly TrialResult[], jointNames: readonly string[]): string {
-  const seconds = (which: 'loaded' | 'unloaded'): string => results[0][which].duration.toFixed(0)
-  return [
-    section(
-      `Tracking error with a payload, RMS mrad, over ${seconds('loaded')} s`,
-      results,
-      jointNames,
-      'loaded',
-      'tracking',
-      1000,
-    ),
-    section(`Torque error with a payload, RMS N·m, over ${seconds('loaded')} s`, results, jointNames, 'loaded', 'torque', 1),
-    section(`Tracking error without payload, RMS mrad, over ${seconds('unloaded')} s`, results, [], 'unloaded', 'tracking', 1000),
-    section(`Torque error without payload, RMS N·m, over ${seconds('unloaded')} s`, results, [], 'unloaded', 'torque', 1),
-    line(results),
-  ].join('\n\n')
+  const sections = (['loaded', 'unloaded'] as const).flatMap((which) => {
+    const { duration } = results[0][which]
+    if (duration === 0) return []
+    return quantities.map(({ title, unit, key, scale }) => {
+      const where = which === 'loaded' ? 'with a payload' : 'without payload'
+      const heading = `${title} ${where}, RMS ${unit}, over ${duration.toFixed(0)} s`
+      return section(heading, results, which === 'loaded' ? jointNames : [], which, key, scale)
+    })
+  })
+  return [...sections, line(results)].join('\n\n')
 }
 
 function section(
@@ -24,7 +25,7 @@ function section(
   results: readonly TrialResult[],
   jointNames: readonly string[],
   which: 'loaded' | 'unloaded',
-  quantity: keyof Pick<TrialErrors, 'tracking' | 'torque'>,
+  quantity: 'tracking' | 'torque',
   scale: number,
 ): string {
   const rows = jointNames.map((name, j) => [name, ...results.map((result) => show(scale * result[which][quantity][j]))])
@@ -53,10 +54,11 @@ function line(results: readonly TrialResult[]): string {
         `${accepted}/${rejected}/${stored}`,
         `${skipped}/${failed}/${late}`,
         `${share.toFixed(1)} %`,
+        `${(fallback * CYCLE).toFixed(1)} s`,
       ]
     })
   return format('On the line', [
-    ['', 'predictions', 'batches accepted/rejected/stored', 'skipped/failed/late', 'cycles on predictions'],
+    ['', 'predictions', 'batches accepted/rejected/stored', 'skipped/failed/late', 'cycles on predictions', 'in fallback'],
     ...rows,
   ])
 }
