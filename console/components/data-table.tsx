@@ -91,9 +91,9 @@ export function DataTable<T>({
                   role="cell"
                   key={each.id}
                   data-label={each.title}
-                  className={`py-2.5 pr-4 align-top last:pr-0 max-md:grid max-md:grid-cols-[7rem_1fr] max-md:items-baseline max-md:p-0 max-md:text-left ${
+                  className={`py-2.5 pr-4 align-top last:pr-0 max-md:p-0 max-md:text-left ${
                     index > 0
-                      ? 'max-md:before:text-12 max-md:before:text-soft max-md:before:content-[attr(data-label)]'
+                      ? 'max-md:grid max-md:grid-cols-[7rem_1fr] max-md:items-baseline max-md:before:text-12 max-md:before:text-soft max-md:before:content-[attr(data-label)]'
                       : 'max-md:block'
                   } ${each.right ? 'text-right' : ''} ${each.minor ? 'max-md:hidden' : ''}`}
                 >

@@ -16,9 +16,13 @@ interface LoadStripProps {
 }
 
 const lane = 34
-const label = 92
+const label = 120
 const scale = 76
 const foot = 20
+
+function shortened(name: string, length: number): string {
+  return name.length > length ? `${name.slice(0, length - 1)}…` : name
+}
 
 /**
  * Load bars over time: time across, joint down. The area from zero is predicted, the line is measured; each lane states its own scale,
@@ -81,7 +85,7 @@ export function LoadStrip({ joints, time, predicted, measured, row, onRow }: Loa
           return (
             <g key={joint.name}>
               <text x={0} y={middle + 4} className="fill-ink text-12">
-                {narrow ? joint.name.slice(0, 12) : joint.name.slice(0, 14)}
+                {narrow ? shortened(joint.name, 11) : shortened(joint.name, 18)}
               </text>
               <line x1={left} x2={left + inner} y1={middle} y2={middle} className="stroke-line" />
               <path

@@ -20,7 +20,8 @@ export function healthOf(adaptation: Adaptation, now: number): Health {
   }
   const heard = Date.parse(adaptation.last_batch?.at ?? adaptation.created_at)
   if (now - heard > silentAfterMs) return { state: 'silent', forMs: now - heard }
-  if (adaptation.rejections_in_a_row > 0) {
+  // One rejection that accepted steps followed asks for nothing; the service still counts it until they have proven themselves.
+  if (adaptation.rejections_in_a_row > 1 || adaptation.last_batch?.verdict === 'rejected') {
     return { state: 'rejecting', count: adaptation.rejections_in_a_row, limit: adaptation.guard.rejections_before_freeze }
   }
   return { state: 'adapting' }

@@ -81,7 +81,7 @@ export function JointTable({ joints, rows, row, batch, scale, history }: JointTa
                   {error?.after != null && (
                     <>
                       <Quantity value={error.after} unit={unit} />{' '}
-                      <span className="num">({change(error.before, error.after)})</span>
+                      <span className="num whitespace-nowrap max-sm:hidden">({change(error.before, error.after)})</span>
                     </>
                   )}
                 </span>

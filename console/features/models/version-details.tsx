@@ -113,7 +113,7 @@ function JointErrors({ version, against }: { version: Version; against: Version 
                   )}
                 </div>
               </td>
-              <td className="py-2 text-right">
+              <td className="py-2 pr-4 text-right last:pr-0">
                 <Quantity value={metric.rmse} unit={metric.unit} />
               </td>
               {against && (

@@ -22,6 +22,8 @@ function adaptation(more: Partial<Adaptation>): Adaptation {
 it.each([
   { state: 'adapting', given: adaptation({}) },
   { state: 'rejecting', given: adaptation({ rejections_in_a_row: 2 }) },
+  { state: 'rejecting', given: adaptation({ rejections_in_a_row: 1, last_batch: { position: 1, entry: 'batch', sequence: 1, revision: 7, at: ago(2), verdict: 'rejected' } }) },
+  { state: 'adapting', given: adaptation({ rejections_in_a_row: 1 }) },
   { state: 'silent', given: adaptation({ last_batch: { position: 1, entry: 'batch', sequence: 1, revision: 7, at: ago(61) } }) },
   { state: 'silent', given: adaptation({ last_batch: null }) },
   { state: 'frozen', given: adaptation({ state: 'frozen', frozen: { reason: 'too many', at: ago(5), by: 'guard' }, last_batch: null }) },
