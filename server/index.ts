@@ -3,12 +3,13 @@ import type { Server } from 'node:http'
 import type { AddressInfo } from 'node:net'
 import { createApp } from './app.ts'
 import { lockDataFolder } from './data-folder-lock.ts'
-import { databaseErrno, openDatabase } from './database/connection.ts'
+import { databaseErrno, openDatabase, requireDatabase } from './database/connection.ts'
 import { migrate } from './database/migrator.ts'
 import { startPrivateMariaDb } from './database/private-mariadb.ts'
 import { seedDemo } from './demo/seed.ts'
 import { demoCredentials, prepareDemo, recordSeeded } from './demo/team.ts'
 import { createDependencies, createLog, startDependencies, stopDependencies } from './dependencies.ts'
+import { diskFull, isDiskFull } from './disk-space.ts'
 import { createServices, startServices, stopServices } from './services/index.ts'
 import { readSettings } from './settings.ts'
 import type { Settings } from './settings.ts'
@@ -58,6 +59,7 @@ export async function run(): Promise<void> {
     const origin = settings.origin ?? `http://${settings.host.includes(':') ? `[${settings.host}]` : settings.host}:${port}`
 
     const address = settings.databaseAddress ?? (await startOwnDatabase())
+    await requireDatabase(address)
     const database = openDatabase(address)
     undo.push(() => database.close())
     await migrate(database)
@@ -134,16 +136,8 @@ function tell(settings: Settings, origin: string): void {
   process.stdout.write(`${lines.join('\n')}\n\n`)
 }
 
-function asStartError(error: unknown, settings: Settings): unknown {
+function asStartError(error: unknown, { dataFolder }: Settings): unknown {
   if (error instanceof StartError) return error
-  const errno = databaseErrno(error)
-  const code = (error as NodeJS.ErrnoException).code
-  if (code === 'ENOSPC' || errno === 1021 || errno === 1114 || errno === -28) {
-    return new StartError(`The disk that holds ${settings.dataFolder} is full. Free some space (at least 500 MB), or name another folder in HEFTWISE_DATA_DIR.`, error)
-  }
-  if (settings.databaseAddress && (errno !== undefined || code !== undefined)) {
-    const { host, port } = settings.databaseAddress
-    return new StartError(`The database at ${host}:${port} (HEFTWISE_DATABASE_URL) cannot be used: ${(error as Error).message}`, error)
-  }
-  return error
+  const told = `${(error as NodeJS.ErrnoException).code} ${(error as Error).message} ${databaseErrno(error)}`
+  return isDiskFull(dataFolder, told) ? diskFull(dataFolder, error) : error
 }

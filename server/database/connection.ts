@@ -2,6 +2,7 @@ import * as mariadb from 'mariadb'
 import { Sequelize, Transaction } from 'sequelize'
 import { defineModels } from '../models/index.ts'
 import type { Models } from '../models/index.ts'
+import { StartError } from '../start-error.ts'
 
 export interface DatabaseAddress {
   readonly host: string
@@ -64,6 +65,17 @@ export function openDatabase(address: DatabaseAddress, sizes: { models?: number;
     async close() {
       await Promise.all([sequelize.close(), pool.end()])
     },
+  }
+}
+
+/** @throws {StartError} it cannot be reached, or does not let us in */
+export async function requireDatabase(address: DatabaseAddress): Promise<void> {
+  try {
+    const connection = await mariadb.createConnection({ ...address, connectTimeout: 10_000 })
+    await connection.end()
+  } catch (error) {
+    const reason = ((error as { sqlMessage?: string }).sqlMessage ?? (error as Error).message).split('\n', 1)[0]!.trim()
+    throw new StartError(`The database ${address.database} at ${address.host}:${address.port} cannot be used: ${reason}. Check HEFTWISE_DATABASE_URL and that MariaDB runs there.`, error)
   }
 }
 

@@ -7,6 +7,7 @@ import { tmpdir, userInfo } from 'node:os'
 import { join, resolve } from 'node:path'
 import { promisify } from 'node:util'
 import * as mariadb from 'mariadb'
+import { diskFull, isDiskFull, requireDiskSpace } from '../disk-space.ts'
 import { StartError } from '../start-error.ts'
 import type { DatabaseAddress } from './connection.ts'
 
@@ -52,6 +53,7 @@ export async function startPrivateMariaDb(options: PrivateMariaDbOptions): Promi
   }
   const owner = await accountFor(folder)
   await mkdir(folder, { recursive: true, mode: 0o700 })
+  requireDiskSpace(folder, !existsSync(join(dataOf(folder), 'mysql')))
   await install(folder, owner)
   const credentials = await readCredentials(folder)
 
@@ -130,15 +132,11 @@ async function install(folder: string, owner: string | undefined): Promise<void>
     ], { maxBuffer: 1 << 24 })
   } catch (error) {
     const told = `${(error as { stdout?: string }).stdout ?? ''}${(error as { stderr?: string }).stderr ?? ''}`
-    if (/No space left|Errcode: 28|errno: 28|ENOSPC/.test(told)) throw diskFull(folder, error)
+    if (isDiskFull(folder, told)) throw diskFull(folder, error)
     throw new StartError(`MariaDB could not lay out its data folder in ${folder}: ${lastLine(told) || (error as Error).message}`, error)
   }
   await rm(data, { recursive: true, force: true })
   await rename(draft, data)
-}
-
-function diskFull(folder: string, cause?: unknown): StartError {
-  return new StartError(`The disk that holds ${folder} is full. Free some space (at least 500 MB), or name another folder in HEFTWISE_DATA_DIR.`, cause)
 }
 
 async function readCredentials(folder: string): Promise<Credentials> {
@@ -238,7 +236,7 @@ async function launch(program: string, folder: string, owner: string | undefined
     await wait(50)
   }
   const tail = (await readFile(join(folder, 'mariadb.log'), 'utf8').catch(() => '')).slice(-6_000)
-  if (/No space left|Errcode: 28|errno: 28|OS error: 28|error number 28/.test(tail)) throw diskFull(folder)
+  if (isDiskFull(folder, tail)) throw diskFull(folder)
   const line = lastLine(tail.split('\n').filter((text) => text.includes('[ERROR]')).join('\n'))
   throw new StartError(`MariaDB did not come up (${ended ?? 'no answer within 90 s'}). ${line || 'It wrote no reason.'} Its log: ${join(folder, 'mariadb.log')}`)
 }

@@ -106,6 +106,7 @@ export function loadContract(): ContractDocument {
       operations: operations.filter((operation) => operation.path === path),
     }))
 
+  // Compiled when first asked for: most processes, tests above all, use few of them.
   const cached = new Map<string, Check | undefined>()
   const once = <T extends Check | undefined>(key: string, make: () => T): T => {
     if (!cached.has(key)) cached.set(key, make())

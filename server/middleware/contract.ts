@@ -115,21 +115,16 @@ function permit(operation: Operation): RequestHandler {
 }
 
 function validate(document: ContractDocument, operation: Operation, bodyBytes: number): RequestHandler {
-  const checkPath = document.parameterCheck(operation.id, 'path')
-  const checkQuery = document.parameterCheck(operation.id, 'query')
-  const checkHeader = document.parameterCheck(operation.id, 'header')
   const headerNames = document.parameterNames(operation.id, 'header')
-  const takesJson = operation.bodyTypes.includes('application/json')
-  const checkBody = takesJson ? document.bodyCheck(operation.id, 'application/json') : undefined
 
   return async (req, _res, next) => {
     const path = { ...req.params }
-    const pathFaults = checkPath(path).map(faultOf)
+    const pathFaults = document.parameterCheck(operation.id, 'path')(path).map(faultOf)
     if (pathFaults.length > 0) throw new Refusal('not-found', `The path cannot name anything here. ${summary(pathFaults)}`, { errors: parameterFaults(pathFaults) })
 
     const query: Record<string, unknown> = { ...req.query }
     const header = Object.fromEntries(headerNames.filter((name) => req.headers[name] !== undefined).map((name) => [name, req.headers[name]]))
-    const faults = [...checkQuery(query), ...checkHeader(header)].map(faultOf)
+    const faults = [...document.parameterCheck(operation.id, 'query')(query), ...document.parameterCheck(operation.id, 'header')(header)].map(faultOf)
     if (faults.length > 0) throw new Refusal('invalid-request', summary(parameterFaults(faults)), { errors: parameterFaults(faults) })
 
     let body: unknown
@@ -138,7 +133,7 @@ function validate(document: ContractDocument, operation: Operation, bodyBytes: n
       if (!operation.bodyTypes.includes(type)) throw unsupported(type, operation.bodyTypes)
       if (type === 'application/json') {
         body = parseJson(await readBody(req, bodyBytes))
-        const bodyFaults = checkBody!(body).slice(0, 20).map(faultOf)
+        const bodyFaults = document.bodyCheck(operation.id, type)(body).slice(0, 20).map(faultOf)
         if (bodyFaults.length > 0) throw new Refusal('invalid-request', summary(bodyFaults), { errors: bodyFaults })
       }
     }

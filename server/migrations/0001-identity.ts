@@ -4,14 +4,14 @@ const id = 'CHAR(36) CHARACTER SET ascii COLLATE ascii_bin'
 const hash = 'CHAR(64) CHARACTER SET ascii COLLATE ascii_bin'
 
 export async function up({ sequelize }: QueryInterface): Promise<void> {
-  await sequelize.query(`CREATE TABLE teams (
+  await sequelize.query(`CREATE TABLE IF NOT EXISTS teams (
     id ${id} NOT NULL PRIMARY KEY,
     name VARCHAR(120) NOT NULL,
     simulated BOOLEAN NOT NULL DEFAULT FALSE,
     created_at DATETIME(3) NOT NULL,
     UNIQUE KEY teams_name (name)
   )`)
-  await sequelize.query(`CREATE TABLE people (
+  await sequelize.query(`CREATE TABLE IF NOT EXISTS people (
     id ${id} NOT NULL PRIMARY KEY,
     email VARCHAR(254) NOT NULL,
     name VARCHAR(120) NOT NULL,
@@ -20,7 +20,7 @@ export async function up({ sequelize }: QueryInterface): Promise<void> {
     created_at DATETIME(3) NOT NULL,
     UNIQUE KEY people_email (email)
   )`)
-  await sequelize.query(`CREATE TABLE memberships (
+  await sequelize.query(`CREATE TABLE IF NOT EXISTS memberships (
     team_id ${id} NOT NULL,
     person_id ${id} NOT NULL,
     role ENUM('engineer', 'operator', 'reviewer', 'administrator') NOT NULL,
@@ -30,7 +30,7 @@ export async function up({ sequelize }: QueryInterface): Promise<void> {
     CONSTRAINT memberships_team FOREIGN KEY (team_id) REFERENCES teams (id),
     CONSTRAINT memberships_person FOREIGN KEY (person_id) REFERENCES people (id)
   )`)
-  await sequelize.query(`CREATE TABLE sessions (
+  await sequelize.query(`CREATE TABLE IF NOT EXISTS sessions (
     id_hash ${hash} NOT NULL PRIMARY KEY,
     person_id ${id} NULL,
     data TEXT NOT NULL,
@@ -39,7 +39,7 @@ export async function up({ sequelize }: QueryInterface): Promise<void> {
     KEY sessions_person (person_id),
     KEY sessions_seen (seen_at)
   )`)
-  await sequelize.query(`CREATE TABLE api_keys (
+  await sequelize.query(`CREATE TABLE IF NOT EXISTS api_keys (
     id ${id} NOT NULL PRIMARY KEY,
     team_id ${id} NOT NULL,
     name VARCHAR(120) NOT NULL,

@@ -5,7 +5,7 @@ const hash = 'CHAR(64) CHARACTER SET ascii COLLATE ascii_bin'
 
 export async function up({ sequelize }: QueryInterface): Promise<void> {
   // No foreign keys: the record of what happened outlives what it happened to.
-  await sequelize.query(`CREATE TABLE audit_events (
+  await sequelize.query(`CREATE TABLE IF NOT EXISTS audit_events (
     id ${id} NOT NULL PRIMARY KEY,
     team_id ${id} NULL,
     at DATETIME(3) NOT NULL,
@@ -22,7 +22,7 @@ export async function up({ sequelize }: QueryInterface): Promise<void> {
     request_id VARCHAR(64) CHARACTER SET ascii COLLATE ascii_bin NULL,
     KEY audit_events_team (team_id, id)
   )`)
-  await sequelize.query(`CREATE TABLE changes (
+  await sequelize.query(`CREATE TABLE IF NOT EXISTS changes (
     id BIGINT UNSIGNED NOT NULL AUTO_INCREMENT PRIMARY KEY,
     origin ${id} NOT NULL,
     kind VARCHAR(40) CHARACTER SET ascii COLLATE ascii_bin NOT NULL,
@@ -31,7 +31,7 @@ export async function up({ sequelize }: QueryInterface): Promise<void> {
     at DATETIME(3) NOT NULL,
     KEY changes_at (at)
   )`)
-  await sequelize.query(`CREATE TABLE idempotency_answers (
+  await sequelize.query(`CREATE TABLE IF NOT EXISTS idempotency_answers (
     scope_hash ${hash} NOT NULL PRIMARY KEY,
     body_hash ${hash} NOT NULL,
     claim ${id} NOT NULL,

@@ -5,7 +5,7 @@ const name = 'VARCHAR(64) CHARACTER SET ascii COLLATE ascii_bin'
 const hash = 'CHAR(64) CHARACTER SET ascii COLLATE ascii_bin'
 
 export async function up({ sequelize }: QueryInterface): Promise<void> {
-  await sequelize.query(`CREATE TABLE arms (
+  await sequelize.query(`CREATE TABLE IF NOT EXISTS arms (
     id ${id} NOT NULL PRIMARY KEY,
     team_id ${id} NOT NULL,
     name ${name} NOT NULL,
@@ -23,7 +23,7 @@ export async function up({ sequelize }: QueryInterface): Promise<void> {
     UNIQUE KEY arms_name (team_id, name),
     CONSTRAINT arms_team FOREIGN KEY (team_id) REFERENCES teams (id)
   )`)
-  await sequelize.query(`CREATE TABLE recordings (
+  await sequelize.query(`CREATE TABLE IF NOT EXISTS recordings (
     id ${id} NOT NULL PRIMARY KEY,
     team_id ${id} NOT NULL,
     arm_id ${id} NOT NULL,
@@ -44,13 +44,13 @@ export async function up({ sequelize }: QueryInterface): Promise<void> {
   )`)
   // Chunks are written while the upload runs, before the recording exists; recording_uploads says which those are, so
   // that what a broken upload leaves behind can be told from what belongs to a recording.
-  await sequelize.query(`CREATE TABLE recording_chunks (
+  await sequelize.query(`CREATE TABLE IF NOT EXISTS recording_chunks (
     recording_id ${id} NOT NULL,
     position INT UNSIGNED NOT NULL,
     content MEDIUMBLOB NOT NULL,
     PRIMARY KEY (recording_id, position)
   )`)
-  await sequelize.query(`CREATE TABLE recording_uploads (
+  await sequelize.query(`CREATE TABLE IF NOT EXISTS recording_uploads (
     recording_id ${id} NOT NULL PRIMARY KEY,
     touched_at DATETIME(3) NOT NULL
   )`)

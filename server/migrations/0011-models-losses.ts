@@ -5,7 +5,7 @@ const name = 'VARCHAR(64) CHARACTER SET ascii COLLATE ascii_bin'
 const hash = 'CHAR(64) CHARACTER SET ascii COLLATE ascii_bin'
 
 export async function up({ sequelize }: QueryInterface): Promise<void> {
-  await sequelize.query(`CREATE TABLE models (
+  await sequelize.query(`CREATE TABLE IF NOT EXISTS models (
     id ${id} NOT NULL PRIMARY KEY,
     team_id ${id} NOT NULL,
     arm_id ${id} NOT NULL,
@@ -22,7 +22,7 @@ export async function up({ sequelize }: QueryInterface): Promise<void> {
     CONSTRAINT models_team FOREIGN KEY (team_id) REFERENCES teams (id),
     CONSTRAINT models_arm FOREIGN KEY (arm_id) REFERENCES arms (id)
   )`)
-  await sequelize.query(`CREATE TABLE versions (
+  await sequelize.query(`CREATE TABLE IF NOT EXISTS versions (
     id ${id} NOT NULL PRIMARY KEY,
     team_id ${id} NOT NULL,
     model_id ${id} NOT NULL,
@@ -40,7 +40,7 @@ export async function up({ sequelize }: QueryInterface): Promise<void> {
     CONSTRAINT versions_model FOREIGN KEY (model_id) REFERENCES models (id)
   )`)
   // The unique key is what decides when two people release at the same moment.
-  await sequelize.query(`CREATE TABLE releases (
+  await sequelize.query(`CREATE TABLE IF NOT EXISTS releases (
     id ${id} NOT NULL PRIMARY KEY,
     team_id ${id} NOT NULL,
     model_id ${id} NOT NULL,
@@ -55,7 +55,7 @@ export async function up({ sequelize }: QueryInterface): Promise<void> {
     KEY releases_version (model_id, version),
     CONSTRAINT releases_version_number FOREIGN KEY (model_id, version) REFERENCES versions (model_id, number)
   )`)
-  await sequelize.query(`CREATE TABLE losses (
+  await sequelize.query(`CREATE TABLE IF NOT EXISTS losses (
     id ${id} NOT NULL PRIMARY KEY,
     team_id ${id} NOT NULL,
     model_id ${id} NOT NULL,
@@ -69,7 +69,7 @@ export async function up({ sequelize }: QueryInterface): Promise<void> {
     CONSTRAINT losses_team FOREIGN KEY (team_id) REFERENCES teams (id),
     CONSTRAINT losses_model FOREIGN KEY (model_id) REFERENCES models (id)
   )`)
-  await sequelize.query(`CREATE TABLE loss_versions (
+  await sequelize.query(`CREATE TABLE IF NOT EXISTS loss_versions (
     id ${id} NOT NULL PRIMARY KEY,
     team_id ${id} NOT NULL,
     loss_id ${id} NOT NULL,

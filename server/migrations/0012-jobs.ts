@@ -3,7 +3,7 @@ import type { QueryInterface } from 'sequelize'
 const id = 'CHAR(36) CHARACTER SET ascii COLLATE ascii_bin'
 
 export async function up({ sequelize }: QueryInterface): Promise<void> {
-  await sequelize.query(`CREATE TABLE jobs (
+  await sequelize.query(`CREATE TABLE IF NOT EXISTS jobs (
     id ${id} NOT NULL PRIMARY KEY,
     team_id ${id} NOT NULL,
     kind VARCHAR(40) CHARACTER SET ascii COLLATE ascii_bin NOT NULL,
@@ -28,7 +28,7 @@ export async function up({ sequelize }: QueryInterface): Promise<void> {
     KEY jobs_team (team_id, id),
     CONSTRAINT jobs_team FOREIGN KEY (team_id) REFERENCES teams (id)
   )`)
-  await sequelize.query(`CREATE TABLE job_points (
+  await sequelize.query(`CREATE TABLE IF NOT EXISTS job_points (
     job_id ${id} NOT NULL,
     number INT UNSIGNED NOT NULL,
     series VARCHAR(60) NOT NULL,

@@ -4,7 +4,7 @@ const id = 'CHAR(36) CHARACTER SET ascii COLLATE ascii_bin'
 const name = 'VARCHAR(64) CHARACTER SET ascii COLLATE ascii_bin'
 
 export async function up({ sequelize }: QueryInterface): Promise<void> {
-  await sequelize.query(`CREATE TABLE server_processes (
+  await sequelize.query(`CREATE TABLE IF NOT EXISTS server_processes (
     id ${id} NOT NULL PRIMARY KEY,
     host VARCHAR(200) NOT NULL,
     address VARCHAR(200) NULL,
@@ -12,7 +12,7 @@ export async function up({ sequelize }: QueryInterface): Promise<void> {
     KEY server_processes_expiry (expires_at)
   )`)
   // Texts, not JSON: the connector would parse JSON columns, and what decides served bits must come back as it went in.
-  await sequelize.query(`CREATE TABLE adaptations (
+  await sequelize.query(`CREATE TABLE IF NOT EXISTS adaptations (
     id ${id} NOT NULL PRIMARY KEY,
     team_id ${id} NOT NULL,
     model ${name} NOT NULL,
@@ -37,7 +37,7 @@ export async function up({ sequelize }: QueryInterface): Promise<void> {
     CONSTRAINT adaptations_team FOREIGN KEY (team_id) REFERENCES teams (id)
   )`)
   // What was measured is kept as the binary64 numbers it was read as: replaying them gives the same bits.
-  await sequelize.query(`CREATE TABLE adaptation_log (
+  await sequelize.query(`CREATE TABLE IF NOT EXISTS adaptation_log (
     adaptation_id ${id} NOT NULL,
     position BIGINT UNSIGNED NOT NULL,
     entry ENUM('batch', 'event', 'command') NOT NULL,
@@ -54,7 +54,7 @@ export async function up({ sequelize }: QueryInterface): Promise<void> {
     PRIMARY KEY (adaptation_id, position),
     UNIQUE KEY adaptation_log_sequence (adaptation_id, sequence)
   )`)
-  await sequelize.query(`CREATE TABLE adaptation_checkpoints (
+  await sequelize.query(`CREATE TABLE IF NOT EXISTS adaptation_checkpoints (
     adaptation_id ${id} NOT NULL,
     position BIGINT UNSIGNED NOT NULL,
     bytes LONGBLOB NOT NULL,

@@ -3,7 +3,7 @@ import { afterAll, beforeAll, describe, expect, test } from 'vitest'
 import { testClock } from '../support/clock.ts'
 import { startTestServer } from '../support/server.ts'
 import type { TestServer, TestTeam } from '../support/server.ts'
-import type { SessionClient } from '../support/api.ts'
+import type { Answer, SessionClient } from '../support/api.ts'
 
 const clock = testClock()
 let server: TestServer
@@ -225,7 +225,7 @@ describe('the list of keys', () => {
     const seen: string[] = []
     let path: string | undefined = '/v1/keys?limit=2'
     while (path !== undefined) {
-      const page: Awaited<ReturnType<typeof person.get>> = await person.get(path)
+      const page: Answer = await person.get(path)
       seen.push(...page.body.items.map(({ id }: { id: string }) => id))
       path = /^<([^>]+)>; rel="next"$/.exec(page.headers.get('link') ?? '')?.[1]
       expect(path === undefined).toBe(page.body.next_cursor === null)

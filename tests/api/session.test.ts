@@ -224,7 +224,7 @@ describe('forgery', () => {
     expect(answer.body.type).toBe('tag:heftwise.invalid,2026:csrf-token-missing')
   })
 
-  test.each([
+  test.each<Record<string, string>>([
     { origin: 'https://elsewhere.example.org' },
     { origin: 'null' },
     { 'sec-fetch-site': 'cross-site' },
