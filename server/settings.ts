@@ -23,6 +23,8 @@ export interface Settings {
   readonly groupCommit: { readonly largestGroup: number; readonly lanes: number }
   /** Jobs that this process works on at a time; 0: it leaves them to others. */
   readonly jobThreads: number
+  /** How far their threads stand back behind everything else (Linux): 0 not at all, 19 as far as can be. */
+  readonly jobNiceness: number
   readonly seedDemo: boolean
   readonly logLevel: string
   readonly session: { readonly idleMs: number; readonly absoluteMs: number }
@@ -54,6 +56,7 @@ export function readSettings(env: NodeJS.ProcessEnv = process.env): Settings {
     peerAddress: env.HEFTWISE_PEER_ADDRESS ? originOf(env.HEFTWISE_PEER_ADDRESS, 'HEFTWISE_PEER_ADDRESS') : null,
     groupCommit: { largestGroup: 256, lanes: 1 },
     jobThreads: integer(env, 'HEFTWISE_JOB_THREADS', 1, 0, 64),
+    jobNiceness: integer(env, 'HEFTWISE_JOB_NICENESS', 10, 0, 19),
     seedDemo: flag(env, 'HEFTWISE_DEMO', !production),
     logLevel: oneOf(env, 'HEFTWISE_LOG_LEVEL', 'warn', ['trace', 'debug', 'info', 'warn', 'error', 'silent']),
     session: {

@@ -24,6 +24,8 @@ export interface JobQueueParts {
   readonly log: Logger
   /** Jobs at a time in this process. */
   readonly threads: number
+  /** How far their threads stand back behind the event loop's. */
+  readonly niceness: number
   readInput(job: Job): Promise<JobInput>
   storeOutput(job: Job, output: JobOutput, transaction: Parameters<Parameters<Database['transaction']>[0]>[0]): Promise<NonNullable<Job['result']>>
 }
@@ -50,7 +52,7 @@ interface Running {
  * same, and a job whose process has gone is found by its lease having run out. What a job makes is stored in the
  * transaction that ends it, and only while the lease is still held.
  */
-export function createJobQueue({ database, log, threads, readInput, storeOutput }: JobQueueParts): JobQueue {
+export function createJobQueue({ database, log, threads, niceness, readInput, storeOutput }: JobQueueParts): JobQueue {
   const { pool } = database
   const { Job } = database.models
   const running = new Map<string, Running>()
@@ -88,7 +90,7 @@ export function createJobQueue({ database, log, threads, readInput, storeOutput 
       const claimed = await claim()
       if (!claimed) return
       const { id } = claimed.job
-      const run = runJob({ database, log, readInput, storeOutput }, claimed.job, claimed.lease)
+      const run = runJob({ database, log, niceness, readInput, storeOutput }, claimed.job, claimed.lease)
       running.set(id, run)
       void run.ended.finally(() => {
         running.delete(id)
@@ -129,7 +131,7 @@ type End =
   /** The lease is somebody else's: nothing more may be written. */
   | { state: 'lost' }
 
-function runJob({ database, log, readInput, storeOutput }: Omit<JobQueueParts, 'threads'>, job: Job, lease: string): Running {
+function runJob({ database, log, niceness, readInput, storeOutput }: Omit<JobQueueParts, 'threads'>, job: Job, lease: string): Running {
   const { pool } = database
   const flag = new Int32Array(new SharedArrayBuffer(4))
   let thread: Worker | undefined
@@ -188,7 +190,7 @@ function runJob({ database, log, readInput, storeOutput }: Omit<JobQueueParts, '
     }, beatMs)
     try {
       const input = await readInput(job)
-      const start: WorkerStart = { input, cancel: flag.buffer as SharedArrayBuffer }
+      const start: WorkerStart = { input, niceness, cancel: flag.buffer as SharedArrayBuffer }
       thread = startThread(new URL('./worker.ts', import.meta.url), start, buffersOf(input))
       thread.on('message', onMessage)
       thread.on('error', (error: NodeJS.ErrnoException) => {

@@ -42,6 +42,7 @@ export type JobOutput =
 /** What a worker is started with. */
 export interface WorkerStart {
   readonly input: JobInput
+  readonly niceness: number
   /** One Int32, set to 1 to cancel. */
   readonly cancel: SharedArrayBuffer
 }

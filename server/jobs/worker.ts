@@ -3,12 +3,11 @@ import { parentPort, workerData } from 'node:worker_threads'
 import { Refusal } from '../../shared/contract/problems.ts'
 import { JobCancelled, type JobInput, type JobOutput, type JobReport, type WorkerMessage, type WorkerStart } from './worker-messages.ts'
 
+const port = parentPort!
+const { input, niceness, cancel } = workerData.data as WorkerStart
 // On Linux a priority belongs to the thread that sets it (setpriority(2), notes); elsewhere it is the process's, which
 // must not be slowed down.
-if (process.platform === 'linux') setPriority(0, 10)
-
-const port = parentPort!
-const { input, cancel } = workerData.data as WorkerStart
+if (process.platform === 'linux' && niceness > 0) setPriority(0, niceness)
 const flag = new Int32Array(cancel)
 const send = (message: WorkerMessage) => port.postMessage(message)
 

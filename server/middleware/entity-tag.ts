@@ -14,7 +14,7 @@ export function answerUnlessKnown(req: Request, res: Response, tag: string, body
   res.setHeader('ETag', `"${tag}"`)
   res.setHeader('Cache-Control', 'private, no-cache')
   const known = req.headers['if-none-match']
-  if (known !== undefined && (known.trim() === '*' || (known.match(/"[^"]*"/g) ?? []).includes(`"${tag}"`))) {
+  if (known !== undefined && (known.trim() === '*' || ((known.match(/"[^"]*"/g) ?? []) as string[]).includes(`"${tag}"`))) {
     res.status(304).end()
     return
   }

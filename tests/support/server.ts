@@ -134,6 +134,7 @@ function testSettings(databaseAddress: DatabaseAddress, { limits, session, ...ov
     groupCommit: { largestGroup: 256, lanes: 1 },
     secret: 'a secret of the tests, long enough to sign with',
     jobThreads: 1,
+    jobNiceness: 0,
     seedDemo: false,
     logLevel: 'silent',
     // bcrypt's least; the real cost is a setting too.

@@ -44,6 +44,7 @@ export function createJobService(d: Dependencies & { recordings: RecordingServic
     database,
     log,
     threads: settings.jobThreads,
+    niceness: settings.jobNiceness,
     readInput: (job) => readJobInput(d, job),
     storeOutput: (job, output, transaction) => storeJobOutput(d, job, output, transaction),
   })
