@@ -36,11 +36,11 @@ export const defaultMetaTrainingOptions = {
   loss: 'state_dependent',
   positive: 'exp',
   hidden: 32,
-  updates: 400,
+  updates: 800,
   innerSteps: 15,
-  streams: 8,
+  streams: 16,
   rowsPerStep: 4,
-  outerRate: 1e-2,
+  outerRate: 2e-2,
   seed: 1,
 } as const satisfies MetaTrainingOptions
 
@@ -128,7 +128,7 @@ export function* metaTrain(
   }
   const random = createRandom(options.seed)
   const start = startValues(shape, sgd.rule, random)
-  const best = yield* learn(base, long, validation, shape, start, options, random)
+  const best = yield* learn(base, long, validation, shape, start, none, options, random)
   const rule = ruleOf(shape, Float64Array.from(Float32Array.from(best)))
   const learned = yield* tuneRule(options.loss, base, validation, rule, rule.rate, options.measure)
   return { learned, none, rivals }
@@ -140,14 +140,17 @@ const startRates = { sgd: 0.02, adam: 1e-3 }
 /** Share of the best rate of plain squared error at which a loss is learned. */
 const innerRateShare = 1 / 3
 
-/** κ, 1/s, tried for a bias under plain squared error, and the one learning starts from. */
+/** κ, 1/s, tried for a bias, and the least that learning starts from: it moves ln κ. */
 const fadingRates = [0, 0.1, 0.3, 1, 3]
 const leastLearnedFading = 0.03
 
 /** Updates between two looks at the validation motions. */
 const checkEvery = 20
 
-/** Longest outer gradient taken as it is; longer ones are shortened to it. */
+/** Multiple of the base's own error beyond which a stream is lost. */
+const lostBeyond = 3
+
+/** Longest outer gradient of a stream taken as it is; longer ones are shortened to it, or one unstable stream would decide alone. */
 const gradientLimit = 1
 
 function startValues(shape: ChainShape, plain: AdaptationRule, random: Random): Float64Array {
@@ -178,6 +181,7 @@ function* learn(
   validation: readonly NormalisedMotion[],
   shape: ChainShape,
   start: Float64Array,
+  none: number,
   options: MetaTrainingOptions,
   random: Random,
 ): Generator<MetaTrainingProgress, Float64Array> {
@@ -187,33 +191,46 @@ function* learn(
   const state = adam.initialState(learned.length)
   const gradient = new Float64Array(learned.length)
   const mean = new Float64Array(learned.length)
-  let best = { learned: learned.slice(), error: meanNextBatchError(base, validation, ruleOf(shape, learned), options.measure) }
+  const faster = new Float64Array(learned.length)
+  const rateAt = lossKinds[shape.loss].parameterCount(shape.lossShape)
+  let best = { learned: learned.slice(), score: stabilityScore(base, validation, ruleOf(shape, learned), options.measure).score }
+
+  /** Every other stream runs at a rate above the learned one, so that what is learned is stable with room to spare. */
+  function ahead(values: Float64Array): Float64Array {
+    faster.set(values)
+    faster[rateAt] += Math.log(stabilityMargin)
+    return faster
+  }
+
 
   for (let update = 1; update <= options.updates; update++) {
     mean.fill(0)
     let outer = 0
     let finite = 0
-    for (const stream of streams) {
-      const error = meta.compute(stream.stretch(), stream.adapted, learned, gradient)
+    for (const [index, stream] of streams.entries()) {
+      const error = meta.compute(stream.stretch(), stream.adapted, index % 2 === 0 ? learned : ahead(learned), gradient)
       if (!Number.isFinite(error) || !gradient.every(Number.isFinite)) {
         stream.restart()
         continue
       }
+      shorten(gradient, gradientLimit)
       for (let k = 0; k < mean.length; k++) mean[k] += gradient[k]
       outer += error
       finite++
-      stream.advance()
+      // A stream this far off would teach nothing but its own way back; what drove it off has been counted.
+      if (error > lostBeyond * none) stream.restart()
+      else stream.advance()
     }
     if (finite > 0) {
       for (let k = 0; k < mean.length; k++) mean[k] /= finite
-      shorten(mean, gradientLimit)
       const rate = options.outerRate * 0.5 * (1 + Math.cos((Math.PI * (update - 1)) / options.updates))
       adam.step(learned, mean, state, rate)
     }
     let validationError: number | undefined
     if (update % checkEvery === 0 || update === options.updates) {
-      validationError = meanNextBatchError(base, validation, ruleOf(shape, learned), options.measure)
-      if (validationError < best.error) best = { learned: learned.slice(), error: validationError }
+      const checked = stabilityScore(base, validation, ruleOf(shape, learned), options.measure)
+      validationError = checked.error
+      if (checked.score < best.score) best = { learned: learned.slice(), score: checked.score }
     }
     yield { phase: 'updates', update, updates: options.updates, outer: finite > 0 ? outer / finite : NaN, validation: validationError }
   }
@@ -305,7 +322,7 @@ export function* tuneRule(
   startRate: number,
   measure?: NextBatchMeasure,
 ): Generator<MetaTrainingProgress, TunedRule> {
-  const fadings = rule.scheme !== 'bias' ? [0] : rule.loss === 'mse' ? fadingRates : [rule.fadingRate]
+  const fadings = rule.scheme !== 'bias' ? [0] : [...new Set([rule.fadingRate, ...fadingRates])]
   let best: TunedRule = { name, rule, error: Infinity }
   for (const fadingRate of fadings) {
     const tuned = yield* tuneRate(name, base, validation, { ...rule, fadingRate }, startRate, measure)
@@ -335,11 +352,8 @@ function* tuneRate(
   }
   return { name, rule: best.rule, error: best.error }
 
-  /** Measures at the rate and a little above it: a rate whose neighbour is bad stands at the edge of stability. */
   function* attempt(rate: number): Generator<MetaTrainingProgress, number> {
-    const error = meanNextBatchError(base, validation, { ...rule, rate }, measure)
-    const above = meanNextBatchError(base, validation, { ...rule, rate: rate * stabilityMargin }, measure)
-    const score = 0.5 * (error + above)
+    const { error, score } = stabilityScore(base, validation, { ...rule, rate }, measure)
     if (score < best.score) best = { name, rule: { ...rule, rate }, error, score }
     yield { phase: 'rates', name, rate, error }
     return score
@@ -348,6 +362,13 @@ function* tuneRate(
 
 /** Rates are searched from a start divided by this to a start times this. */
 const searchSpan = 64
+
+/** Error at a rule's rate, and its mean with that a little above: a rate whose neighbour is bad stands at the edge of stability. */
+function stabilityScore(base: Base, motions: readonly NormalisedMotion[], rule: AdaptationRule, measure?: NextBatchMeasure) {
+  const error = meanNextBatchError(base, motions, rule, measure)
+  const above = meanNextBatchError(base, motions, { ...rule, rate: rule.rate * stabilityMargin }, measure)
+  return { error, score: 0.5 * (error + above) }
+}
 
 /** Room a chosen rate has above it. */
 const stabilityMargin = 1.25
