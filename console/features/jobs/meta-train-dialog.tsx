@@ -132,7 +132,7 @@ export function MetaTrainDialog({ losses, models, kinds, createLoss, onClose }: 
             label="Updates"
             value={updates}
             onChange={setUpdates}
-            hint="Empty: 400."
+            hint="Empty: 800."
             error={tried ? wrong.updates : undefined}
           />
           <NumberField label="Seed" value={seed} onChange={setSeed} hint="Empty: 1." error={tried ? wrong.seed : undefined} />

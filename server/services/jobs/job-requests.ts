@@ -14,7 +14,7 @@ export type JobRequest =
 /** As in server/jobs/training, which holds tfjs and so is loaded in workers only; a test holds the two together. */
 export const fitDefaults = { hidden: [64, 64], activation: 'relu', epochs: 60, rowsPerStep: 256, rate: 1e-2, seed: 1 } as const
 export const metaTrainDefaults = {
-  scheme: 'all', positive: 'exp', hidden: 32, updates: 400, innerSteps: 15, streams: 8, rowsPerStep: 4, seed: 1,
+  scheme: 'all', positive: 'exp', hidden: 32, updates: 800, innerSteps: 15, streams: 16, rowsPerStep: 4, seed: 1,
 } as const
 
 /** Of so many recordings one is held out. */
