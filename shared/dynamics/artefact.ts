@@ -29,7 +29,8 @@ export function encodeArtefact(mark: string, { description, sections }: Artefact
   let at = HEADER + textLength
   for (const { name, values } of sections) {
     for (let k = 0; k < values.length; k++, at += 4) {
-      if (!Number.isFinite(values[k])) throw new ShapeError(`${name}: value ${k} is ${values[k]}, only finite numbers are stored.`)
+      if (!Number.isFinite(values[k]))
+        throw new ShapeError(`${name}: value ${k} is ${values[k]}, only finite numbers are stored.`)
       view.setFloat32(at, values[k], true)
     }
   }
@@ -69,7 +70,9 @@ function parseHeader(what: string, text: Uint8Array): { sections: [string, numbe
   for (let k = 0; k < text.length; k++) json += String.fromCharCode(text[k])
   try {
     const header = JSON.parse(json)
-    const lengths = header.sections.every(([name, length]: [unknown, unknown]) => typeof name === 'string' && Number.isInteger(length))
+    const lengths = header.sections.every(
+      ([name, length]: [unknown, unknown]) => typeof name === 'string' && Number.isInteger(length),
+    )
     if (lengths && typeof header.description === 'object' && header.description !== null) return header
   } catch (cause) {
     throw new RangeError(`The text of this ${what} cannot be read.`, { cause })
@@ -78,6 +81,8 @@ function parseHeader(what: string, text: Uint8Array): { sections: [string, numbe
 }
 
 function asciiJson(value: object): string {
-  return JSON.stringify(value).replace(/[\u007f-\uffff]/g, character =>
-    `\\u${character.charCodeAt(0).toString(16).padStart(4, '0')}`)
+  return JSON.stringify(value).replace(
+    /[\u007f-\uffff]/g,
+    character => `\\u${character.charCodeAt(0).toString(16).padStart(4, '0')}`,
+  )
 }

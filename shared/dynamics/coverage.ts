@@ -26,7 +26,11 @@ export interface Coverage {
  */
 export function prepareCoverage(statistics: CoverageStatistics, channels: number): Coverage {
   const { low, high, mean, whitening, d99 } = statistics
-  for (const [name, list] of [['low', low], ['high', high], ['mean', mean]] as const) {
+  for (const [name, list] of [
+    ['low', low],
+    ['high', high],
+    ['mean', mean],
+  ] as const) {
     checkLength(`coverage.${name}`, list.length, channels, `${channels} channels`)
   }
   checkLength('coverage.whitening', whitening.length, (channels * (channels + 1)) / 2, `lower triangle of ${channels} channels`)

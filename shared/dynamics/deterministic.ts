@@ -1,7 +1,7 @@
 import { exp } from './elementary.ts'
 
 // ln 2 in two parts: the first has 32 trailing zero bits, so that an exponent times it is exact.
-const LN2_HIGH = 6.93147180369123816490e-1
+const LN2_HIGH = 6.9314718036912381649e-1
 const LN2_LOW = 1.90821492927058770002e-10
 
 /** 2^512, 2^256, …, 2^1: every power of two of a double is a product of these, exactly. */
@@ -20,10 +20,19 @@ export function ln(x: number): number {
   let exponent = 0
   for (let k = 0, step = 512; k < POWERS_OF_TWO.length; k++, step /= 2) {
     const power = POWERS_OF_TWO[k]
-    while (mantissa >= power) { mantissa /= power; exponent += step }
-    while (mantissa * power < 2) { mantissa *= power; exponent -= step }
+    while (mantissa >= power) {
+      mantissa /= power
+      exponent += step
+    }
+    while (mantissa * power < 2) {
+      mantissa *= power
+      exponent -= step
+    }
   }
-  if (mantissa > Math.SQRT2) { mantissa /= 2; exponent++ }
+  if (mantissa > Math.SQRT2) {
+    mantissa /= 2
+    exponent++
+  }
   // ln m = 2 artanh s with |s| ≤ 0.172: the first term left out is below 1e-18 of the sum.
   const s = (mantissa - 1) / (mantissa + 1)
   const square = s * s

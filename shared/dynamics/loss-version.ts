@@ -41,7 +41,12 @@ export function encodeLossVersion(loss: LossVersion): Uint8Array {
   checkLossVersion(loss)
   const { kind, positive, joints, hidden, baseChecksum, scheme, update } = loss.description
   const description = {
-    kind, positive, joints, hidden, baseChecksum, scheme,
+    kind,
+    positive,
+    joints,
+    hidden,
+    baseChecksum,
+    scheme,
     update: { kind: update.kind, rate: update.rate, rowsPerStep: update.rowsPerStep, fade: update.fade },
   }
   return encodeArtefact(MARK, { description, sections: [{ name: 'loss', values: loss.parameters }] })
@@ -82,5 +87,10 @@ export function checkLossVersion({ description, parameters }: LossVersion): void
   if (!Number.isInteger(hidden) || hidden < 0) throw new ShapeError(`hidden is ${hidden}, expected an integer from 0.`)
   if (typeof baseChecksum !== 'string') throw new ShapeError('baseChecksum is missing: a loss belongs to one base version.')
   if (!(update?.rate > 0)) throw new ShapeError(`update.rate is ${update?.rate}, expected a number above 0.`)
-  checkLength('parameters', parameters.length, lossKinds[kind].parameterCount(lossShapeOf(description)), `${kind}, ${joints} joints`)
+  checkLength(
+    'parameters',
+    parameters.length,
+    lossKinds[kind].parameterCount(lossShapeOf(description)),
+    `${kind}, ${joints} joints`,
+  )
 }

@@ -57,7 +57,12 @@ export interface Predictor {
 /** A state lies too far outside for a torque to be computed. `row` and `joint` count from 0. */
 export class StateRangeError extends RangeError {
   override readonly name = 'StateRangeError'
-  constructor(readonly row: number, readonly joint: number, readonly channel: 'position' | 'velocity' | 'acceleration', value: number) {
+  constructor(
+    readonly row: number,
+    readonly joint: number,
+    readonly channel: 'position' | 'velocity' | 'acceleration',
+    value: number,
+  ) {
     super(`${channel}: row ${row}, joint ${joint} is ${value}, too far outside what the version was fitted on for a torque.`)
   }
 }
@@ -94,7 +99,13 @@ export function createPredictor(kernels: Kernels, version: Version, limits: ArmL
 
 /** As Predictor, for any network of the version's shape: an adaptation serves one network after another. */
 export interface RowPredictor {
-  predict(network: NetworkHandle, query: PredictQuery, into: Prediction, bias: FadingBias | null, ahead: Float64Array | null): void
+  predict(
+    network: NetworkHandle,
+    query: PredictQuery,
+    into: Prediction,
+    bias: FadingBias | null,
+    ahead: Float64Array | null,
+  ): void
   release(): void
 }
 
@@ -141,7 +152,12 @@ function checkRoom(what: string, found: number, needed: number): void {
 }
 
 function addBias(
-  bias: FadingBias, outputStd: Float64Array, ahead: Float64Array | null, rows: number, joints: number, torque: Float64Array,
+  bias: FadingBias,
+  outputStd: Float64Array,
+  ahead: Float64Array | null,
+  rows: number,
+  joints: number,
+  torque: Float64Array,
 ): void {
   for (let row = 0, at = 0; row < rows; row++) {
     const left = ahead ? fade(bias.fade, ahead[row]) : 1

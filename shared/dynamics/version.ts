@@ -66,7 +66,11 @@ export function encodeVersion(version: Version): Uint8Array {
       outputStd: normalisation.outputStd,
     },
     coverage: {
-      low: coverage.low, high: coverage.high, mean: coverage.mean, whitening: coverage.whitening, d99: coverage.d99,
+      low: coverage.low,
+      high: coverage.high,
+      mean: coverage.mean,
+      whitening: coverage.whitening,
+      d99: coverage.d99,
     },
     noise,
     referenceStates,
@@ -119,7 +123,8 @@ export function checkVersion({ description, parameters }: Version): void {
   if (!(referenceStates?.length >= 1)) throw new ShapeError('referenceStates is empty, expected at least one row.')
   referenceStates.forEach((row, index) => checkNumbers(`referenceStates[${index}]`, row, channels))
   for (let k = 0; k < parameters.length; k++) {
-    if (!Number.isFinite(parameters[k])) throw new ShapeError(`parameters: value ${k} is ${parameters[k]}, expected a finite number.`)
+    if (!Number.isFinite(parameters[k]))
+      throw new ShapeError(`parameters: value ${k} is ${parameters[k]}, expected a finite number.`)
   }
 }
 

@@ -16,7 +16,7 @@ export interface AdaptationInputs {
   readonly units: readonly string[]
 }
 
-/** A measured stretch of motion: matrices are row-major, rows × n, joints in the arm's order, SI units. Read during prepare only. */
+/** A measured stretch of motion: matrices row-major, rows × n, joints in the arm's order, SI units. Read during prepare only. */
 export interface BatchEntry {
   readonly kind: 'batch'
   /** Place in the log of batches and events, from 1. */
@@ -62,8 +62,17 @@ export interface Reason {
 }
 
 export type ReasonCode =
-  | 'not_finite' | 'implausible' | 'step_norm' | 'torque_change' | 'drift' | 'no_help' | 'worse_than_base'
-  | 'frozen' | 'gap' | 'excitation' | 'below_noise'
+  | 'not_finite'
+  | 'implausible'
+  | 'step_norm'
+  | 'torque_change'
+  | 'drift'
+  | 'no_help'
+  | 'worse_than_base'
+  | 'frozen'
+  | 'gap'
+  | 'excitation'
+  | 'below_noise'
 
 /** Where an adaptation stands. */
 export type AdaptationState =
@@ -90,7 +99,7 @@ export interface BatchOutcome {
   /** Root mean square error per joint, N·m, length n each. */
   readonly jointBefore: Float64Array
   readonly jointAfter: Float64Array | null
-  /** Mean loss weight per joint over the batch, length n; ones under mse; under `unstructured`, its gradient beside plain squared error's. */
+  /** Mean loss weight per joint over the batch, length n: ones under mse; under `unstructured`, its gradient beside mse's. */
   readonly weights: Float64Array
   /** Euclidean norm of the change the candidate makes; null where no step was computed. */
   readonly stepNorm: number | null

@@ -37,7 +37,12 @@ export function createBiasLearner(kernels: Kernels, inputs: AdaptationInputs): L
 
   function make(): LearnedBias {
     return {
-      network, bias: new Float64Array(joints), memory: initialMemory.slice(), reference: baseReference.slice(), asOf: NaN, uses: 0,
+      network,
+      bias: new Float64Array(joints),
+      memory: initialMemory.slice(),
+      reference: baseReference.slice(),
+      asOf: NaN,
+      uses: 0,
     }
   }
 
@@ -64,8 +69,8 @@ export function createBiasLearner(kernels: Kernels, inputs: AdaptationInputs): L
   }
 
   function copy(from: Learned, into: Learned): void {
-    (into as LearnedBias).bias.set((from as LearnedBias).bias);
-    (into as LearnedBias).memory.set((from as LearnedBias).memory)
+    ;(into as LearnedBias).bias.set((from as LearnedBias).bias)
+    ;(into as LearnedBias).memory.set((from as LearnedBias).memory)
     into.asOf = from.asOf
   }
 
@@ -109,8 +114,8 @@ export function createBiasLearner(kernels: Kernels, inputs: AdaptationInputs): L
       addToReference(learned as LearnedBias)
     },
     restart(from, into) {
-      copy(from, into);
-      (into as LearnedBias).memory.set(initialMemory)
+      copy(from, into)
+      ;(into as LearnedBias).memory.set(initialMemory)
       addToReference(into as LearnedBias)
     },
     distance(a, b) {

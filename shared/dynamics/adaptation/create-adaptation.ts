@@ -4,11 +4,24 @@ import type { RowPredictor, PredictQuery, Prediction } from '../prediction.ts'
 import { checkLength, checkRows, ShapeError } from '../shape-error.ts'
 import { checkVersion } from '../version.ts'
 import type {
-  Adaptation, AdaptationInputs, AdaptationState, AdaptationStatus, BatchEntry, BatchOutcome, ChangeOutcome, CommandEntry, EventEntry,
-  LogEntry, Outcome, Reason, Refusal, Snapshot,
+  Adaptation,
+  AdaptationInputs,
+  AdaptationState,
+  AdaptationStatus,
+  BatchEntry,
+  BatchOutcome,
+  ChangeOutcome,
+  CommandEntry,
+  EventEntry,
+  LogEntry,
+  Outcome,
+  Reason,
+  Refusal,
+  Snapshot,
 } from './adaptation.ts'
 import { createBiasLearner } from './bias-learner.ts'
 import { ByteReader, Bytes } from './bytes.ts'
+import { checkCommand, checkSequence, checkTimes } from './entry-checks.ts'
 import { createGuardTable, judgePlausibility, mostExceeding, reasons, worseJoint } from './guards.ts'
 import type { GuardTable } from './guards.ts'
 import type { Learned, Learner, LearnerFactory, Rows } from './learner.ts'
@@ -19,7 +32,7 @@ import { HOLD_OUT_ROWS, MOST_BATCH_ROWS, STEP_NORM_REST } from './settings.ts'
 import type { Scheme } from './settings.ts'
 import { BatchWindow } from './window.ts'
 
-/** All schemes by the name they have in the contract. To add one: a file with a LearnerFactory, its name in Scheme, one line here. */
+/** All schemes by their name in the contract. To add one: a file with a LearnerFactory, its name in Scheme, one line here. */
 const learners: Readonly<Record<Scheme, LearnerFactory>> = {
   all: createNetworkLearner,
   last_layer: createNetworkLearner,
@@ -117,8 +130,19 @@ class Machine implements Adaptation {
     this.#sums = { served: perJoint(), base: perJoint(), candidate: perJoint(), motion: perJoint() }
     const { base } = this.#learner
     this.#published = this.#tip = {
-      revision: 0, nextSequence: 1, mode: { state: 'adapting' }, learned: keep(base), lastGood: keep(base), lastTime: NaN, period: NaN,
-      restUntil: -Infinity, rejections: 0, windowStart: 0, windowEnd: 0, errorsSince: NaN, errorsFrom: 0,
+      revision: 0,
+      nextSequence: 1,
+      mode: { state: 'adapting' },
+      learned: keep(base),
+      lastGood: keep(base),
+      lastTime: NaN,
+      period: NaN,
+      restUntil: -Infinity,
+      rejections: 0,
+      windowStart: 0,
+      windowEnd: 0,
+      errorsSince: NaN,
+      errorsFrom: 0,
     }
   }
 
@@ -149,7 +173,12 @@ class Machine implements Adaptation {
     keep(next.learned)
     keep(next.lastGood)
     if (entry.kind !== 'command') next.nextSequence = entry.sequence + 1
-    const outcome = entry.kind === 'batch' ? this.#batch(entry, next) : entry.kind === 'event' ? this.#event(entry, next) : this.#command(entry, next)
+    const outcome =
+      entry.kind === 'batch'
+        ? this.#batch(entry, next)
+        : entry.kind === 'event'
+          ? this.#event(entry, next)
+          : this.#command(entry, next)
     this.#queue.push(next)
     this.#tip = next
     return outcome
@@ -178,7 +207,9 @@ class Machine implements Adaptation {
     const { asOf, validUntil, revision } = this.status()
     const { network, bias } = this.#published.learned
     return {
-      revision, asOf, validUntil,
+      revision,
+      asOf,
+      validUntil,
       parameters: network.read(),
       bias: bias && { values: bias.slice(), fade: this.inputs.settings.update.fade },
     }
@@ -198,9 +229,16 @@ class Machine implements Adaptation {
     bytes.text(this.inputs.settings.scheme)
     bytes.text(JSON.stringify(state.mode))
     for (const value of [
-      state.revision, state.nextSequence, state.lastTime, state.period, state.restUntil, state.rejections, state.errorsSince,
+      state.revision,
+      state.nextSequence,
+      state.lastTime,
+      state.period,
+      state.restUntil,
+      state.rejections,
+      state.errorsSince,
       state.errorsFrom - state.windowStart,
-    ]) bytes.float64(value)
+    ])
+      bytes.float64(value)
     this.#writeLearned(state.learned, null, bytes)
     this.#writeLearned(state.lastGood, state.learned, bytes)
     const lines = this.#window.copy(state.windowStart, state.windowEnd)
@@ -237,7 +275,12 @@ class Machine implements Adaptation {
   #checkShapes({ rows, time, position, velocity, acceleration, torque }: BatchEntry): void {
     checkRows(rows, MOST_BATCH_ROWS)
     checkLength('time', time.length, rows, `${rows} rows`)
-    for (const [what, values] of [['position', position], ['velocity', velocity], ['acceleration', acceleration], ['torque', torque]] as const) {
+    for (const [what, values] of [
+      ['position', position],
+      ['velocity', velocity],
+      ['acceleration', acceleration],
+      ['torque', torque],
+    ] as const) {
       checkLength(what, values.length, rows * this.#joints, `${rows} rows of ${this.#joints} joints`)
     }
   }
@@ -267,9 +310,18 @@ class Machine implements Adaptation {
     next.lastTime = now
 
     const outcome: Writable<BatchOutcome> = {
-      kind: 'batch', sequence: entry.sequence, revision: next.revision, verdict: 'stored', reasons: [],
-      before: isFinite ? before : Number.MAX_VALUE, after: null,
-      jointBefore: this.#rootMeans(servedSums, rows), jointAfter: null, weights: new Float64Array(joints), stepNorm: null, changedTo: null,
+      kind: 'batch',
+      sequence: entry.sequence,
+      revision: next.revision,
+      verdict: 'stored',
+      reasons: [],
+      before: isFinite ? before : Number.MAX_VALUE,
+      after: null,
+      jointBefore: this.#rootMeans(servedSums, rows),
+      jointAfter: null,
+      weights: new Float64Array(joints),
+      stepNorm: null,
+      changedTo: null,
     }
     if (isFinite) this.#learner.weights(from, this.#rows, outcome.weights)
     else outcome.weights.fill(1)
@@ -278,9 +330,11 @@ class Machine implements Adaptation {
     return outcome
   }
 
-  /** The order of the checks is part of what an adaptation is: frozen, gap, finite, plausible, worse than base, motion, noise, step. */
+  /** The order of the checks decides served bits: frozen, gap, finite, plausible, worse than base, motion, noise, step. */
   #judge(
-    entry: BatchEntry, next: State, outcome: Writable<BatchOutcome>,
+    entry: BatchEntry,
+    next: State,
+    outcome: Writable<BatchOutcome>,
     given: { isFinite: boolean; isSmall: boolean; pause: number },
   ): void {
     const { settings } = this.#guard
@@ -352,7 +406,9 @@ class Machine implements Adaptation {
     const drifted = mostExceeding(candidate.reference, reference, drift)
     if (drifted >= 0) {
       const joint = drifted % this.#joints
-      found.push(reasons.drift(this.#guard, joint, Math.abs(candidate.reference[drifted] - reference[drifted]) * outputStd[joint]))
+      found.push(
+        reasons.drift(this.#guard, joint, Math.abs(candidate.reference[drifted] - reference[drifted]) * outputStd[joint]),
+      )
     }
     return found
   }
@@ -371,8 +427,15 @@ class Machine implements Adaptation {
     const joint = worseJoint(this.#guard, { served: candidate, base, rows: count })
     if (joint >= 0) {
       const std = this.#guard.outputStd[joint]
-      found.push(reasons.worseThanBase(this.#guard, joint, std * Math.sqrt(candidate[joint] / count), std * Math.sqrt(base[joint] / count),
-        'on the newest quarter, which the step did not see,'))
+      found.push(
+        reasons.worseThanBase(
+          this.#guard,
+          joint,
+          std * Math.sqrt(candidate[joint] / count),
+          std * Math.sqrt(base[joint] / count),
+          'on the newest quarter, which the step did not see,',
+        ),
+      )
     }
   }
 
@@ -399,7 +462,10 @@ class Machine implements Adaptation {
     const { candidate, base: baseSums } = this.#sums
     let { lastGood } = next
     if (lastGood !== base) {
-      for (const [learned, out, sums] of [[lastGood, this.#candidate, candidate], [base, this.#base, baseSums]] as const) {
+      for (const [learned, out, sums] of [
+        [lastGood, this.#candidate, candidate],
+        [base, this.#base, baseSums],
+      ] as const) {
         this.#learner.predict(learned, this.#rows, 0, rows, out)
         this.#sumErrors(out, 0, rows, sums)
       }
@@ -448,7 +514,8 @@ class Machine implements Adaptation {
       // A frozen state is served for long: it must be one that has shown itself good.
       if (next.learned !== next.lastGood) this.#serveLastGood(next)
       next.mode = {
-        state: 'frozen', cause: 'rejections',
+        state: 'frozen',
+        cause: 'rejections',
         reason: `${next.rejections} batches in a row were rejected, the last because: ${why[0].detail}`,
       }
       outcome.changedTo = next.mode
@@ -478,7 +545,8 @@ class Machine implements Adaptation {
     }
     if (event === 'tool_changed') {
       next.mode = {
-        state: 'frozen', cause: 'context_changed',
+        state: 'frozen',
+        cause: 'context_changed',
         reason: 'The tool was changed, which is another context: end this adaptation and start one for the new tool.',
       }
     }
@@ -646,34 +714,4 @@ function statusOf(state: State, horizon: number): AdaptationStatus {
     validUntil: isKnown ? asOf + horizon : null,
     rejectionsInARow: state.rejections,
   }
-}
-
-function checkCommand({ command }: CommandEntry, mode: AdaptationState): Refusal | null {
-  if (command !== 'resume') return null
-  if (mode.state !== 'frozen') return { code: 'not_frozen', detail: 'The adaptation is adapting; only a frozen one can be resumed.' }
-  return mode.cause === 'context_changed' ? { code: 'context_changed', detail: mode.reason } : null
-}
-
-function checkSequence({ sequence, skipped }: BatchEntry | EventEntry, expected: number): Refusal | null {
-  if (sequence === expected + skipped) return null
-  if (sequence < expected) {
-    return { code: 'sequence_repeated', detail: `Sequence ${sequence} is in the log already; ${expected} comes next.`, expectedSequence: expected }
-  }
-  const declared = skipped > 0 ? ` with ${skipped} declared as skipped` : ''
-  return {
-    code: 'sequence_gap', expectedSequence: expected,
-    detail: `Sequence ${sequence}${declared} does not follow: ${expected} comes next. Send it, or declare in "skipped" how many were dropped.`,
-  }
-}
-
-function checkTimes({ rows, time }: BatchEntry, lastTime: number): Refusal | null {
-  let before = lastTime
-  for (let row = 0; row < rows; row++) {
-    if (time[row] <= before || !(Math.abs(time[row]) < Infinity)) {
-      const after = row === 0 ? `${before} s, the newest row in the log` : `${before} s of the row before`
-      return { code: 'time_not_rising', detail: `time: row ${row} is ${time[row]} s, not after ${after}.`, row }
-    }
-    before = time[row]
-  }
-  return null
 }

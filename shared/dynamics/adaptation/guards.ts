@@ -83,7 +83,11 @@ export function createGuardTable({ version, settings, limits, jointNames, units 
  * @param predicted  rows × n, base standard deviations
  */
 export function judgePlausibility(
-  table: GuardTable, measured: Float64Array, predicted: Float64Array, rows: number, outputMean: Float64Array,
+  table: GuardTable,
+  measured: Float64Array,
+  predicted: Float64Array,
+  rows: number,
+  outputMean: Float64Array,
 ): Reason | null {
   const { plausibleError, inverseLimit, outputStd, noiseSquared } = table
   const joints = outputStd.length
@@ -139,55 +143,104 @@ export const reasons = {
 
   tooFar: (table: GuardTable, joint: number, measured: number, predicted: number): Reason => {
     const [name, unit, bound] = [table.jointNames[joint], table.units[joint], table.plausibleError[joint]]
-    return reason('implausible', `${name}: a measured torque of ${shown(measured)} ${unit} lies further from the predicted ` +
-      `${shown(predicted)} ${unit} than ${shown(bound)} ${unit} (75 % of the joint's limit); check sensor, unit and order of joints.`,
-      joint, Math.abs(measured - predicted), bound)
+    return reason(
+      'implausible',
+      `${name}: a measured torque of ${shown(measured)} ${unit} lies further from the predicted ` +
+        `${shown(predicted)} ${unit} than ${shown(bound)} ${unit} (75 % of the limit); check sensor, unit and order of joints.`,
+      joint,
+      Math.abs(measured - predicted),
+      bound,
+    )
   },
 
   opposed: (found: number): Reason =>
-    reason('implausible', `Measured torque runs against what is predicted (cosine ${shown(found)}, least ` +
-      `${shown(LEAST_COSINE)}); check the sign convention and the order of joints.`, null, found, LEAST_COSINE),
+    reason(
+      'implausible',
+      `Measured torque runs against what is predicted (cosine ${shown(found)}, least ` +
+        `${shown(LEAST_COSINE)}); check the sign convention and the order of joints.`,
+      null,
+      found,
+      LEAST_COSINE,
+    ),
 
   stepNorm: (found: number, bound: number): Reason =>
-    reason('step_norm', `The step would change the adapted numbers by ${shown(found)}, more than ${shown(bound)}.`, null, found, bound),
+    reason(
+      'step_norm',
+      `The step would change the adapted numbers by ${shown(found)}, more than ${shown(bound)}.`,
+      null,
+      found,
+      bound,
+    ),
 
   torqueChange: (table: GuardTable, joint: number, found: number): Reason => {
     const bound = table.torqueChange[joint] * table.outputStd[joint]
-    return reason('torque_change', `${table.jointNames[joint]}: the step would change the predicted torque by ${shown(found)} ` +
-      `${table.units[joint]} on a reference state, more than ${shown(bound)} ${table.units[joint]} ` +
-      `(${shown(100 * table.settings.torqueChange)} % of the joint's limit).`, joint, found, bound)
+    return reason(
+      'torque_change',
+      `${table.jointNames[joint]}: the step would change the predicted torque by ${shown(found)} ` +
+        `${table.units[joint]} on a reference state, more than ${shown(bound)} ${table.units[joint]} ` +
+        `(${shown(100 * table.settings.torqueChange)} % of the joint's limit).`,
+      joint,
+      found,
+      bound,
+    )
   },
 
   drift: (table: GuardTable, joint: number, found: number): Reason => {
     const bound = table.drift[joint] * table.outputStd[joint]
-    return reason('drift', `${table.jointNames[joint]}: the predicted torque would lie ${shown(found)} ${table.units[joint]} from the ` +
-      `base version's on a reference state, more than ${shown(bound)} ${table.units[joint]} ` +
-      `(${shown(100 * table.settings.drift)} % of the joint's limit).`, joint, found, bound)
+    return reason(
+      'drift',
+      `${table.jointNames[joint]}: the predicted torque would lie ${shown(found)} ${table.units[joint]} from the ` +
+        `base version's on a reference state, more than ${shown(bound)} ${table.units[joint]} ` +
+        `(${shown(100 * table.settings.drift)} % of the joint's limit).`,
+      joint,
+      found,
+      bound,
+    )
   },
 
   /** found, base: root mean square errors in the joint's unit. */
   worseThanBase: (table: GuardTable, joint: number, found: number, base: number, where: string): Reason => {
     const bound = (1 + table.settings.tolerance) * base
-    return reason('worse_than_base', `${table.jointNames[joint]}: ${where} the error is ${shown(found)} ${table.units[joint]}, base's ` +
-      `${shown(base)} ${table.units[joint]}; more than ${shown(100 * table.settings.tolerance)} % worse is not served.`,
-      joint, found, bound)
+    return reason(
+      'worse_than_base',
+      `${table.jointNames[joint]}: ${where} the error is ${shown(found)} ${table.units[joint]}, base's ` +
+        `${shown(base)} ${table.units[joint]}; more than ${shown(100 * table.settings.tolerance)} % worse is not served.`,
+      joint,
+      found,
+      bound,
+    )
   },
 
   noHelp: (found: number, bound: number): Reason =>
-    reason('no_help', `On the newest quarter, which it did not see, the step leaves an error of ${shown(found)}, no less than the ` +
-      `${shown(bound)} before it.`, null, found, bound),
+    reason(
+      'no_help',
+      `On the newest quarter, which it did not see, the step leaves an error of ${shown(found)}, no less than the ` +
+        `${shown(bound)} before it.`,
+      null,
+      found,
+      bound,
+    ),
 
-  frozen: (why: string): Reason =>
-    reason('frozen', `The adaptation is frozen: ${why}`, null, null, null),
+  frozen: (why: string): Reason => reason('frozen', `The adaptation is frozen: ${why}`, null, null, null),
 
   gap: (found: number, bound: number): Reason =>
-    reason('gap', `The rows pause for ${shown(found)} s, longer than ${shown(bound)} s; steps are not taken across a gap.`,
-      null, found, bound),
+    reason(
+      'gap',
+      `The rows pause for ${shown(found)} s, longer than ${shown(bound)} s; steps are not taken across a gap.`,
+      null,
+      found,
+      bound,
+    ),
 
   excitation: (table: GuardTable, joint: number, found: number): Reason =>
-    reason('excitation', `The arm hardly moved over the last second: the most moved joint, ${table.jointNames[joint]}, reached ` +
-      `${shown(found)} of its base standard deviation of velocity, less than ${shown(table.settings.excitation)}.`,
-      joint, found, table.settings.excitation),
+    reason(
+      'excitation',
+      `The arm hardly moved over the last second: the most moved joint, ${table.jointNames[joint]}, reached ` +
+        `${shown(found)} of its base standard deviation of velocity, less than ${shown(table.settings.excitation)}.`,
+      joint,
+      found,
+      table.settings.excitation,
+    ),
 
   belowNoise: (found: number): Reason =>
     reason('below_noise', `The error is ${shown(found)} times the noise, which no step can improve.`, null, found, 1),

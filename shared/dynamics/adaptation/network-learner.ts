@@ -63,7 +63,9 @@ export function createNetworkLearner(kernels: Kernels, inputs: AdaptationInputs)
       into.asOf = batch.time[rows - 1]
       reference.predict(into.network, into.reference)
     },
-    age: (learned, time) => { learned.asOf = time },
+    age: (learned, time) => {
+      learned.asOf = time
+    },
     restart(from, into) {
       copy(from, into)
       copyMoments(base, into)

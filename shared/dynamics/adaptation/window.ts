@@ -34,7 +34,11 @@ export class BatchWindow {
     this.#stride = 3 + 3 * joints
     this.#lines = new Float64Array(this.#capacity * this.#stride)
     this.sums = {
-      rows: 0, served: new Float64Array(joints), base: new Float64Array(joints), movedRows: 0, motion: new Float64Array(joints),
+      rows: 0,
+      served: new Float64Array(joints),
+      base: new Float64Array(joints),
+      movedRows: 0,
+      motion: new Float64Array(joints),
     }
   }
 
@@ -45,8 +49,14 @@ export class BatchWindow {
    * @param errorRows  0 when the batch's errors are not to count
    */
   write(
-    oldest: number, end: number, time: number, errorRows: number, served: Float64Array, base: Float64Array,
-    movedRows: number, motion: Float64Array,
+    oldest: number,
+    end: number,
+    time: number,
+    errorRows: number,
+    served: Float64Array,
+    base: Float64Array,
+    movedRows: number,
+    motion: Float64Array,
   ): void {
     if (end - oldest >= this.#capacity) this.#grow(oldest, end)
     const at = this.#placeOf(end)

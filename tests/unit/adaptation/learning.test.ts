@@ -1,12 +1,19 @@
 import { describe, expect, test } from 'vitest'
 import {
-  createAdaptation, createPrediction, createPredictor, lossShapeOf, type AdaptationInputs, type BatchEntry, type RequestedSettings,
+  createAdaptation,
+  createPrediction,
+  createPredictor,
+  lossShapeOf,
+  type AdaptationInputs,
+  type BatchEntry,
+  type RequestedSettings,
 } from '../../../shared/dynamics/index.ts'
 import { measureNextBatch, type AdaptationRule } from '../../../shared/dynamics/prequential.ts'
 import { batch, inputsOf, joints, kernels, limits, lossOf, predictAdapted, predictBase, send, version } from './two-joint-arm.ts'
 
 const motion = Array.from({ length: 80 }, (_, k) =>
-  batch(k + 1, { offset: (row, joint) => Math.sin(k / 11 + joint) + 0.1 * Math.cos(5 * row + k) }))
+  batch(k + 1, { offset: (row, joint) => Math.sin(k / 11 + joint) + 0.1 * Math.cos(5 * row + k) }),
+)
 
 /** The same motion as the double-precision reference takes it. */
 function normalised(entries: readonly BatchEntry[]) {
@@ -21,7 +28,10 @@ function normalised(entries: readonly BatchEntry[]) {
     }
   }
   return {
-    name: 'test', rows: measured.length / joints, x: Float64Array.from(x), measured: Float64Array.from(measured),
+    name: 'test',
+    rows: measured.length / joints,
+    x: Float64Array.from(x),
+    measured: Float64Array.from(measured),
     time: Float64Array.from(entries.flatMap(entry => Array.from(entry.time))),
   }
 }
@@ -34,9 +44,14 @@ function noiseless(inputs: AdaptationInputs): AdaptationInputs {
 describe('what is served', () => {
   const unguarded = { stepNorm: 1000, torqueChange: 1, drift: 2, tolerance: 1, toleranceFloor: 10, excitation: 0 }
   const cases: [AdaptationRule['scheme'], AdaptationRule['update'], AdaptationRule['loss'], number][] = [
-    ['all', 'sgd', 'mse', 0.003], ['all', 'adam', 'mse', 0.003], ['all', 'sgd', 'state_dependent', 0.003],
-    ['last_layer', 'sgd', 'structured', 0.003], ['last_layer', 'sgd', 'unstructured', 0.003],
-    ['bias', 'sgd', 'mse', 0.4], ['bias', 'adam', 'mse', 0.1], ['bias', 'sgd', 'state_dependent', 0.4],
+    ['all', 'sgd', 'mse', 0.003],
+    ['all', 'adam', 'mse', 0.003],
+    ['all', 'sgd', 'state_dependent', 0.003],
+    ['last_layer', 'sgd', 'structured', 0.003],
+    ['last_layer', 'sgd', 'unstructured', 0.003],
+    ['bias', 'sgd', 'mse', 0.4],
+    ['bias', 'adam', 'mse', 0.1],
+    ['bias', 'sgd', 'state_dependent', 0.4],
   ]
 
   // f32 against f64: 6e-8 a value, growing over 80 steps; the errors themselves are near 0.1.
@@ -49,7 +64,11 @@ describe('what is served', () => {
     const errors = motion.map(entry => send(adaptation, entry))
 
     const rule: AdaptationRule = {
-      scheme, update: kind, rate, rowsPerStep: 4, loss: name,
+      scheme,
+      update: kind,
+      rate,
+      rowsPerStep: 4,
+      loss: name,
       lossShape: loss === 'mse' ? { joints, inputs: 6, hidden: 0, positive: 'exp' } : lossShapeOf(loss.description),
       lossParameters: loss === 'mse' ? new Float64Array(0) : Float64Array.from(loss.parameters),
       fadingRate: -Math.log(fade),

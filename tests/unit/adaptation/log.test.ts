@@ -1,6 +1,12 @@
 import { describe, expect, test } from 'vitest'
 import {
-  createAdaptation, restoreAdaptation, type Adaptation, type CommandEntry, type EventEntry, type LogEntry, type LossVersion,
+  createAdaptation,
+  restoreAdaptation,
+  type Adaptation,
+  type CommandEntry,
+  type EventEntry,
+  type LogEntry,
+  type LossVersion,
   type RequestedSettings,
 } from '../../../shared/dynamics/index.ts'
 import { batch, inputsOf, kernels, lossOf, predictAdapted, predictBase, send } from './two-joint-arm.ts'
@@ -85,7 +91,11 @@ describe('the log', () => {
     const adaptation = createAdaptation(kernels, inputsOf(gentle))
 
     expect(adaptation.check(command('resume'))).toMatchObject({ code: 'not_frozen' })
-    expect(enter(adaptation, command('freeze')).changedTo).toMatchObject({ state: 'frozen', cause: 'command', reason: 'Because.' })
+    expect(enter(adaptation, command('freeze')).changedTo).toMatchObject({
+      state: 'frozen',
+      cause: 'command',
+      reason: 'Because.',
+    })
     expect(enter(adaptation, { ...command('freeze'), reason: 'Again.' }).changedTo).toBeNull()
     expect(adaptation.status().state).toMatchObject({ reason: 'Because.' })
   })
@@ -136,7 +146,10 @@ describe('an event', () => {
 
     send(adaptation, batch(7, { from: 0 }))
 
-    const moved = adaptation.snapshot().parameters.map((value, k) => Math.abs(value - before[k])).filter(change => change > 0)
+    const moved = adaptation
+      .snapshot()
+      .parameters.map((value, k) => Math.abs(value - before[k]))
+      .filter(change => change > 0)
     expect(moved.length).toBeGreaterThan(20)
     // m / √v is ±1 after one gradient; f32 parameters near 1 round to 6e-8.
     for (const change of moved) expect(Math.abs(change - rate)).toBeLessThan(2e-6)
@@ -153,8 +166,16 @@ describe('an event', () => {
 
 describe('preparing ahead of publishing', () => {
   const entries = (): LogEntry[] => [
-    batch(1), batch(2), event(3, 0.15, 'gripped'), batch(4, { from: 0.16 }), command('freeze'), batch(5, { from: 0.24 }), command('resume'),
-    batch(6, { from: 0.32 }), command('reset'), batch(7, { from: 0.4 }),
+    batch(1),
+    batch(2),
+    event(3, 0.15, 'gripped'),
+    batch(4, { from: 0.16 }),
+    command('freeze'),
+    batch(5, { from: 0.24 }),
+    command('resume'),
+    batch(6, { from: 0.32 }),
+    command('reset'),
+    batch(7, { from: 0.4 }),
   ]
 
   test('serves each state only once it is published, and the same outcomes as one at a time', () => {
@@ -231,9 +252,21 @@ const cases: [string, RequestedSettings, LossVersion | 'mse'][] = [
   ['all, sgd, mse', { scheme: 'all', update: { kind: 'sgd', rate: 0.02 } }, 'mse'],
   ['all, adam, mse', { scheme: 'all', update: { kind: 'adam', rate: 0.003 } }, 'mse'],
   ['all, sgd, state_dependent', { scheme: 'all', update: { kind: 'sgd', rate: 0.02 } }, lossOf('state_dependent', 'all')],
-  ['last_layer, sgd, structured', { scheme: 'last_layer', update: { kind: 'sgd', rate: 0.02 } }, lossOf('structured', 'last_layer')],
-  ['last_layer, adam, unstructured', { scheme: 'last_layer', update: { kind: 'adam', rate: 0.003 } }, lossOf('unstructured', 'last_layer')],
-  ['bias, sgd, state_dependent', { scheme: 'bias', update: { kind: 'sgd', rate: 0.3, fade: 0.7 } }, lossOf('state_dependent', 'bias')],
+  [
+    'last_layer, sgd, structured',
+    { scheme: 'last_layer', update: { kind: 'sgd', rate: 0.02 } },
+    lossOf('structured', 'last_layer'),
+  ],
+  [
+    'last_layer, adam, unstructured',
+    { scheme: 'last_layer', update: { kind: 'adam', rate: 0.003 } },
+    lossOf('unstructured', 'last_layer'),
+  ],
+  [
+    'bias, sgd, state_dependent',
+    { scheme: 'bias', update: { kind: 'sgd', rate: 0.3, fade: 0.7 } },
+    lossOf('state_dependent', 'bias'),
+  ],
   ['bias, adam, mse', { scheme: 'bias', update: { kind: 'adam', rate: 0.1, fade: 0.7 } }, 'mse'],
 ]
 

@@ -12,7 +12,10 @@ describe('a loss version as bytes', () => {
 
   test('is refused when its parts do not fit, or it is of another kind', () => {
     const loss = lossOf('state_dependent', 'all')
-    const altered = (description: Partial<LossVersion['description']>) => ({ ...loss, description: { ...loss.description, ...description } })
+    const altered = (description: Partial<LossVersion['description']>) => ({
+      ...loss,
+      description: { ...loss.description, ...description },
+    })
 
     expect(() => encodeLossVersion(altered({ hidden: 5 }))).toThrow(/parameters has/)
     expect(() => encodeLossVersion(altered({ kind: 'mse' as never }))).toThrow(/kind is mse/)

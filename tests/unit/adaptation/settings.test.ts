@@ -1,5 +1,11 @@
 import { describe, expect, test } from 'vitest'
-import { completeGuard, completeSettings, GUARD_FIELDS, SettingError, type GuardSettings } from '../../../shared/dynamics/index.ts'
+import {
+  completeGuard,
+  completeSettings,
+  GUARD_FIELDS,
+  SettingError,
+  type GuardSettings,
+} from '../../../shared/dynamics/index.ts'
 
 const update = { kind: 'sgd', rate: 0.1, rowsPerStep: 4, fade: 1 } as const
 
@@ -25,20 +31,23 @@ describe('settings that a request leaves out', () => {
 })
 
 describe('guard settings', () => {
-  test.each(Object.keys(GUARD_FIELDS) as (keyof GuardSettings)[])('%s has a default within its range and refuses what is outside', name => {
-    const { least, most } = GUARD_FIELDS[name]
-    for (const scheme of ['all', 'last_layer', 'bias'] as const) {
-      for (const kind of ['sgd', 'adam'] as const) {
-        const value = completeGuard({}, scheme, { ...update, kind })[name]
-        expect(value).toBeGreaterThanOrEqual(least)
-        expect(value).toBeLessThanOrEqual(most)
+  test.each(Object.keys(GUARD_FIELDS) as (keyof GuardSettings)[])(
+    '%s has a default within its range and refuses what is outside',
+    name => {
+      const { least, most } = GUARD_FIELDS[name]
+      for (const scheme of ['all', 'last_layer', 'bias'] as const) {
+        for (const kind of ['sgd', 'adam'] as const) {
+          const value = completeGuard({}, scheme, { ...update, kind })[name]
+          expect(value).toBeGreaterThanOrEqual(least)
+          expect(value).toBeLessThanOrEqual(most)
+        }
       }
-    }
-    expect(completeGuard({ [name]: most }, 'all', update)[name]).toBe(most)
-    for (const value of [least - 1, most + 1, NaN, Infinity]) {
-      expect(() => completeGuard({ [name]: value }, 'all', update)).toThrow(SettingError)
-    }
-  })
+      expect(completeGuard({ [name]: most }, 'all', update)[name]).toBe(most)
+      for (const value of [least - 1, most + 1, NaN, Infinity]) {
+        expect(() => completeGuard({ [name]: value }, 'all', update)).toThrow(SettingError)
+      }
+    },
+  )
 
   test('count rejections in whole numbers', () => {
     expect(() => completeGuard({ rejectionsBeforeFreeze: 2.5 }, 'all', update)).toThrow(/whole numbers/)

@@ -1,6 +1,16 @@
 import {
-  completeSettings, createKernels, createPrediction, createPredictor, lossKinds,
-  type Adaptation, type AdaptationInputs, type BatchEntry, type BatchOutcome, type LossVersion, type RequestedSettings, type Version,
+  completeSettings,
+  createKernels,
+  createPrediction,
+  createPredictor,
+  lossKinds,
+  type Adaptation,
+  type AdaptationInputs,
+  type BatchEntry,
+  type BatchOutcome,
+  type LossVersion,
+  type RequestedSettings,
+  type Version,
 } from '../../../shared/dynamics/index.ts'
 import { initialParameters } from '../../../shared/dynamics/network.ts'
 import { createRandom } from '../../../shared/dynamics/random.ts'
@@ -21,8 +31,11 @@ export const version: Version = (() => {
       network,
       normalisation: { inputMean: list(6, 0.1), inputStd: list(6, 0.5), outputMean: [3, 0.2], outputStd: [2, 0.5] },
       coverage: {
-        low: list(6, -2), high: list(6, 2), mean: list(6, 0),
-        whitening: Array.from({ length: 21 }, (_, k) => ([0, 2, 5, 9, 14, 20].includes(k) ? 1 : 0)), d99: 4,
+        low: list(6, -2),
+        high: list(6, 2),
+        mean: list(6, 0),
+        whitening: Array.from({ length: 21 }, (_, k) => ([0, 2, 5, 9, 14, 20].includes(k) ? 1 : 0)),
+        d99: 4,
       },
       noise: [0.01, 0.01],
       referenceStates,
@@ -37,7 +50,12 @@ export function lossOf(kind: LossVersion['description']['kind'], scheme: 'all' |
   const shape = { joints, inputs: 6, hidden: kind === 'structured' ? 0 : 4, positive: 'exp' as const }
   return {
     description: {
-      kind, positive: 'exp', joints, hidden: shape.hidden, baseChecksum: 'of-this-version', scheme,
+      kind,
+      positive: 'exp',
+      joints,
+      hidden: shape.hidden,
+      baseChecksum: 'of-this-version',
+      scheme,
       update: { kind: 'sgd', rate: 0.05, rowsPerStep: 4, fade: scheme === 'bias' ? 0.6 : 1 },
     },
     parameters: Float32Array.from(lossKinds[kind].initialParameters(shape, createRandom(5))),
@@ -46,7 +64,12 @@ export function lossOf(kind: LossVersion['description']['kind'], scheme: 'all' |
 
 export function inputsOf(requested: RequestedSettings = {}, loss: LossVersion | 'mse' = 'mse'): AdaptationInputs {
   return {
-    version, loss, limits, settings: completeSettings(requested, null, 0.5), jointNames: ['swivel', 'lift'], units: ['N·m', 'N·m'],
+    version,
+    loss,
+    limits,
+    settings: completeSettings(requested, null, 0.5),
+    jointNames: ['swivel', 'lift'],
+    units: ['N·m', 'N·m'],
   }
 }
 
@@ -69,7 +92,10 @@ export function batch(sequence: number, options: BatchOptions = {}): BatchEntry 
   const { rows = 4, from = (sequence - 1) * 4 * period, offset = () => 0.5, amplitude = 0.6, skipped = 0 } = options
   const { outputStd } = version.description.normalisation
   const entry = {
-    kind: 'batch' as const, sequence, skipped, rows,
+    kind: 'batch' as const,
+    sequence,
+    skipped,
+    rows,
     time: Float64Array.from({ length: rows }, (_, row) => from + row * period),
     position: new Float64Array(rows * joints),
     velocity: new Float64Array(rows * joints),
@@ -86,7 +112,8 @@ export function batch(sequence: number, options: BatchOptions = {}): BatchEntry 
   }
   const { torque } = predictBase(entry)
   for (let k = 0; k < rows * joints; k++) {
-    entry.torque[k] = torque[k] + offset(Math.floor(k / joints), k % joints, entry.time[Math.floor(k / joints)]) * outputStd[k % joints]
+    entry.torque[k] =
+      torque[k] + offset(Math.floor(k / joints), k % joints, entry.time[Math.floor(k / joints)]) * outputStd[k % joints]
   }
   return entry
 }

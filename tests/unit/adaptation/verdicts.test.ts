@@ -1,8 +1,6 @@
 import { describe, expect, test } from 'vitest'
 import { createAdaptation, type RequestedSettings } from '../../../shared/dynamics/index.ts'
-import {
-  batch, codesOf, inputsOf, kernels, lossOf, predictAdapted, predictBase, send,
-} from './two-joint-arm.ts'
+import { batch, codesOf, inputsOf, kernels, lossOf, predictAdapted, predictBase, send } from './two-joint-arm.ts'
 
 const gentle: RequestedSettings = { scheme: 'all', update: { kind: 'sgd', rate: 0.02 } }
 const biasOnly: RequestedSettings = { scheme: 'bias', update: { kind: 'sgd', rate: 0.5, fade: 0.9 } }
@@ -137,7 +135,9 @@ describe('a step is rejected, and the served state stays,', () => {
   test('when measured torque has the opposite sign', () => {
     const adaptation = createAdaptation(kernels, inputsOf(gentle))
     const entry = batch(1, { offset: () => 0 })
-    entry.torque.forEach((torque, k) => { entry.torque[k] = -torque })
+    entry.torque.forEach((torque, k) => {
+      entry.torque[k] = -torque
+    })
 
     const outcome = send(adaptation, entry)
 
@@ -231,7 +231,8 @@ describe('a served state that turns worse than base', () => {
     const adaptation = createAdaptation(kernels, inputsOf({ ...slow, guard: { ...slow.guard, ...guard } }))
     const spikeAt = 103
     const outcomes = Array.from({ length: 112 }, (_, k) =>
-      send(adaptation, batch(k + 1, { offset: (_row, _joint, time) => (k + 1 === spikeAt ? offset : time < 8 ? 1 : 0) })))
+      send(adaptation, batch(k + 1, { offset: (_row, _joint, time) => (k + 1 === spikeAt ? offset : time < 8 ? 1 : 0) })),
+    )
 
     expect(codesOf(outcomes[spikeAt - 1])).toEqual([code])
     expect(outcomes.slice(spikeAt).flatMap(codesOf)).toContain('worse_than_base')
@@ -243,7 +244,9 @@ describe('a served state that turns worse than base', () => {
     adaptation.prepare({ kind: 'event', sequence: 31, skipped: 0, time: 2.39, event: 'released' })
     adaptation.publish()
 
-    const outcomes = Array.from({ length: 20 }, (_, k) => send(adaptation, batch(32 + k, { from: (30 + k) * 0.08, offset: () => -0.05 })))
+    const outcomes = Array.from({ length: 20 }, (_, k) =>
+      send(adaptation, batch(32 + k, { from: (30 + k) * 0.08, offset: () => -0.05 })),
+    )
 
     expect(outcomes.flatMap(codesOf)).not.toContain('worse_than_base')
     expect(outcomes[0].before).toBeGreaterThan(0.9)
@@ -294,7 +297,10 @@ describe('a streak of rejections', () => {
 })
 
 test('every reason says what was found in a sentence', () => {
-  const adaptation = createAdaptation(kernels, inputsOf({ ...gentle, guard: { stepNorm: 1e-6, torqueChange: 0.001, drift: 0.001 } }))
+  const adaptation = createAdaptation(
+    kernels,
+    inputsOf({ ...gentle, guard: { stepNorm: 1e-6, torqueChange: 0.001, drift: 0.001 } }),
+  )
 
   const { reasons } = send(adaptation, batch(1, { offset: () => 2 }))
 

@@ -1,6 +1,13 @@
 import { describe, expect, test } from 'vitest'
 import {
-  createKernels, createPrediction, createPredictor, decodeVersion, encodeVersion, fitCoverage, StateRangeError, type Version,
+  createKernels,
+  createPrediction,
+  createPredictor,
+  decodeVersion,
+  encodeVersion,
+  fitCoverage,
+  StateRangeError,
+  type Version,
 } from '../../../shared/dynamics/index.ts'
 import { coverageOfRow, prepareCoverage } from '../../../shared/dynamics/coverage.ts'
 import { fade, ln } from '../../../shared/dynamics/deterministic.ts'
@@ -29,10 +36,21 @@ function predict(position: number[], options: { torque?: number; torqueRate?: nu
   const into = createPrediction(rows, 1)
   const still = new Float64Array(rows)
   predictor.predict(
-    { rows, position: Float64Array.from(position), velocity: still, acceleration: still, time: time ? Float64Array.from(time) : null }, into,
+    {
+      rows,
+      position: Float64Array.from(position),
+      velocity: still,
+      acceleration: still,
+      time: time ? Float64Array.from(time) : null,
+    },
+    into,
   )
   predictor.release()
-  return { torque: Array.from(into.torque), limited: Array.from(into.limited.subarray(0, 2 * into.limitedCount)), coverage: into.coverage }
+  return {
+    torque: Array.from(into.torque),
+    limited: Array.from(into.limited.subarray(0, 2 * into.limitedCount)),
+    coverage: into.coverage,
+  }
 }
 
 describe('predicted torque', () => {
@@ -54,7 +72,10 @@ describe('predicted torque', () => {
   })
 
   test('is saturated before its rate is bounded', () => {
-    expect(predict([-2, 9], { torque: 15, torqueRate: 100, time: [0, 0.1] })).toMatchObject({ torque: [-15, -5], limited: [0, 0, 1, 0] })
+    expect(predict([-2, 9], { torque: 15, torqueRate: 100, time: [0, 0.1] })).toMatchObject({
+      torque: [-15, -5],
+      limited: [0, 0, 1, 0],
+    })
   })
 
   test('is refused where a state is too far out for a finite number', () => {
@@ -89,7 +110,12 @@ describe('coverage of a row', () => {
 describe('the statistics of a fit', () => {
   test('whiten correlated channels to distances of the inverse covariance', () => {
     // Rows ±(1, 1), ±(2, −2) and so on: covariance [[5, −3], [−3, 5]] / 2, whose inverse is [[5, 3], [3, 5]] / 8.
-    const rows = [[1, 1], [-1, -1], [2, -2], [-2, 2]]
+    const rows = [
+      [1, 1],
+      [-1, -1],
+      [2, -2],
+      [-2, 2],
+    ]
     const { mean, whitening } = fitCoverage(Float64Array.from(rows.flat()), 4, 2)
     const distance = (x: number, y: number) => Math.hypot(whitening[0] * x, whitening[1] * x + whitening[2] * y)
 
@@ -135,8 +161,14 @@ describe('a version as bytes', () => {
   })
 
   test('does not depend on the order of keys', () => {
-    const turned = (value: unknown): unknown => (value === null || typeof value !== 'object' || Array.isArray(value) ? value
-      : Object.fromEntries(Object.entries(value).reverse().map(([key, inner]) => [key, turned(inner)])))
+    const turned = (value: unknown): unknown =>
+      value === null || typeof value !== 'object' || Array.isArray(value)
+        ? value
+        : Object.fromEntries(
+            Object.entries(value)
+              .reverse()
+              .map(([key, inner]) => [key, turned(inner)]),
+          )
     const other = { description: turned(spring.description) as Version['description'], parameters: spring.parameters }
 
     expect(encodeVersion(other)).toEqual(encodeVersion(spring))
