@@ -11,14 +11,23 @@ export function Boot() {
   )
 }
 
-/** A page that could not be shown at all: its code did not come, or the session could not be asked for. */
+/** The whole console could not be shown: its code did not come, or the session could not be asked for. */
 export function BrokenPage() {
+  return (
+    <main>
+      <BrokenContent />
+    </main>
+  )
+}
+
+/** The same for one page, within the shell. */
+export function BrokenContent() {
   const thrown = useRouteError()
   const error = isRouteErrorResponse(thrown) ? new Error(`${thrown.status} ${thrown.statusText}`) : thrown
   return (
-    <main className="mx-auto max-w-2xl px-4 py-16">
+    <div className="mx-auto max-w-2xl px-4 py-16">
       <h1 className="sr-only">Something went wrong</h1>
       <Failed what="This page could not be shown" error={error} retry={() => window.location.reload()} />
-    </main>
+    </div>
   )
 }

@@ -1,14 +1,16 @@
 import type { QueryClient } from '@tanstack/react-query'
 import type { ComponentType } from 'react'
 import { createBrowserRouter, redirect, type LoaderFunctionArgs, type RouteObject } from 'react-router-dom'
-import { adaptationOptions, adaptationsOptions, historyOptions } from '../features/adaptations/adaptations.ts'
+import { adaptationOptions, adaptationsOptions, historyOptions, runningOptions } from '../features/adaptations/adaptations.ts'
+import { armOptions, armsOptions } from '../features/arms/arms.ts'
+import { lossesOptions, lossOptions, lossVersionsOptions } from '../features/losses/losses.ts'
 import { jobOptions, jobsOptions } from '../features/jobs/jobs.ts'
 import { keysOptions } from '../features/keys/keys.ts'
 import { modelOptions, modelsOptions, releasesOptions, versionsOptions } from '../features/models/models.ts'
 import { recordingsOptions } from '../features/recordings/recordings.ts'
 import { sessionOptions } from '../features/session/session.ts'
 import { paths } from '../lib/paths.ts'
-import { Boot, BrokenPage } from './boot.tsx'
+import { Boot, BrokenContent, BrokenPage } from './boot.tsx'
 import { Shell } from './shell.tsx'
 
 export function createRouter(client: QueryClient) {
@@ -40,13 +42,13 @@ export function createRouter(client: QueryClient) {
           Component: Shell,
           children: [
             {
-              ErrorBoundary: BrokenPage,
+              ErrorBoundary: BrokenContent,
               children: [
                 {
                   index: true,
                   ...page(
                     () => import('./routes/overview.tsx'),
-                    () => [client.query(adaptationsOptions), client.query(modelsOptions), client.query(jobsOptions)],
+                    () => [client.query(runningOptions), client.query(modelsOptions), client.query(jobsOptions)],
                   ),
                 } as RouteObject,
                 {
@@ -82,6 +84,34 @@ export function createRouter(client: QueryClient) {
                       client.query(versionsOptions(params.model!)),
                       client.query(releasesOptions(params.model!)),
                     ],
+                  ),
+                },
+                {
+                  path: 'losses',
+                  ...page(
+                    () => import('./routes/losses.tsx'),
+                    () => [client.query(lossesOptions)],
+                  ),
+                },
+                {
+                  path: 'losses/:loss',
+                  ...page(
+                    () => import('./routes/loss.tsx'),
+                    ({ params }) => [client.query(lossOptions(params.loss!)), client.query(lossVersionsOptions(params.loss!))],
+                  ),
+                },
+                {
+                  path: 'arms',
+                  ...page(
+                    () => import('./routes/arms.tsx'),
+                    () => [client.query(armsOptions)],
+                  ),
+                },
+                {
+                  path: 'arms/:arm',
+                  ...page(
+                    () => import('./routes/arm.tsx'),
+                    ({ params }) => [client.query(armOptions(params.arm!))],
                   ),
                 },
                 {

@@ -1,5 +1,5 @@
 import { useMutation, useQuery, useQueryClient } from '@tanstack/react-query'
-import { Suspense, useState, type ReactNode } from 'react'
+import { lazy, Suspense, useState, type ReactNode } from 'react'
 import { Navigate, NavLink, Outlet, ScrollRestoration, useLocation, useNavigate, useParams } from 'react-router-dom'
 import { IconButton } from '../components/button.tsx'
 import { Drawer } from '../components/dialog.tsx'
@@ -15,6 +15,8 @@ import { paths } from '../lib/paths.ts'
 import { recall, remember, setTheme, useTheme } from '../lib/theme.ts'
 import { span, useNow } from '../lib/times.ts'
 import { Boot } from './boot.tsx'
+
+const PasswordDialog = lazy(async () => ({ default: (await import('../features/session/password-dialog.tsx')).PasswordDialog }))
 
 interface Entry {
   to: string
@@ -36,7 +38,9 @@ const sections: { group: string; entries: Entry[] }[] = [
     group: 'Build',
     entries: [
       { to: paths.models(), label: 'Models', icon: 'models' },
+      { to: paths.losses(), label: 'Losses', icon: 'losses' },
       { to: paths.recordings(), label: 'Recordings', icon: 'recordings' },
+      { to: paths.arms(), label: 'Arms', icon: 'arms' },
       { to: paths.jobs(), label: 'Jobs', icon: 'jobs' },
     ],
   },
@@ -52,6 +56,7 @@ export function Shell() {
   const location = useLocation()
   const [narrowRail, setNarrowRail] = useState(() => recall(railKey) === 'narrow')
   const [drawer, setDrawer] = useState(false)
+  const [changing, setChanging] = useState(false)
   if (session.isPending) return <Boot />
   if (!session.data)
     return <Navigate to={paths.signIn(location.pathname === '/' ? undefined : location.pathname + location.search)} replace />
@@ -92,7 +97,7 @@ export function Shell() {
         </button>
       </nav>
       <div className="flex min-w-0 grow flex-col">
-        <TopLine session={session.data} onMenu={() => setDrawer(true)} />
+        <TopLine session={session.data} onMenu={() => setDrawer(true)} onPassword={() => setChanging(true)} />
         <main id="content" tabIndex={-1} className="grow outline-none">
           <Suspense fallback={null}>
             <Outlet />
@@ -104,6 +109,11 @@ export function Shell() {
           <Sections session={session.data} narrow={false} onChoose={() => setDrawer(false)} />
         </nav>
       </Drawer>
+      {changing && (
+        <Suspense fallback={null}>
+          <PasswordDialog email={session.data.person?.email ?? ''} onClose={() => setChanging(false)} />
+        </Suspense>
+      )}
       <ScrollRestoration />
     </div>
   )
@@ -158,7 +168,7 @@ function SectionLink({ entry, narrow, onChoose }: { entry: Entry; narrow: boolea
   )
 }
 
-function TopLine({ session, onMenu }: { session: Session; onMenu: () => void }) {
+function TopLine({ session, onMenu, onPassword }: { session: Session; onMenu: () => void; onPassword: () => void }) {
   return (
     <header className="sticky top-0 z-30 flex h-12 shrink-0 items-center gap-4 border-b border-line bg-paper px-4 md:px-8">
       <IconButton icon="menu" label="Sections" onClick={onMenu} className="-ml-2 md:hidden" />
@@ -172,7 +182,7 @@ function TopLine({ session, onMenu }: { session: Session; onMenu: () => void }) 
             </span>
           </Tooltip>
         )}
-        <PersonMenu session={session} />
+        <PersonMenu session={session} onPassword={onPassword} />
       </div>
     </header>
   )
@@ -286,7 +296,7 @@ function ArmInView() {
   )
 }
 
-function PersonMenu({ session }: { session: Session }) {
+function PersonMenu({ session, onPassword }: { session: Session; onPassword: () => void }) {
   const signOut = useMutation(signOutOptions(useQueryClient()))
   const theme = useTheme()
   const name = session.person?.name ?? 'Account'
@@ -323,6 +333,9 @@ function PersonMenu({ session }: { session: Session }) {
         ]}
       />
       <MenuLine />
+      <MenuItem icon="keys" onSelect={onPassword}>
+        Change password…
+      </MenuItem>
       <MenuItem icon="signOut" onSelect={() => signOut.mutate()}>
         Sign out
       </MenuItem>

@@ -84,11 +84,14 @@ export function Filter({
   value,
   onChange,
   options,
+  none = 'any',
 }: {
   label: string
   value: string | undefined
   onChange: (value: string | undefined) => void
   options: { value: string; label: string }[]
+  /** What stands where nothing is chosen. */
+  none?: string
 }) {
   return (
     <label className="inline-flex items-center gap-2 text-12 whitespace-nowrap text-soft">
@@ -98,7 +101,7 @@ export function Filter({
         value={value ?? ''}
         onChange={(event) => onChange(event.target.value || undefined)}
       >
-        <option value="">any</option>
+        <option value="">{none}</option>
         {options.map((option) => (
           <option key={option.value} value={option.value}>
             {option.label}

@@ -82,6 +82,36 @@ describe('anybody', () => {
     expect(await axeFindings(page)).toEqual([])
   })
 
+  it('changes the password and signs in with the new one', async () => {
+    const { page } = browser
+    const person = await team.createPerson('reviewer')
+    const next = 'quiet lantern over nine hills'
+    const enter = async (password: string) => {
+      await page.getByLabel('E-mail').fill(person.email)
+      await page.getByLabel('Password', { exact: true }).fill(password)
+      await page.getByRole('button', { name: 'Sign in' }).click()
+      await page.getByRole('heading', { name: 'Overview' }).waitFor()
+    }
+    await page.goto(server.origin)
+    await enter(person.password)
+
+    await page.getByRole('button', { name: 'A reviewer' }).click()
+    await page.getByRole('menuitem', { name: 'Change password…' }).click()
+    const dialog = page.getByRole('dialog')
+    await dialog.getByLabel('Password now').fill(person.password)
+    await dialog.getByLabel('New password').fill('too short')
+    await dialog.getByRole('button', { name: 'Change password' }).click()
+    await dialog.getByText('At least 15 characters').waitFor()
+    await dialog.getByLabel('New password').fill(next)
+    expect(await axeFindings(page)).toEqual([])
+    await dialog.getByRole('button', { name: 'Change password' }).click()
+    await page.getByText('Your password is changed.').waitFor()
+
+    await page.getByRole('button', { name: 'A reviewer' }).click()
+    await page.getByRole('menuitem', { name: 'Sign out' }).click()
+    await enter(next)
+  })
+
   it('reaches the content by the skip link and folds the rail', async () => {
     const { page } = browser
     await signIn('reviewer')

@@ -30,6 +30,8 @@ afterEach(async () => {
 const lists: { path: string; of: string; empty: string; failed: string }[] = [
   { path: '/adaptations', of: '/v1/adaptations', empty: 'No adaptation yet', failed: 'The adaptations could not be read' },
   { path: '/models', of: '/v1/models', empty: 'No model yet', failed: 'The models could not be read' },
+  { path: '/losses', of: '/v1/losses', empty: 'No learned loss yet', failed: 'The losses could not be read' },
+  { path: '/arms', of: '/v1/arms', empty: 'No arm yet', failed: 'The arms could not be read' },
   { path: '/recordings', of: '/v1/recordings', empty: 'No recording yet', failed: 'The recordings could not be read' },
   { path: '/jobs', of: '/v1/jobs', empty: 'No job yet', failed: 'The jobs could not be read' },
   { path: '/keys', of: '/v1/keys', empty: 'No key yet', failed: 'The keys could not be read' },

@@ -58,7 +58,7 @@ export function Component() {
           <TextLink to={paths.model(data.model, { version: data.version })}>
             {data.model} {data.version}
           </TextLink>
-          , loss {lossName(data.loss)}, {schemeNames[data.scheme]}, {data.update.kind}. Serves revision{' '}
+          , loss <LossLink loss={data.loss} />, {schemeNames[data.scheme]}, {data.update.kind}. Serves revision{' '}
           <span className="num text-ink">{data.revision}</span>;{' '}
           {data.last_batch === null ? (
             'no batch heard yet.'
@@ -83,6 +83,11 @@ export function Component() {
       <LogSection id={data.id} ended={data.state === 'ended'} />
     </Page>
   )
+}
+
+function LossLink({ loss }: { loss: Adaptation['loss'] }) {
+  if (typeof loss === 'string') return <>{loss}</>
+  return <TextLink to={paths.loss(loss.name, { version: loss.version })}>{lossName(loss)}</TextLink>
 }
 
 function Banner({ tone, children }: { tone: 'load' | 'stop'; children: ReactNode }) {

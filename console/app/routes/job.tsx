@@ -113,9 +113,9 @@ function Result({ job }: { job: Job }) {
     )
   if (result?.loss !== undefined)
     return (
-      <>
+      <TextLink to={paths.loss(result.loss, { version: result.version })}>
         version {result.version} of loss {result.loss}
-      </>
+      </TextLink>
     )
   return job.state === 'running' || job.state === 'queued' ? <>nothing yet</> : <>nothing</>
 }

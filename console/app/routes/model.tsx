@@ -1,7 +1,7 @@
 import { useQuery } from '@tanstack/react-query'
 import { useState } from 'react'
 import { useParams } from 'react-router-dom'
-import { Button } from '../../components/button.tsx'
+import { Button, TextLink } from '../../components/button.tsx'
 import { Page, Section } from '../../components/page.tsx'
 import { Stamp } from '../../components/stamp.tsx'
 import { Empty, Failed, SkeletonRows } from '../../components/states.tsx'
@@ -51,7 +51,11 @@ export function Component() {
       state={<ModelStamp model={data} />}
       facts={
         <>
-          Torque of arm <span className="num text-ink">{data.arm}</span>. {data.description}
+          Torque of arm{' '}
+          <TextLink to={paths.arm(data.arm)} className="num text-ink">
+            {data.arm}
+          </TextLink>
+          . {data.description}
         </>
       }
       actions={

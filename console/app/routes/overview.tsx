@@ -6,7 +6,7 @@ import { ProgressBar } from '../../components/progress-bar.tsx'
 import { Stamp } from '../../components/stamp.tsx'
 import { Empty, Failed, SkeletonRows } from '../../components/states.tsx'
 import { TimeAgo } from '../../components/time-ago.tsx'
-import { adaptationsOptions } from '../../features/adaptations/adaptations.ts'
+import { runningOptions } from '../../features/adaptations/adaptations.ts'
 import { attentionOf, healthOf, urgency } from '../../features/adaptations/health.ts'
 import { RobotList } from '../../features/adaptations/robot-list.tsx'
 import { hasEnded, jobKinds, jobsOptions, subjectOf } from '../../features/jobs/jobs.ts'
@@ -33,7 +33,7 @@ export function Component() {
 const most = 40
 
 function Robots() {
-  const adaptations = useQuery(adaptationsOptions)
+  const adaptations = useQuery(runningOptions)
   const now = useNow()
   if (adaptations.isPending)
     return (
@@ -47,8 +47,7 @@ function Robots() {
         <Failed what="The adaptations could not be read" error={adaptations.error} retry={() => void adaptations.refetch()} />
       </Section>
     )
-  const running = adaptations.data.items
-    .filter((adaptation) => adaptation.state !== 'ended')
+  const running = adaptations.data
     .map((adaptation) => ({ adaptation, health: healthOf(adaptation, now) }))
     .sort(
       (a, b) =>
@@ -56,7 +55,6 @@ function Robots() {
         a.adaptation.robot.localeCompare(b.adaptation.robot, undefined, { numeric: true }),
     )
   const asking = running.filter(({ health }) => health.state !== 'adapting')
-  const ended = adaptations.data.items.length - running.length
   if (running.length === 0)
     return (
       <Section title="Robots">
@@ -70,7 +68,6 @@ function Robots() {
         >
           A robot’s controller starts an adaptation of the live version with its key (scope adapt), then posts what the arm did,
           batch by batch. It shows up here at once.
-          {ended > 0 && ` ${counted(ended, 'adaptation has', 'adaptations have')} ended.`}
         </Empty>
       </Section>
     )

@@ -8,10 +8,25 @@ export type LogEntry = Schemas['LogEntry']
 export type BatchRows = Schemas['BatchRows']
 export type Verdict = Schemas['Verdict']
 
+/** Those that serve: what an overview is about, however many have ended. */
+export const runningOptions = queryOptions({
+  queryKey: ['adaptations', 'running'],
+  queryFn: async ({ signal }) => {
+    const [adapting, frozen] = await Promise.all(
+      (['adapting', 'frozen'] as const).map((state) =>
+        everything((cursor) => heftwise.adaptations.list({ cursor, state, limit: 200, signal })),
+      ),
+    )
+    return [...adapting!.items, ...frozen!.items]
+  },
+  refetchInterval: 3_000,
+})
+
 export const adaptationsOptions = queryOptions({
   queryKey: ['adaptations'],
   queryFn: ({ signal }) => everything((cursor) => heftwise.adaptations.list({ cursor, limit: 200, signal })),
-  refetchInterval: 3_000,
+  // A long list takes many requests, so it is asked for less often.
+  refetchInterval: ({ state }) => ((state.data?.items.length ?? 0) > 200 ? 30_000 : 3_000),
 })
 
 export const adaptationOptions = (id: string) =>

@@ -10,3 +10,17 @@ export const armsOptions = queryOptions({
   queryFn: ({ signal }) => everything((cursor) => heftwise.arms.list({ cursor, limit: 200, signal })),
   staleTime: 30_000,
 })
+
+export const armOptions = (name: string) =>
+  queryOptions({
+    queryKey: ['arms', name],
+    queryFn: ({ signal }) => heftwise.arms.get(name, { signal }),
+    staleTime: 30_000,
+  })
+
+export const fallbackNames: Record<Arm['fallback'], string> = {
+  gravity_only: 'gravity only',
+  hold_position: 'hold position',
+  controlled_stop: 'controlled stop',
+  zero_torque: 'zero torque',
+}

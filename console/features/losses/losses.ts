@@ -23,3 +23,26 @@ export const createLossOptions = (client: QueryClient) =>
     mutationFn: (body: Schemas['NewLoss']) => heftwise.losses.create(body),
     onSettled: () => client.invalidateQueries({ queryKey: ['losses'] }),
   })
+
+export type LossVersion = Schemas['LossVersion']
+
+export const lossOptions = (name: string) =>
+  queryOptions({
+    queryKey: ['losses', name],
+    queryFn: ({ signal }) => heftwise.losses.get(name, { signal }),
+    refetchInterval: 15_000,
+  })
+
+export const lossVersionsOptions = (name: string) =>
+  queryOptions({
+    queryKey: ['losses', name, 'versions'],
+    queryFn: ({ signal }) => everything((cursor) => heftwise.losses.versions(name, { cursor, limit: 200, signal })),
+    refetchInterval: 15_000,
+  })
+
+export const kindNames: Record<Schemas['LossKind'], string> = {
+  mse: 'mean squared error',
+  structured: 'structured',
+  state_dependent: 'state-dependent',
+  unstructured: 'unstructured',
+}

@@ -56,6 +56,13 @@ export const chooseTeamOptions = (client: QueryClient) =>
     },
   })
 
+/** The session gets a new id and token with it. */
+export const changePasswordOptions = (client: QueryClient) =>
+  mutationOptions({
+    mutationFn: (body: BodyOf<'changePassword'>) => heftwise.session.changePassword(body),
+    onSuccess: () => client.invalidateQueries({ queryKey: sessionKey }),
+  })
+
 /** The session within the shell, which shows nothing without one. */
 export function useSession(): Session {
   const { data } = useSuspenseQuery(sessionOptions)

@@ -86,11 +86,13 @@ function read(team: InventedTeam, pathname: string, search: URLSearchParams): ob
     case 'session':
       return team.session
     case 'arms':
-      return listed(team.arms, search)
+      return name === undefined ? listed(team.arms, search) : team.arms.find((arm) => arm.name === name)
     case 'recordings':
       return listed(team.recordings, search)
     case 'losses':
-      return listed(team.losses, search)
+      if (name === undefined) return listed(team.losses, search)
+      if (part === 'versions') return listed(team.lossVersions[name], search)
+      return team.losses.find((loss) => loss.name === name)
     case 'keys':
       return listed(team.keys, search)
     case 'models':
@@ -99,7 +101,11 @@ function read(team: InventedTeam, pathname: string, search: URLSearchParams): ob
       if (part === 'releases') return listed(team.releases[name], search)
       return team.models.find((model) => model.name === name)
     case 'adaptations': {
-      if (name === undefined) return listed(team.adaptations, search)
+      if (name === undefined)
+        return listed(
+          team.adaptations.filter((adaptation) => (search.get('state') ?? adaptation.state) === adaptation.state),
+          search,
+        )
       if (part === 'log' && last === 'rows') return inventRows(Number(number))
       if (part === 'log') {
         const entries = team.logs[name]

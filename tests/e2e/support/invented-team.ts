@@ -10,6 +10,7 @@ export interface InventedTeam {
   adaptations: Schemas['Adaptation'][]
   logs: Record<string, Schemas['LogEntry'][]>
   losses: Schemas['Loss'][]
+  lossVersions: Record<string, Schemas['LossVersion'][]>
   jobs: Schemas['Job'][]
   curves: Record<string, Schemas['JobCurve']>
   recordings: Schemas['Recording'][]
@@ -382,6 +383,26 @@ export function inventTeam(now: number, role: Schemas['Role'] = 'administrator')
     },
     adaptations,
     logs,
+    lossVersions: {
+      'alder-7-payload': [2, 1].map((number) => ({
+        loss: 'alder-7-payload',
+        version: number,
+        kind: 'state_dependent',
+        base_version: 3,
+        base_checksum: 'b7'.repeat(32),
+        scheme: 'all',
+        update: { kind: 'sgd', rate: 0.0123, rows_per_step: 4 },
+        checksum: 'd4'.repeat(32),
+        origin: { kind: 'meta_trained', job: id(5, 9) },
+        validation: [
+          { name: 'mse_sgd', error: 0.41, rate: 0.02 },
+          { name: 'mse_adam', error: 0.37, rate: 0.001 },
+          { name: 'learned', error: number === 2 ? 0.22 : 0.26, rate: 0.0123 },
+        ],
+        created_at: ago((3 - number) * day),
+        created_by: person,
+      })),
+    },
     losses: [
       {
         id: id(9, 1),
