@@ -98,7 +98,8 @@ export function createRecordingService({ database, clock, audit, log }: Dependen
   function chunkStore(id: string): (chunk: ArrayBuffer) => Promise<void> {
     let position = 0
     return async (chunk) => {
-      await database.pool.query('INSERT INTO recording_chunks (recording_id, position, content) VALUES (?, ?, ?)', [id, position++, Buffer.from(chunk)])
+      // Prepared, so that a megabyte goes as it is instead of being escaped on the event loop.
+      await database.pool.execute('INSERT INTO recording_chunks (recording_id, position, content) VALUES (?, ?, ?)', [id, position++, Buffer.from(chunk)])
       await database.pool.query('UPDATE recording_uploads SET touched_at = UTC_TIMESTAMP(3) WHERE recording_id = ?', [id])
     }
   }
