@@ -25,19 +25,6 @@ const connections = 8
 const folder = mkdtempSync(join(tmpdir(), 'heftwise-bench-'))
 const children: ChildProcess[] = []
 const mariaDb = await startPrivateMariaDb({ folder: join(folder, 'mariadb') })
-try {
-  const floor = await startFloor()
-  const product = await startProduct({ largestGroup: 256, lanes: 1 }, 64)
-  if (only === undefined || only === 'predict') await benchPredicts(floor, product)
-  if (only === undefined || only === 'batches') await benchBatches(product)
-  if (soak) await benchMemory(product)
-  console.log(`\nresident memory of the server: ${residentMiB(product.pid)} MiB`)
-} finally {
-  await Promise.all(children.map(end))
-  await mariaDb.stop()
-  rmSync(folder, { recursive: true, force: true })
-}
-
 interface Server {
   readonly pid: number
   readonly port: number
@@ -155,6 +142,7 @@ async function benchBatches(grouped: Product): Promise<void> {
     const rates: number[] = []
     const singleRates: number[] = []
     const cpu: number[] = []
+    const singleCpu: number[] = []
     const p50: number[] = []
     for (let round = 0; round < rounds; round++) {
       const theirs = await batches(single, adaptations, requests)
@@ -162,21 +150,23 @@ async function benchBatches(grouped: Product): Promise<void> {
       rates.push(ours.run.requests / ours.run.seconds)
       singleRates.push(theirs.run.requests / theirs.run.seconds)
       ratios.push(rates.at(-1)! / singleRates.at(-1)!)
-      cpu.push(ours.cpuUs)
+      cpu.push(ours.cpuUs + ours.databaseUs)
+      singleCpu.push(theirs.cpuUs + theirs.databaseUs)
       p50.push(ours.run.latencies[ours.run.requests >> 1])
     }
     lines.push([
       `${adaptations} adaptations, ${adaptations} connections`, String(requests * rounds), median(rates).toFixed(0), median(singleRates).toFixed(0), median(ratios).toFixed(2), `≥ ${target}`,
-      median(cpu).toFixed(0), median(p50).toFixed(2),
+      median(cpu).toFixed(0), median(singleCpu).toFixed(0), median(p50).toFixed(2),
     ])
   }
-  table(['case', 'requests', 'grouped /s', 'one each /s', 'ratio', 'target', 'CPU µs', 'p50 ms'], lines)
+  table(['case', 'requests', 'grouped /s', 'one each /s', 'ratio', 'target', 'CPU µs (server + MariaDB)', 'one each', 'p50 ms'], lines)
 }
 
-async function batches(product: Product, adaptations: number, requests: number): Promise<{ run: Run; cpuUs: number }> {
+async function batches(product: Product, adaptations: number, requests: number): Promise<{ run: Run; cpuUs: number; databaseUs: number }> {
+  const before = cpuSeconds(mariaDb.pid)
   const found = await measured(product, { connections: adaptations, requests, next: (connection) => batchRequest(product, connection) })
   requireAll(found.run, 200)
-  return found
+  return { ...found, databaseUs: ((cpuSeconds(mariaDb.pid) - before) * 1e6) / requests }
 }
 
 const stretches = Array.from({ length: 8 }, (_, seed) => batchText(simulatedMotion({ joints, rows: 64, payload: 1, seed: seed + 1 })))
@@ -236,4 +226,17 @@ function median(values: readonly number[]): number {
 function table(head: string[], lines: string[][]): void {
   const widths = head.map((cell, k) => Math.max(cell.length, ...lines.map((line) => line[k].length)))
   for (const line of [head, ...lines]) console.log(line.map((cell, k) => (k === 0 ? cell.padEnd(widths[k]) : cell.padStart(widths[k]))).join('  '))
+}
+
+try {
+  const floor = await startFloor()
+  const product = await startProduct({ largestGroup: 256, lanes: 1 }, 64)
+  if (only === undefined || only === 'predict') await benchPredicts(floor, product)
+  if (only === undefined || only === 'batches') await benchBatches(product)
+  if (soak) await benchMemory(product)
+  console.log(`\nresident memory of the server: ${residentMiB(product.pid)} MiB`)
+} finally {
+  await Promise.all(children.map(end))
+  await mariaDb.stop()
+  rmSync(folder, { recursive: true, force: true })
 }
