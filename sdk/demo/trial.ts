@@ -2,10 +2,10 @@ import { alder7 } from '../../shared/simulation/alder-7.ts'
 import { CYCLE, createCell, nominalTorque, predictedTorque } from '../../shared/simulation/cell.ts'
 import { createFeedForward } from '../../shared/simulation/feed-forward.ts'
 import type { FeedForwardCounters } from '../../shared/simulation/feed-forward.ts'
+import type { Shift } from '../../shared/simulation/pottery.ts'
 import { DemoError } from './connection.ts'
 import { REQUEST_EVERY } from './link.ts'
 import type { Link } from './link.ts'
-import type { Shift } from './scenario.ts'
 
 const JOINTS = alder7.limits.length
 

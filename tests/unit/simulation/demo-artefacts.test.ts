@@ -2,10 +2,11 @@ import { createHash } from 'node:crypto'
 import { readFileSync } from 'node:fs'
 import { gunzipSync } from 'node:zlib'
 import { describe, expect, it } from 'vitest'
-import { alder7Arm, demoRecordings, scenario } from '../../../sdk/demo/scenario.ts'
+import { alder7Arm, describeRecording } from '../../../server/demo/alder-7-arm.ts'
 import { lossFromWire, versionFromWire } from '../../../shared/contract/snapshots.ts'
 import { encodeLossVersion } from '../../../shared/dynamics/loss-version.ts'
 import { encodeVersion } from '../../../shared/dynamics/version.ts'
+import { demoRecordings, scenario } from '../../../shared/simulation/pottery.ts'
 import { toCsv } from '../../../shared/simulation/recording.ts'
 
 const folder = new URL('../../../server/demo/artefacts/', import.meta.url)
@@ -20,7 +21,7 @@ describe('the artefacts of the first run', () => {
 
     expect(demo.arm).toEqual(alder7Arm())
     expect(demo.model.name).toBe(scenario.model)
-    expect(remade.map(({ name, use, context }) => ({ file: `${name}.gz`, name, use, context }))).toEqual(demo.recordings)
+    expect(remade.map(describeRecording)).toEqual(demo.recordings)
     const grips = remade.find(({ name }) => name === 'grip-release-01.csv')!
     expect(sha256(Buffer.from(toCsv(grips.make())))).toBe(sha256(Buffer.from(read('grip-release-01.csv.gz'))))
   })

@@ -3,7 +3,7 @@ import { ConnectionError, ProblemError } from '../../../sdk/index.ts'
 import type { Heftwise, Schemas } from '../../../sdk/index.ts'
 import { createLink } from '../../../sdk/demo/link.ts'
 import type { Source } from '../../../sdk/demo/link.ts'
-import { planShift } from '../../../sdk/demo/scenario.ts'
+import { planShift } from '../../../shared/simulation/pottery.ts'
 import { formatResults } from '../../../sdk/demo/table.ts'
 import { runTrial } from '../../../sdk/demo/trial.ts'
 

@@ -1,40 +1,14 @@
-import type { Payload } from '../../shared/dynamics/rigid-body/index.ts'
-import { createRandom } from '../../shared/dynamics/random.ts'
-import type { Random } from '../../shared/dynamics/random.ts'
-import { alder7 } from '../../shared/simulation/alder-7.ts'
-import { multiSineMotion, pickMotion } from '../../shared/simulation/motion.ts'
-import { recordMotion, restAfter } from '../../shared/simulation/recording.ts'
-import type { Motion } from '../../shared/simulation/motion.ts'
-import type { SimulatedRecording } from '../../shared/simulation/recording.ts'
-import type { Schemas } from '../wire.ts'
+import { createRandom } from '../dynamics/random.ts'
+import type { Random } from '../dynamics/random.ts'
+import type { Payload } from '../dynamics/rigid-body/index.ts'
+import { alder7 } from './alder-7.ts'
+import { multiSineMotion, pickMotion } from './motion.ts'
+import type { Motion } from './motion.ts'
+import { recordMotion, restAfter } from './recording.ts'
+import type { SimulatedRecording } from './recording.ts'
 
 /** Names under which the first run seeds the demo, and `npm run demo` finds it. */
 export const scenario = { arm: alder7.name, model: 'alder-7-base', loss: 'alder-7-payload', robot: 'kiln-cart-loader-1' } as const
-
-/** Alder-7 as the API takes it. */
-export function alder7Arm(): Schemas['NewArm'] {
-  return {
-    name: scenario.arm,
-    description: 'Seven-joint arm of an invented pottery works; loads shaped clay onto kiln carts. Simulated.',
-    joints: alder7.nominal.joints.map(({ name }, j) => {
-      const { lower, upper, velocity, torque, torqueRate } = alder7.limits[j]
-      return {
-        name,
-        type: 'revolute',
-        position_lower: lower,
-        position_upper: upper,
-        velocity_limit: velocity,
-        torque_limit: torque,
-        torque_rate_limit: torqueRate,
-      }
-    }),
-    gravity: [...alder7.nominal.gravity],
-    torque: { side: 'link', positive_accelerates: true, controller_adds: [] },
-    fallback: alder7.fallback,
-    horizon: 1,
-    firmware: 'simulated',
-  }
-}
 
 /** A payload and when it is in the gripper, s. */
 export interface Load {
@@ -76,8 +50,12 @@ export function planShift(seconds: number, seed: number): Shift {
 /** A recording of the demo: what it is, and how to make it again. */
 export interface DemoRecording {
   readonly name: string
-  readonly use: Schemas['RecordingUse']
-  readonly context: Schemas['RecordingContext']
+  readonly use: 'fit' | 'meta_train' | 'validate' | 'evaluate'
+  readonly tool: string
+  /** What kind of motion, in words. */
+  readonly motion: string
+  /** Carried all the time, or from grip to release; undefined: the gripper is empty. */
+  readonly payload: Payload | undefined
   make(): SimulatedRecording
 }
 
@@ -94,7 +72,7 @@ export function demoRecordings(): DemoRecording[] {
   const add = (
     kind: string,
     count: number,
-    use: Schemas['RecordingUse'],
+    use: DemoRecording['use'],
     seconds: number,
     isLoaded: boolean,
     isSwitched = false,
@@ -106,12 +84,9 @@ export function demoRecordings(): DemoRecording[] {
       list.push({
         name: `${kind}-${String(k).padStart(2, '0')}.csv`,
         use,
-        context: {
-          robot: scenario.robot,
-          tool: 'flat gripper',
-          motion: isSwitched ? 'grip and release' : kind === 'slow' ? 'slow sines' : 'pick',
-          ...(payload && { payload: { mass: payload.mass, center_of_mass: [...payload.centerOfMass] } }),
-        },
+        tool: 'flat gripper',
+        motion: isSwitched ? 'grip and release' : kind === 'slow' ? 'slow sines' : 'pick',
+        payload,
         make: () =>
           recordMotion(alder7, make(alder7, createRandom(seed + 1), seconds), {
             seed: seed + 2,

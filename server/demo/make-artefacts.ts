@@ -4,8 +4,7 @@ import { createHash } from 'node:crypto'
 import { mkdirSync, readdirSync, rmSync, writeFileSync } from 'node:fs'
 import { join } from 'node:path'
 import { gzipSync } from 'node:zlib'
-import { defaultFitOptions, fitNetwork } from '../../server/jobs/training/fit-network.ts'
-import type { FitResult } from '../../server/jobs/training/fit-network.ts'
+import type { components } from '../../shared/contract/openapi.generated.ts'
 import { lossToWire, versionToWire } from '../../shared/contract/snapshots.ts'
 import { createKernelMetaGradient } from '../../shared/dynamics/kernels/meta-gradient.ts'
 import { createKernels } from '../../shared/dynamics/kernels/kernels.ts'
@@ -16,12 +15,17 @@ import type { MetaTrainingResult } from '../../shared/dynamics/meta-training.ts'
 import { normaliseMotion } from '../../shared/dynamics/motion.ts'
 import type { Motion } from '../../shared/dynamics/motion.ts'
 import { encodeVersion } from '../../shared/dynamics/version.ts'
+import { demoRecordings, scenario } from '../../shared/simulation/pottery.ts'
+import type { DemoRecording } from '../../shared/simulation/pottery.ts'
 import { toCsv } from '../../shared/simulation/recording.ts'
 import type { SimulatedRecording } from '../../shared/simulation/recording.ts'
-import type { Schemas } from '../wire.ts'
-import { alder7Arm, demoRecordings, scenario } from './scenario.ts'
+import { defaultFitOptions, fitNetwork } from '../jobs/training/fit-network.ts'
+import type { FitResult } from '../jobs/training/fit-network.ts'
+import { alder7Arm, describeRecording } from './alder-7-arm.ts'
 
-const folder = join(import.meta.dirname, '../../server/demo/artefacts')
+type Schemas = components['schemas']
+
+const folder = join(import.meta.dirname, 'artefacts')
 
 // All recordings teach; so many of each kind are kept in the repository, for the console's lists and for trying jobs.
 const kept: Record<string, number> = {
@@ -37,13 +41,13 @@ const kept: Record<string, number> = {
 
 const recordings = demoRecordings().map((recording) => {
   const made = recording.make()
-  return { ...recording, made, motion: toMotion(recording.name, made) }
+  return { ...recording, made, rows: toMotion(recording.name, made) }
 })
-const withUse = (use: Schemas['RecordingUse']): Motion[] =>
-  recordings.filter((recording) => recording.use === use).map(({ motion }) => motion)
+const withUse = (use: DemoRecording['use']): Motion[] =>
+  recordings.filter((recording) => recording.use === use).map(({ rows }) => rows)
 
 say(`${recordings.length} recordings simulated`)
-const kernels = await createKernels()
+const kernels = createKernels()
 const base = await fitBase()
 const version = versionSnapshot(base)
 const learned = learnLoss(base)
@@ -69,7 +73,7 @@ async function fitBase(): Promise<FitResult> {
 }
 
 function learnLoss({ version: { description, parameters } }: FitResult): MetaTrainingResult {
-  const normalised = (use: Schemas['RecordingUse']) =>
+  const normalised = (use: DemoRecording['use']) =>
     withUse(use).map((motion) => normaliseMotion(motion, description.normalisation))
   const steps = metaTrain(
     { network: description.network, parameters: Float64Array.from(parameters) },
@@ -160,7 +164,7 @@ function write(): void {
       description: 'For shaped clay of 0.8 to 3 kg in the gripper. Meta-trained on simulated recordings.',
     },
     loss_version: 'alder-7-payload.json.gz',
-    recordings: inRepository.map(({ name, use, context }) => ({ file: `${name}.gz`, name, use, context })),
+    recordings: inRepository.map(describeRecording),
     robot: scenario.robot,
   }
   let bytes = 0
