@@ -20,6 +20,9 @@ import type { Activation } from '../../shared/dynamics/network.ts'
 import { meanNextBatchError, measureNextBatch, predictMotion, type AdaptationRule, type Base } from '../../shared/dynamics/prequential.ts'
 import { readMotionsByUse } from './motions.ts'
 
+/** Seconds between two looks at how far the prediction has come from the base's, and at what one batch changed. */
+const batchSeconds = 0.64
+
 const { values, positionals } = parseArgs({
   allowPositionals: true,
   options: {
@@ -80,9 +83,6 @@ function compareOne(base: Base, normalise: (use: string) => NormalisedMotion[], 
     if (values.verbose) printSteps(base, validation, tuned)
   }
 }
-
-/** Seconds between two looks at how far the prediction has come from the base's, and at what one batch changed. */
-const batchSeconds = 0.64
 
 /**
  * What guards bound, along the motions: norms of single steps, and changes of predicted torque on spread states, by one
