@@ -80,7 +80,8 @@ export interface MetaTrainingResult {
  * Learns a loss by bi-level optimisation: streams of motions are adapted to by gradient steps under the loss, and the
  * loss moves so that what follows each step is predicted better. The inner rate is a third of the best rate of plain
  * squared error, so that the weights have room to grow; afterwards the rate is tuned on the validation motions. The state
- * of φ that did best there is kept.
+ * of φ that did best there is kept. All of it counts the error at a somewhat higher rate too: the best rate alone lies at the
+ * edge of stability, and the next motion may lie beyond.
  *
  * A generator: nothing happens between two `next` calls, so a worker can report progress, and cancel by not calling again.
  *
@@ -134,7 +135,7 @@ export function* metaTrain(
   return { learned, none, rivals }
 }
 
-/** Rates the search starts from; it walks as far from them as it has to. */
+/** Middle of the rates searched; they reach a searchSpan to both sides. */
 const startRates = { sgd: 0.02, adam: 1e-3 }
 
 /** Share of the best rate of plain squared error at which a loss is learned. */
@@ -202,7 +203,6 @@ function* learn(
     return faster
   }
 
-
   for (let update = 1; update <= options.updates; update++) {
     mean.fill(0)
     let outer = 0
@@ -225,6 +225,8 @@ function* learn(
       for (let k = 0; k < mean.length; k++) mean[k] /= finite
       const rate = options.outerRate * 0.5 * (1 + Math.cos((Math.PI * (update - 1)) / options.updates))
       adam.step(learned, mean, state, rate)
+    } else {
+      learned[rateAt] -= Math.LN2
     }
     let validationError: number | undefined
     if (update % checkEvery === 0 || update === options.updates) {
