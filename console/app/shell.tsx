@@ -105,6 +105,10 @@ export function Shell() {
         </main>
       </div>
       <Drawer open={drawer} onClose={() => setDrawer(false)} title="Heftwise">
+        <div className="border-b border-line px-4 pt-1 pb-4">
+          <p className="pb-1 text-12 text-soft">Arm in view</p>
+          <ArmInView stacked />
+        </div>
         <nav aria-label="Sections">
           <Sections session={session.data} narrow={false} onChoose={() => setDrawer(false)} />
         </nav>
@@ -224,7 +228,7 @@ function TeamName({ session }: { session: Session }) {
 }
 
 /** The arm that the page is about, else the one chosen last, and which version answers for it. */
-function ArmInView() {
+function ArmInView({ stacked = false }: { stacked?: boolean }) {
   const params = useParams()
   const now = useNow()
   const arms = useQuery(armsOptions)
@@ -245,8 +249,8 @@ function ArmInView() {
   const model = ofPage ?? ofArm.find((each) => each.live_version !== null) ?? ofArm[0]
   const name = <span className="num">{arm}</span>
   return (
-    <div className="flex min-w-0 items-center gap-3 max-sm:hidden">
-      <span aria-hidden="true" className="h-4 w-px bg-edge" />
+    <div className={stacked ? 'flex flex-col items-start gap-2' : 'flex min-w-0 items-center gap-3 max-md:hidden'}>
+      {!stacked && <span aria-hidden="true" className="h-4 w-px bg-edge" />}
       {names.length > 1 && ofPage === undefined ? (
         <Menu
           align="start"
@@ -275,7 +279,7 @@ function ArmInView() {
         name
       )}
       {model && (
-        <NavLink to={paths.model(model.name)} className="flex min-w-0 items-center gap-2 hover:underline max-lg:hidden">
+        <NavLink to={paths.model(model.name)} className="flex min-w-0 flex-wrap items-center gap-x-2 hover:underline">
           {model.live_version === null ? (
             <span className="text-12 text-soft">nothing live</span>
           ) : (
@@ -286,7 +290,9 @@ function ArmInView() {
                 </span>
               </Stamp>
               {model.live_since !== null && (
-                <span className="text-12 whitespace-nowrap text-soft">live for {span(now - Date.parse(model.live_since))}</span>
+                <span className={`text-12 whitespace-nowrap text-soft ${stacked ? '' : 'max-lg:hidden'}`}>
+                  live for {span(now - Date.parse(model.live_since))}
+                </span>
               )}
             </>
           )}

@@ -22,31 +22,31 @@ export function JointTable({ joints, rows, row, batch, scale, history }: JointTa
   const head = 'py-1.5 pr-4 text-12 font-normal text-soft text-left last:pr-0'
   const cell = 'py-2 pr-4 align-middle last:pr-0'
   return (
-    <table aria-label="Joints" className="w-full border-collapse">
+    <table aria-label="Joints" className="w-full border-collapse md:table-fixed">
       <thead>
         <tr className="border-b border-edge">
-          <th scope="col" className={head}>
+          <th scope="col" className={`${head} md:w-36`}>
             Joint
           </th>
-          <th scope="col" className={`${head} w-1/3 max-sm:w-1/2`}>
+          <th scope="col" className={`${head} max-md:w-1/3 max-sm:w-1/2`}>
             Load
           </th>
-          <th scope="col" className={`${head} text-right max-md:hidden`}>
+          <th scope="col" className={`${head} w-28 text-right max-md:hidden`}>
             Predicted
           </th>
-          <th scope="col" className={`${head} text-right max-md:hidden`}>
+          <th scope="col" className={`${head} w-28 text-right max-md:hidden`}>
             Measured
           </th>
-          <th scope="col" className={`${head} text-right`}>
+          <th scope="col" className={`${head} text-right md:w-40`}>
             RMSE before, after step
           </th>
-          <th scope="col" className={`${head} max-lg:hidden`}>
+          <th scope="col" className={`${head} w-28 max-lg:hidden`}>
             Recent
           </th>
-          <th scope="col" className={`${head} text-right max-sm:hidden`}>
+          <th scope="col" className={`${head} text-right max-sm:hidden md:w-20`}>
             Weight
           </th>
-          <th scope="col" className={`${head} max-xl:hidden`}>
+          <th scope="col" className={`${head} w-24 max-xl:hidden`}>
             Recent
           </th>
         </tr>
