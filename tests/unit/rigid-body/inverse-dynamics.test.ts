@@ -106,25 +106,38 @@ describe('inverse dynamics', () => {
     expect(() => inverseDynamics(chain, right, new Float64Array(5), right, right)).toThrow(/qd has 5 values, expected 6/)
   })
 
-  it('allocates nothing per evaluation', () => {
-    const chain = createChain(exampleChain())
-    const random = createRandom(6)
-    const [q, qd, qdd, tau] = [vector(random, n, 2), vector(random, n, 2), vector(random, n, 3), new Float64Array(n)]
-    const run = (times: number): void => {
-      for (let k = 0; k < times; k++) inverseDynamics(chain, q, qd, qdd, tau)
-    }
-    run(20_000)
-    // Few enough that what they would allocate is not collected meanwhile; the median, because others allocate too.
-    const evaluations = 20_000
-    const grown = Array.from({ length: 9 }, () => {
-      const before = process.memoryUsage().heapUsed
-      run(evaluations)
-      return process.memoryUsage().heapUsed - before
-    }).sort((a, b) => a - b)
+  const chain = createChain(exampleChain())
+  const random = createRandom(6)
+  const [q, qd, qdd, tau] = [vector(random, n, 2), vector(random, n, 2), vector(random, n, 3), new Float64Array(n)]
+  const [columns, all, matrix] = [new Float64Array(4 * n), new Float64Array(10 * n * n), new Float64Array(n * n)]
+  const terms = { inertia: new Float64Array(n), coriolis: new Float64Array(n), gravity: new Float64Array(n) }
+  const evaluations: [string, () => void][] = [
+    ['inverse dynamics', () => inverseDynamics(chain, q, qd, qdd, tau)],
+    ['inverse dynamics by terms', () => inverseDynamicsTerms(chain, q, qd, qdd, terms)],
+    ['gravity torque', () => gravityTorque(chain, q, tau)],
+    ['mass matrix', () => massMatrix(chain, q, matrix)],
+    ['forward dynamics', () => forwardDynamics(chain, q, qd, qdd, tau)],
+    ['the payload regressor', () => payloadRegressor(chain, q, qd, qdd, columns)],
+    ['the regressor of all parameters', () => inertialRegressor(chain, q, qd, qdd, all)],
+  ]
+  for (const [what, evaluate] of evaluations) {
+    it(`allocates nothing per evaluation: ${what}`, () => {
+      // Few enough that what they would allocate is not collected meanwhile; the median, because others allocate too.
+      const count = 5000
+      const run = (times: number): void => {
+        for (let k = 0; k < times; k++) evaluate()
+      }
+      run(4 * count)
+      const grown = Array.from({ length: 9 }, () => {
+        const before = process.memoryUsage().heapUsed
+        run(count)
+        return process.memoryUsage().heapUsed - before
+      }).sort((a, b) => a - b)
 
-    // A single boxed number is 12 bytes or more.
-    expect(grown[4] / evaluations).toBeLessThan(8)
-  })
+      // A single boxed number is 12 bytes or more.
+      expect(grown[4] / count).toBeLessThan(8)
+    })
+  }
 })
 
 describe('a payload', () => {
