@@ -14,6 +14,14 @@ export class ShapedArray {
   }
 }
 
+/** A matrix that came as an array of rows of equal length. */
+export class RowMatrix extends ShapedArray {
+  rows(): number[][] {
+    const [rows, columns] = this.dimensions
+    return Array.from({ length: rows }, (_, row) => Array.from(this.values as Float64Array).slice(row * columns, (row + 1) * columns))
+  }
+}
+
 /** The body is no CBOR, or uses what this reader does not take. `message` says what and at which byte. */
 export class CborError extends Error {}
 

@@ -1,6 +1,7 @@
 import type { Request } from 'express'
 import { Refusal } from '../../../shared/contract/problems.ts'
 import { CborError, readCbor } from './cbor-reader.ts'
+import { readPlainJson } from './json-reader.ts'
 
 /** What hot bodies and answers are written in. */
 export type Format = 'json' | 'cbor'
@@ -43,7 +44,7 @@ const utf8 = new TextDecoder('utf-8', { fatal: true })
 /** @throws {Refusal} malformed-body */
 export function parseBody(format: Format, bytes: Buffer): unknown {
   if (bytes.length === 0) throw new Refusal('malformed-body', 'The body is empty. Send an object.')
-  return format === 'json' ? parseJson(bytes) : parseCbor(bytes)
+  return format === 'json' ? readPlainJson(bytes) ?? parseJson(bytes) : parseCbor(bytes)
 }
 
 /** Without a look at nesting: the engine's parser does not recurse, and a nested value is refused as no number. */

@@ -1,4 +1,4 @@
-import { isList, ShapedArray } from './cbor-reader.ts'
+import { isList, RowMatrix, ShapedArray } from './cbor-reader.ts'
 import { shown } from './faults.ts'
 import type { Faults } from './faults.ts'
 import type { JointOrder } from './joint-order.ts'
@@ -54,7 +54,8 @@ function shapedInto({ dimensions, values }: ShapedArray, rows: number, n: number
   return true
 }
 
-function explainMatrix(name: string, value: unknown, rows: number, joints: readonly string[], faults: Faults): void {
+function explainMatrix(name: string, given: unknown, rows: number, joints: readonly string[], faults: Faults): void {
+  const value = given instanceof RowMatrix ? given.rows() : given
   const pointer = `/${name}`
   const n = joints.length
   const perJoint = `Send one value per joint, in the order of joint_names.`

@@ -43,9 +43,6 @@ export interface GroupCommit {
   settled(): Promise<void>
 }
 
-/** Longest wait for senders that are expected. */
-const longestGatherMs = 5
-
 const insert = `INSERT INTO adaptation_log (${logColumns.join(', ')}) VALUES (${logColumns.map(() => '?').join(', ')})`
 
 /**
@@ -61,47 +58,25 @@ export function createGroupCommit(options: GroupCommitOptions): GroupCommit {
   let scheduled = false
   let onSettled: (() => void)[] = []
 
-  /** How many entries were under way at once, lately: senders that were answered together come again together. */
-  let expected = 1
-  let commitMs = 1
-  let timer: NodeJS.Timeout | undefined
-
-  /**
-   * Starts a transaction when everyone is there who can be expected, or has been waited for: starting with the first one to
-   * arrive would leave all others to wait for the next transaction, twice as many as are needed.
-   */
   function schedule(): void {
-    if (running >= lanes || waiting.length === 0) return
-    if (waiting.length >= Math.min(expected, largestGroup)) {
-      clearTimeout(timer)
-      timer = undefined
-      if (scheduled) return
-      scheduled = true
-      // Everything that this turn of the event loop brings goes into the same transaction.
-      setImmediate(start)
-    } else if (!scheduled) {
-      timer ??= setTimeout(start, Math.min(longestGatherMs, commitMs / 2))
-    }
-  }
-
-  function start(): void {
-    clearTimeout(timer)
-    timer = undefined
-    scheduled = false
-    while (running < lanes && waiting.length > 0) {
-      const group = take()
-      if (group.length === 0) break
-      running++
-      const startedAt = performance.now()
-      void commit(group).finally(() => {
-        running--
-        commitMs += (performance.now() - startedAt - commitMs) / 8
-        expected = group.length + waiting.length
-        for (const { row } of group) busy.delete(row.adaptationId)
-        schedule()
-        if (running === 0 && waiting.length === 0) for (const done of onSettled.splice(0)) done()
-      })
-    }
+    if (scheduled || running >= lanes || waiting.length === 0) return
+    scheduled = true
+    // Everything that this turn of the event loop brings goes into the same transaction. Waiting any longer was tried: then
+    // nothing is prepared while a transaction runs, and on a busy machine that costs more than the transactions it saves.
+    setImmediate(() => {
+      scheduled = false
+      while (running < lanes && waiting.length > 0) {
+        const group = take()
+        if (group.length === 0) break
+        running++
+        void commit(group).finally(() => {
+          running--
+          for (const { row } of group) busy.delete(row.adaptationId)
+          schedule()
+          if (running === 0 && waiting.length === 0) for (const done of onSettled.splice(0)) done()
+        })
+      }
+    })
   }
 
   function take(): CommitItem[] {
