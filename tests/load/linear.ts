@@ -3,11 +3,11 @@
  * chosen on the recordings to validate, figures of those to evaluate.
  *
  *   nice -n 15 npx tsx tests/load/linear.ts FOLDER [--bases identified,network] [--schemes payload,context]
- *     [--updates recursive,mse,structured,state_dependent,least_squares] [--seeds 1,2,3] [--rounds 180] [--version FILE]
+ *     [--updates recursive,mse,structured,state_dependent,least_squares] [--seeds 1,2,3] [--rounds 180] [--version FILE] [--recorded-only]
  *
  * FOLDER holds recordings.csv (columns file, payload_kg and use), the files it names and one URDF. Motions whose name begins
  * with switching or grip-release have their payload gripped at 10 s and released at 20 s. --version: a network base to use
- * instead of fitting one.
+ * instead of fitting one. --recorded-only: no simulated payloads, as for an arm without a URDF.
  */
 import { readdirSync, readFileSync } from 'node:fs'
 import { join } from 'node:path'
@@ -20,7 +20,7 @@ import { createPayloadBasis, type Basis } from '../../shared/dynamics/linear/bas
 import { fitContextBasis } from '../../shared/dynamics/linear/context-fit.ts'
 import { learnLinear, type LinearCandidate } from '../../shared/dynamics/linear/learn.ts'
 import { fitConstant } from '../../shared/dynamics/linear/least-squares.ts'
-import { prepareMotion, simulatedMotions, type BaseEvaluator, type LinearMotion } from '../../shared/dynamics/linear/linear-motion.ts'
+import { mixedMotions, prepareMotion, simulatedMotions, type BaseEvaluator, type LinearMotion } from '../../shared/dynamics/linear/linear-motion.ts'
 import { meanErrors, measureLinear } from '../../shared/dynamics/linear/measure.ts'
 import { defaultLinearMetaTrainingOptions } from '../../shared/dynamics/linear/meta-training.ts'
 import { createKernels } from '../../shared/dynamics/kernels/kernels.ts'
@@ -40,6 +40,7 @@ const { values, positionals } = parseArgs({
     seeds: { type: 'string', default: '1' },
     rounds: { type: 'string', default: String(defaultLinearMetaTrainingOptions.updates) },
     version: { type: 'string' },
+    'recorded-only': { type: 'boolean', default: false },
     verbose: { type: 'boolean', default: false },
   },
 })
@@ -104,7 +105,8 @@ function compareOn(name: string, ground: Ground, seed: number): void {
     if (scheme === 'context') console.log(`context basis in ${seconds(started)} s`)
     const prepare = (motion: Motion) => prepareMotion(motion, ground.evaluator(motion), basis, ground.normalisation, contexts.get(motion.name)!)
     const own = [...byUse.meta_train, ...byUse.fit.filter(({ name: file }) => file.startsWith('unloaded'))].map(prepare)
-    const simulated = scheme === 'payload' ? simulatedMotions(own.filter(({ unloaded }) => unloaded), createRandom(seed)) : []
+    const simulated = values['recorded-only'] ? [] : simulatedMotions(own.filter(({ unloaded }) => unloaded), createRandom(seed),
+      scheme === 'payload' ? null : payloadTable(ground))
     const training = [...own, ...simulated]
     const validation = byUse.validate.map(prepare)
     const evaluation = byUse.evaluate.map(prepare)
@@ -131,11 +133,23 @@ function payloadBasis({ rigid, normalisation }: Ground): Basis {
   return createPayloadBasis({ chain: rigid?.chain ?? chain, outputStd: normalisation.outputStd, friction: rigid?.friction ?? null })
 }
 
+/** The payload basis on the rows of a motion, whose states are found by its name. */
+function payloadTable(ground: Ground): (motion: LinearMotion) => Float64Array {
+  const basis = createPayloadBasis({ chain, outputStd: ground.normalisation.outputStd, friction: null })
+  return ({ name, rows }) => {
+    const table = new Float64Array(rows * joints * basis.size)
+    basis.evaluate(Object.values(byUse).flat().find(motion => motion.name === name)!.states, rows, table)
+    return table
+  }
+}
+
 function contextBasis(ground: Ground, seed: number): Basis {
   const nothing: Basis = { size: 0, joints, evaluate: () => {} }
   const motions = [...byUse.meta_train, ...byUse.fit.filter(({ name }) => name.startsWith('unloaded'))]
     .map(motion => prepareMotion(motion, ground.evaluator(motion), nothing, ground.normalisation, contexts.get(motion.name)!))
-  return finish(fitContextBasis(createKernels(), motions, ground.normalisation, { seed }), progress => {
+  const mixed = values['recorded-only'] ? []
+    : mixedMotions([...byUse.meta_train, ...byUse.fit], payloadBasis(ground), ground.normalisation, 120, 1500, createRandom(seed))
+  return finish(fitContextBasis(createKernels(), [...motions, ...mixed], ground.normalisation, { seed }), progress => {
     if (values.verbose && progress.step % 500 === 0) console.log(`  ${progress.step} error ${progress.error.toFixed(4)}`)
   }).basis
 }
