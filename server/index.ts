@@ -1,3 +1,4 @@
+import { readFileSync } from 'node:fs'
 import { createServer } from 'node:http'
 import type { Server } from 'node:http'
 import type { AddressInfo } from 'node:net'
@@ -40,6 +41,8 @@ export async function run(): Promise<void> {
   }
   process.on('SIGINT', () => stopAndExit(0))
   process.on('SIGTERM', () => stopAndExit(0))
+  // A terminal that closes; under nohup, which has it ignored, the server goes on.
+  if (!ignoresHangUp()) process.on('SIGHUP', () => stopAndExit(0))
   process.on('uncaughtException', (error) => {
     log.fatal({ err: error }, 'a mistake of ours ended the process')
     stopAndExit(1)
@@ -94,6 +97,12 @@ export async function run(): Promise<void> {
     undo.push(() => mariaDb.stop())
     return mariaDb.address
   }
+}
+
+/** proc(5): SigIgn is a mask of the signals that were ignored when the process was started; SIGHUP is the lowest bit. */
+function ignoresHangUp(): boolean {
+  const mask = /^SigIgn:\s*([0-9a-f]+)$/m.exec(readFileSync('/proc/self/status', 'utf8'))?.[1] ?? '0'
+  return (Number.parseInt(mask.slice(-1), 16) & 1) === 1
 }
 
 function notReady(_req: unknown, res: import('node:http').ServerResponse): void {
