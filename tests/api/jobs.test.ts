@@ -42,7 +42,7 @@ async function teamWithRecordings() {
 }
 
 async function ended(key: ApiClient, id: string) {
-  await expect.poll(async () => (await key.get(`/v1/jobs/${id}`)).body.state, { timeout: 60_000, interval: 100 }).toMatch(/done|failed|cancelled/)
+  await expect.poll(async () => (await key.get(`/v1/jobs/${id}`)).body.state, { timeout: 110_000, interval: 100 }).toMatch(/done|failed|cancelled/)
   return (await key.get(`/v1/jobs/${id}`)).body
 }
 
@@ -173,6 +173,17 @@ describe('cancelling', () => {
     expect(cancelled.body.state).toBe('cancelled')
     expect((await ended(key, third.body.id)).state).toBe('done')
   })
+})
+
+test('a job whose recording was deleted while it waited fails, and says which', async () => {
+  const { key, fit } = await teamWithRecordings()
+  await server.services.jobs.stop()
+  const { body } = await key.post('/v1/jobs', { kind: 'fit', model: 'tinker-base', ...tinyFit })
+  await key.delete(`/v1/recordings/${fit[1].id}?reason=Wrong+payload.`)
+
+  await server.services.jobs.start()
+
+  expect(await ended(key, body.id)).toMatchObject({ state: 'failed', problem: { type: 'tag:heftwise.invalid,2026:recordings-unsuitable', detail: expect.stringContaining(fit[1].id) } })
 })
 
 test('a job whose process has gone is failed, to be run again', async () => {
