@@ -49,7 +49,9 @@ export function createApp(d: Dependencies, services: Services = createServices(d
   app.use(requestContext())
 
   // Before everything that costs time on every request.
-  app.use(hotRoutes(d, services, { authenticate, protectFromForgery }))
+  const hot = hotRoutes(d, services, { authenticate, protectFromForgery })
+  app.use(hot.direct)
+  app.use(hot.router)
 
   app.use(securityHeaders(settings.origin?.startsWith('https://') ?? false))
   app.use(systemRoutes(d, contract))

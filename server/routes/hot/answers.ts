@@ -26,7 +26,7 @@ export function answerPrediction(
 ): void {
   send(res, format, format === 'json'
     ? predictionJson(of, joints, rows, prediction, state)
-    : writeCbor(predictionObject(of, joints, rows, prediction, state)).latin1Slice())
+    : writeCbor(predictionObject(of, joints, rows, prediction, state)).toString('latin1'))
 }
 
 function predictionJson(of: Predicted, joints: JointOrder, rows: number, prediction: Prediction, state?: ServedState): string {
@@ -93,7 +93,7 @@ function inOrder<T>(values: ArrayLike<T>, { order }: JointOrder): T[] {
 /** Answers a batch, joints in the order in which the request named them. */
 export function answerBatch(res: Response, format: Format, result: BatchResult, arm: AdaptedArm, joints: JointOrder): void {
   const text = batchJson(result, arm, joints)
-  send(res, format, format === 'json' ? text : writeCbor(JSON.parse(Buffer.from(text, 'latin1').toString())).latin1Slice())
+  send(res, format, format === 'json' ? text : writeCbor(JSON.parse(Buffer.from(text, 'latin1').toString())).toString('latin1'))
 }
 
 function batchJson(result: BatchResult, { jointNames }: AdaptedArm, joints: JointOrder): string {

@@ -1,5 +1,7 @@
 import { ShapedArray } from './cbor-reader.ts'
 
+const littleEndian = new Uint8Array(Uint16Array.of(1).buffer)[0] === 1
+
 /**
  * Writes a value as CBOR (RFC 8949). Arrays, objects, texts, booleans and null as their CBOR namesakes, whole numbers as
  * integers, others as binary64. A `Float32Array` becomes a typed array of binary32, little endian (RFC 8746, tag 85), a
@@ -52,7 +54,8 @@ class Writer {
     this.#head(6, 85)
     this.#head(2, 4 * values.length)
     this.#reserve(4 * values.length)
-    for (let k = 0; k < values.length; k++) this.#at = this.#bytes.writeFloatLE(values[k], this.#at)
+    if (littleEndian) this.#at += Buffer.from(values.buffer, values.byteOffset, values.byteLength).copy(this.#bytes, this.#at)
+    else for (let k = 0; k < values.length; k++) this.#at = this.#bytes.writeFloatLE(values[k], this.#at)
   }
 
   #number(value: number): void {

@@ -17,6 +17,7 @@ import { HotLimit } from './rate-limit.ts'
 import { bodyObject, readAdaptedPredict, readBatch, readPredict, readVersionNumber, StatesRoom } from './requests.ts'
 import type { Body } from './requests.ts'
 
+const directPath = /^\/v1\/(?:models\/([a-z0-9-]{1,64})\/predict|adaptations\/([0-9a-f-]{36})\/(predict|batches))$/
 const soundName = /^[a-z0-9]([a-z0-9-]{0,62}[a-z0-9])?$/
 const soundId = /^[0-9a-f]{8}(-[0-9a-f]{4}){3}-[0-9a-f]{12}$/i
 
@@ -35,7 +36,7 @@ export function hotRoutes(
   { keys, changeFeed, settings }: Dependencies,
   { liveVersions, predictions, adaptations }: Services,
   { authenticate, protectFromForgery }: { authenticate: RequestHandler; protectFromForgery: RequestHandler },
-): Router {
+): { readonly direct: RequestHandler; readonly router: Router } {
   const router = Router()
   const room = new StatesRoom()
   const adaptedVersions = new WeakMap<object, Predicted>()
@@ -105,10 +106,22 @@ export function hotRoutes(
 
   const predicts = new HotLimit('predict', settings.limits.hotRequestsPerMinute)
   const batches = new HotLimit('batches', settings.limits.hotRequestsPerMinute)
-  router.post('/v1/models/:model/predict', chain('predict', predicts, predict))
-  router.post('/v1/adaptations/:adaptation/predict', chain('predict', predicts, predictAdapted))
-  router.post('/v1/adaptations/:adaptation/batches', chain('post_batches', batches, postBatch))
-  return router
+  const onModel = chain('predict', predicts, predict)
+  const onAdaptation = { predict: chain('predict', predicts, predictAdapted), batches: chain('post_batches', batches, postBatch) }
+  router.post('/v1/models/:model/predict', onModel)
+  router.post('/v1/adaptations/:adaptation/predict', onAdaptation.predict)
+  router.post('/v1/adaptations/:adaptation/batches', onAdaptation.batches)
+
+  /** The three paths as nearly everyone writes them, without the router's general matching; it takes all other spellings. */
+  const direct: RequestHandler = (req, res, next) => {
+    const found = req.method === 'POST' ? directPath.exec(req.url) : null
+    if (found === null) return next()
+    const [, model, adaptation, what] = found
+    req.params = model === undefined ? { adaptation } : { model }
+    const serve = model === undefined ? onAdaptation[what as keyof typeof onAdaptation] : onModel
+    return serve(req, res, next)
+  }
+  return { direct, router }
 }
 
 function adaptationId(req: Request): string {

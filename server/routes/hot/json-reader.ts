@@ -218,7 +218,7 @@ class Reader {
     else size = divided(head, tail, tailDigits, exponent)
     if (size !== size) {
       if (++this.#hard > mostHard) return NaN
-      size = Number(Buffer.from(bytes.buffer, bytes.byteOffset + start + (isNegative ? 1 : 0), at - start - (isNegative ? 1 : 0)).latin1Slice())
+      size = Number(Buffer.from(bytes.buffer, bytes.byteOffset + start + (isNegative ? 1 : 0), at - start - (isNegative ? 1 : 0)).toString('latin1'))
     }
     return isNegative ? -size : size
   }

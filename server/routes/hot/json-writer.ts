@@ -41,7 +41,7 @@ export class JsonWriter {
 
   /** What was written, its UTF-8 bytes as one Latin-1 character each. */
   take(): string {
-    return this.#view.latin1Slice(0, this.#at)
+    return this.#view.toString('latin1', 0, this.#at)
   }
 
   /** JSON text as it stands. */
