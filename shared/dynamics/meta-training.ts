@@ -98,7 +98,9 @@ export function* metaTrain(
   const joints = base.network.sizes.at(-1)!
   const lossShape: LossShape = { joints, inputs: base.network.sizes[0], hidden: options.hidden, positive: options.positive }
   const long = training.filter(({ rows }) => rows >= (options.innerSteps + 1) * options.rowsPerStep)
-  if (validation.length === 0) throw new RangeError('Meta-training needs at least one validation recording: rates are chosen on them.')
+  if (validation.length === 0) {
+    throw new RangeError('Meta-training needs at least one validation recording: rates are chosen on them.')
+  }
   if (long.length === 0) {
     throw new RangeError(`Meta-training needs a recording of at least ${(options.innerSteps + 1) * options.rowsPerStep} rows.`)
   }
@@ -151,7 +153,7 @@ const checkEvery = 20
 /** Multiple of the base's own error beyond which a stream is lost. */
 const lostBeyond = 3
 
-/** Longest outer gradient of a stream taken as it is; longer ones are shortened to it, or one unstable stream would decide alone. */
+/** Longest outer gradient of a stream taken as it is; longer ones are shortened, or one unstable stream would decide alone. */
 const gradientLimit = 1
 
 function startValues(shape: ChainShape, plain: AdaptationRule, random: Random): Float64Array {
@@ -234,7 +236,8 @@ function* learn(
       validationError = checked.error
       if (checked.score < best.score) best = { learned: learned.slice(), score: checked.score }
     }
-    yield { phase: 'updates', update, updates: options.updates, outer: finite > 0 ? outer / finite : NaN, validation: validationError }
+    const meanOuter = finite > 0 ? outer / finite : NaN
+    yield { phase: 'updates', update, updates: options.updates, outer: meanOuter, validation: validationError }
   }
   return best.learned
 }
@@ -365,7 +368,7 @@ function* tuneRate(
 /** Rates are searched from a start divided by this to a start times this. */
 const searchSpan = 64
 
-/** Error at a rule's rate, and its mean with that a little above: a rate whose neighbour is bad stands at the edge of stability. */
+/** Error at a rule's rate, and its mean with that a little above: a rate with a bad neighbour is at the edge of stability. */
 function stabilityScore(base: Base, motions: readonly NormalisedMotion[], rule: AdaptationRule, measure?: NextBatchMeasure) {
   const error = meanNextBatchError(base, motions, rule, measure)
   const above = meanNextBatchError(base, motions, { ...rule, rate: rule.rate * stabilityMargin }, measure)

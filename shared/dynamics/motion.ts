@@ -46,7 +46,8 @@ export function normaliseMotion(motion: Motion, normalisation: Normalisation): N
   }
 }
 
-/** Lower bounds of the normalisation's standard deviations. Slow motion makes acceleration mostly noise; without a floor the network learns that noise. */
+// Lower bounds of the normalisation's standard deviations. Slow motion makes acceleration mostly noise; without a floor the
+// network learns that noise.
 const leastVelocityStd = 0.5
 const leastAccelerationStd = 1.5
 /** A joint that never moves, or never feels torque, must not divide by zero (rad, N·m). */

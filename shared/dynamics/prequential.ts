@@ -43,8 +43,11 @@ export type OnStep = (step: number, adapted: Float64Array, stepNorm: number) => 
  *
  * Source: prequential error, Dawid 1984.
  */
-export function measureNextBatch(base: Base, motion: NormalisedMotion, rule: AdaptationRule, onStep?: OnStep): PrequentialError {
-  return rule.scheme === 'bias' ? measureBias(base, motion, rule, onStep) : measureNetwork(base, motion, rule, rule.scheme, onStep)
+export function measureNextBatch(
+  base: Base, motion: NormalisedMotion, rule: AdaptationRule, onStep?: OnStep,
+): PrequentialError {
+  if (rule.scheme === 'bias') return measureBias(base, motion, rule, onStep)
+  return measureNetwork(base, motion, rule, rule.scheme, onStep)
 }
 
 /** Measures the next-batch error of one motion: `measureNextBatch(…).error`, or the same from faster code. */

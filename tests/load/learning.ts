@@ -17,7 +17,9 @@ import type { ChainShape, Scheme } from '../../shared/dynamics/meta-gradient.ts'
 import { defaultMetaTrainingOptions, metaTrain, type TunedRule } from '../../shared/dynamics/meta-training.ts'
 import { normaliseMotion, type NormalisedMotion } from '../../shared/dynamics/motion.ts'
 import type { Activation } from '../../shared/dynamics/network.ts'
-import { meanNextBatchError, measureNextBatch, predictMotion, type AdaptationRule, type Base } from '../../shared/dynamics/prequential.ts'
+import {
+  meanNextBatchError, measureNextBatch, predictMotion, type AdaptationRule, type Base,
+} from '../../shared/dynamics/prequential.ts'
 import { readMotionsByUse } from './motions.ts'
 
 /** Seconds between two looks at how far the prediction has come from the base's, and at what one batch changed. */
@@ -58,7 +60,9 @@ for (const seed of values.seeds.split(',').map(Number)) {
   }
 }
 
-function compareOne(base: Base, normalise: (use: string) => NormalisedMotion[], scheme: Scheme, loss: LossName, seed: number): void {
+function compareOne(
+  base: Base, normalise: (use: string) => NormalisedMotion[], scheme: Scheme, loss: LossName, seed: number,
+): void {
   const validation = normalise('validate')
   const evaluation = normalise('evaluate')
   const started = performance.now()

@@ -1,6 +1,6 @@
 // Sources: tfjs 4.22's automatic differentiation, first order everywhere, second order in the forms it differentiates twice
-// correctly (relu; softplus; tanh as sinh / cosh; its issue 3252 lists those it cannot); the Hessian-vector product of Pearlmutter,
-// Fast exact multiplication by the Hessian (1994), on f = w1² w2 + w2³ at (1, 2) along (3, −1), which is (10, −6).
+// correctly (relu; softplus; tanh as sinh / cosh; its issue 3252 lists those it cannot); the Hessian-vector product of
+// Pearlmutter, Fast exact multiplication by the Hessian (1994), on f = w1² w2 + w2³ at (1, 2) along (3, −1), which is (10, −6).
 import * as tf from '@tensorflow/tfjs'
 import { beforeAll, expect, test } from 'vitest'
 import { lossKinds, type LossName, type LossShape } from '../../shared/dynamics/losses/index.ts'
@@ -93,8 +93,9 @@ test.each(cases)('the gradient of a network under $loss, $activation, agrees wit
   backward(pass, theta, slope, 0, gradient)
 
   const { x, measured } = theirBatches(stretch)
-  const theirs = tf.grads((...values: tf.Tensor[]) =>
-    theirLoss(loss, split(phi, phiSizes[loss]), x[0], measured[0], theirNetwork(activation, values, x[0])))(split(theta, thetaSizes))
+  const lossOf = (...values: tf.Tensor[]) =>
+    theirLoss(loss, split(phi, phiSizes[loss]), x[0], measured[0], theirNetwork(activation, values, x[0]))
+  const theirs = tf.grads(lossOf)(split(theta, thetaSizes))
   expectClose(gradient, theirs)
 })
 
@@ -139,7 +140,8 @@ test('the published Hessian-vector product comes out, and one by hand through tw
   const [w1, w2] = [1, 2]
   const published = hessianProductOf({ sizes: [1, 2], activation: 'relu' }, [w1, w2, 0, 0], [3, -1, 0, 0],
     () => [2 * w1 * w2, w1 * w1 + 3 * w2 * w2], ([a, b]) => [2 * w2 * a + 2 * w1 * b, 2 * w1 * a + 6 * w2 * b])
-  // Two layers u = 1, v = 2, x = 1, y = u v, L = y³ = u³ v³: Hessian [[6 u v³, 9 u² v²], [9 u² v², 6 u³ v]] = [[48, 36], [36, 12]].
+  // Two layers u = 1, v = 2, x = 1, y = u v, L = y³ = u³ v³:
+  // Hessian [[6 u v³, 9 u² v²], [9 u² v², 6 u³ v]] = [[48, 36], [36, 12]].
   const byHand = hessianProductOf({ sizes: [1, 1, 1], activation: 'relu' }, [1, 0, 2, 0], [3, 0, -1, 0],
     ([y]) => [3 * y * y], ([tangent]) => [6 * 2 * tangent])
 
@@ -186,7 +188,9 @@ function meanSquareGradient(network: NetworkShape, theta: Float64Array, { x, mea
   return gradient
 }
 
-function hessianProduct(network: NetworkShape, theta: Float64Array, { x, measured }: Rows, direction: Float64Array): Float64Array {
+function hessianProduct(
+  network: NetworkShape, theta: Float64Array, { x, measured }: Rows, direction: Float64Array,
+): Float64Array {
   const pass = createNetworkPass(network, rows)
   const loss = lossKinds.mse.create(lossShape, rows)
   const predicted = new Float64Array(rows * joints)

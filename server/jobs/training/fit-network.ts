@@ -5,7 +5,9 @@ import { setThreadsCount, setWasmPaths } from '@tensorflow/tfjs-backend-wasm'
 import { balanceNetwork } from '../../../shared/dynamics/balance.ts'
 import { fitCoverage } from '../../../shared/dynamics/coverage.ts'
 import { noiseOfResiduals, pickReferenceStates } from '../../../shared/dynamics/fit-statistics.ts'
-import { fitNormalisation, networkOf, normaliseMotion, type Motion, type NormalisedMotion } from '../../../shared/dynamics/motion.ts'
+import {
+  fitNormalisation, networkOf, normaliseMotion, type Motion, type NormalisedMotion,
+} from '../../../shared/dynamics/motion.ts'
 import {
   createNetworkPass, forward, initialParameters, layerPlaces, parameterCount, type Activation, type NetworkShape,
 } from '../../../shared/dynamics/network.ts'
@@ -44,7 +46,7 @@ export interface FitEpoch {
   /** From 1. */
   readonly epoch: number
   readonly epochs: number
-  /** Mean squared error, base standard deviations squared, on the training rows during the epoch and on the held-out motions after it. */
+  /** Mean squared error, base standard deviations squared: on the training rows during the epoch, on those held out after it. */
   readonly trainingError: number
   readonly heldOutError: number
 }
@@ -74,9 +76,12 @@ export interface FitResult {
  * @throws {RangeError} there is nothing to train or to measure on
  * @throws the signal's reason, when it was aborted
  */
-export async function fitNetwork(training: readonly Motion[], heldOut: readonly Motion[], options: FitOptions): Promise<FitResult> {
+export async function fitNetwork(
+  training: readonly Motion[], heldOut: readonly Motion[], options: FitOptions,
+): Promise<FitResult> {
   if (training.length === 0 || heldOut.length === 0) {
-    throw new RangeError(`${training.length} recordings to train on and ${heldOut.length} held out: the fit needs at least one of each.`)
+    const found = `${training.length} recordings to train on and ${heldOut.length} held out`
+    throw new RangeError(`${found}: the fit needs at least one of each.`)
   }
   const { joints } = options
   const network = networkOf(joints, options.hidden, options.activation)
@@ -133,7 +138,8 @@ function zeroVelocityOf({ inputMean, inputStd }: Normalisation, joints: number):
 }
 
 async function train(
-  network: NetworkShape, start: Float64Array, given: Rows, heldOut: readonly NormalisedMotion[], options: FitOptions, random: Random,
+  network: NetworkShape, start: Float64Array, given: Rows, heldOut: readonly NormalisedMotion[], options: FitOptions,
+  random: Random,
 ) {
   await useFastestBackend()
   const model = createModel(network, start)
@@ -179,7 +185,8 @@ function createModel(network: NetworkShape, start: Float64Array): Model {
     activation: network.activation,
     weights: places.map(({ inputs, outputs, weights }) =>
       tf.variable(tf.tensor2d(Float32Array.from(start.subarray(weights, weights + inputs * outputs)), [inputs, outputs]))),
-    biases: places.map(({ outputs, biases }) => tf.variable(tf.tensor1d(Float32Array.from(start.subarray(biases, biases + outputs))))),
+    biases: places.map(({ outputs, biases }) =>
+      tf.variable(tf.tensor1d(Float32Array.from(start.subarray(biases, biases + outputs))))),
   }
 }
 

@@ -42,7 +42,7 @@ describe.each(schemes)('scheme %s', (scheme) => {
   test.each(losses.flatMap((loss) => [
     { loss, activation: 'relu' as const, positive: 'softplus' as const },
     { loss, activation: 'tanh' as const, positive: 'exp' as const },
-  ]))('the hypergradient of five steps of $loss, $activation, agrees with central differences', ({ loss, activation, positive }) => {
+  ]))('five steps of $loss, $activation: the hypergradient agrees with differences', ({ loss, activation, positive }) => {
     const { shape, stretch, theta, learned } = createCase(scheme, loss, activation, positive)
     const meta = createMetaGradient(shape)
     const gradient = new Float64Array(meta.learnedCount)

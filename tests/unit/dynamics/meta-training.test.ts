@@ -8,7 +8,9 @@ import {
 import type { Scheme } from '../../../shared/dynamics/meta-gradient.ts'
 import type { NormalisedMotion } from '../../../shared/dynamics/motion.ts'
 import { initialParameters } from '../../../shared/dynamics/network.ts'
-import { meanNextBatchError, measureNextBatch, predictMotion, type AdaptationRule, type Base } from '../../../shared/dynamics/prequential.ts'
+import {
+  meanNextBatchError, measureNextBatch, predictMotion, type AdaptationRule, type Base,
+} from '../../../shared/dynamics/prequential.ts'
 import { createRandom } from '../../../shared/dynamics/random.ts'
 
 const joints = 2
@@ -27,7 +29,8 @@ function createMotion(seed: number, rows = 600): NormalisedMotion {
   const phases = Array.from({ length: inputs }, () => 6 * random.uniform())
   const load = 2 + random.normal()
   const time = Float64Array.from({ length: rows }, (_, row) => 0.02 * row)
-  const x = Float64Array.from({ length: rows * inputs }, (_, k) => Math.sin(time[Math.floor(k / inputs)] * (1 + (k % inputs) / 3) + phases[k % inputs]))
+  const x = Float64Array.from({ length: rows * inputs }, (_, k) =>
+    Math.sin(time[Math.floor(k / inputs)] * (1 + (k % inputs) / 3) + phases[k % inputs]))
   const motion = { name: `motion ${seed}`, rows, time, x, measured: new Float64Array(rows * joints) }
   const measured = predictMotion(base, motion).map((predicted, k) =>
     predicted + (k % joints === 0 ? load * (1 + x[Math.floor(k / joints) * inputs]) + 0.02 * random.normal() : random.normal()))

@@ -50,11 +50,16 @@ test('the root mean square error is in N·m', async () => {
   const plain = await fitNetwork(training, heldOut, short)
   const scaled = await fitNetwork(training.map(inMillinewtonmetres), heldOut.map(inMillinewtonmetres), short)
 
-  for (let joint = 0; joint < joints; joint++) expect(scaled.metrics.rmse[joint] / plain.metrics.rmse[joint]).toBeCloseTo(1000, -1)
+  for (let joint = 0; joint < joints; joint++) {
+    expect(scaled.metrics.rmse[joint] / plain.metrics.rmse[joint]).toBeCloseTo(1000, -1)
+  }
 })
 
 test('the same seed gives the same parameters to the bit, another seed others', async () => {
-  const parameters = async (seed: number) => (await fitNetwork(training, heldOut, { ...options, epochs: 2, seed })).version.parameters
+  const parameters = async (seed: number) => {
+    const { version } = await fitNetwork(training, heldOut, { ...options, epochs: 2, seed })
+    return version.parameters
+  }
 
   const first = await parameters(3)
 
