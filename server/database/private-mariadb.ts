@@ -128,7 +128,8 @@ async function install(folder: string, owner: string | undefined): Promise<void>
   try {
     await run(program, [
       '--no-defaults', `--datadir=${draft}`, `--user=${owner ?? userInfo().username}`,
-      '--auth-root-authentication-method=normal', '--skip-test-db', '--innodb-log-file-size=48M',
+      // --force: no matter whether the machine can look up its own name.
+      '--force', '--auth-root-authentication-method=normal', '--skip-test-db', '--innodb-log-file-size=48M',
     ], { maxBuffer: 1 << 24 })
   } catch (error) {
     const told = `${(error as { stdout?: string }).stdout ?? ''}${(error as { stderr?: string }).stderr ?? ''}`
