@@ -113,7 +113,7 @@ function compareOn(name: string, ground: Ground, seed: number): void {
     const title = `${name}, ${scheme}`
     const noise = evaluation.filter(({ changes }) => changes!.length === 0).map(motion => fitConstant(motion).error)
     console.log(`\n${title}: floor (best constant z) ${noise.map(value => value.toFixed(4)).join(' ')}`)
-    console.log(`${'update'.padEnd(18)} next     0.4 s    1 s      frozen   | switch next, 1 s | unloaded next, 1 s ÷ none | after 2 s, 1 s | µs a step`)
+    console.log(`${'update'.padEnd(18)} next     0.4 s    1 s      frozen   | switch next, 1 s | unloaded next, 1 s ÷ none | after 2 s, 1 s | µs a step | friction × 1.25, frozen`)
     report('none', null, evaluation, own)
     for (const update of values.updates.split(',') as LinearCandidate[]) {
       const begun = performance.now()
@@ -124,7 +124,7 @@ function compareOn(name: string, ground: Ground, seed: number): void {
       })
       report(update, learned.create(), evaluation, own)
       console.log(`  learned in ${seconds(begun)} s${learned.update === undefined ? '' : `, kept update ${learned.update}`}`)
-      if (values.verbose && learned.constants) console.log(JSON.stringify(learned.constants, (_, value) => (typeof value === 'number' ? Number(value.toPrecision(3)) : value)))
+      if (values.verbose && learned.constants.kind !== 'first_order') console.log(JSON.stringify(learned.constants, (_, value) => (typeof value === 'number' ? Number(value.toPrecision(3)) : value)))
     }
   }
 }
@@ -171,8 +171,13 @@ function report(title: string, update: LinearUpdate | null, evaluation: LinearMo
   const hurt = unloaded.stale1 / meanErrors(unloadedMotions.map(nothing)).stale1
   const steps = evaluation.filter(({ changes }) => changes!.length === 0).reduce((sum, { rows }) => sum + rows / 4, 0)
   const cells = [steady.nextBatch, steady.stale04, steady.stale1, steady.frozen].map(value => value.toFixed(4).padEnd(8))
+  // Friction a quarter higher, where the basis has a scale for it (its unit is 0.2).
+  const size = own[0].basis.length / own[0].residual.length
+  const rubbing = size === 5 ? of(evaluation.filter(({ changes }) => changes!.length === 0).map(motion => ({
+    ...motion, residual: motion.residual.map((value, k) => value + 1.25 * motion.basis[k * 5 + 4]),
+  }))).frozen.toFixed(4) : ''
   console.log(`${title.padEnd(18)} ${cells.join(' ')} | ${switching.nextBatch.toFixed(4)} ${switching.stale1.toFixed(4)} | `
-    + `${unloaded.nextBatch.toFixed(4)} ${unloaded.stale1.toFixed(4)} ${hurt.toFixed(2)} | ${steady.after2sStale1.toFixed(4)} | ${((1000 * took) / steps).toFixed(0)}`)
+    + `${unloaded.nextBatch.toFixed(4)} ${unloaded.stale1.toFixed(4)} ${hurt.toFixed(2)} | ${steady.after2sStale1.toFixed(4)} | ${((1000 * took) / steps).toFixed(0)} | ${rubbing}`)
 }
 
 function contextsOf(from: string): Map<string, { unloaded: boolean; changes: number[] }> {

@@ -87,8 +87,8 @@ export function* identifyBase(
   const prior = priorOf(chain, data, options.priorShare)
   const speeds: (FrictionSpeeds | null)[] = new Array<null>(joints).fill(null)
   const held = new Uint8Array(prior.mean.length)
-  let variance = Float64Array.from(data.torqueVariance)
-  let parameters = prior.mean.slice()
+  let variance: Float64Array = Float64Array.from(data.torqueVariance)
+  let parameters: Float64Array = prior.mean.slice()
   for (let round = 1; round <= options.rounds; round++) {
     chooseSpeeds(data, parameters, speeds)
     const system = assemble(data, speeds as FrictionSpeeds[], variance, prior)

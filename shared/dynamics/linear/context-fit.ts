@@ -24,7 +24,7 @@ export interface ContextFitOptions {
 }
 
 export const defaultContextFitOptions: ContextFitOptions = {
-  size: 6, hidden: [96, 96], steps: 4000, rowsPerStep: 256, rate: 3e-3, seed: 1,
+  size: 6, hidden: [96, 96], steps: 6000, rowsPerStep: 256, rate: 5e-3, seed: 1,
 }
 
 export interface ContextFitProgress {

@@ -85,7 +85,9 @@ export function* learnLinear(
   const learnable = createLearnableFirstOrder(size, joints, rowsPerStep, candidate, lossShape)
   const start = startFirstOrder(candidate, lossShape, training, options, size, joints)
   const { theta, validation: errors, update } = yield* metaTrainLinear(learnable, thetaOfFirstOrder(start), training, validation, options)
-  return give({ kind: 'first_order', steps: firstOrderConstantsOf(theta, size + joints, rowsPerStep, candidate, lossShape) }, errors, update)
+  const steps = firstOrderConstantsOf(theta, size + joints, rowsPerStep, candidate, lossShape)
+  // As it is stored, in single precision.
+  return give({ kind: 'first_order', steps: { ...steps, lossParameters: Array.from(Float32Array.from(steps.lossParameters)) } }, errors, update)
 }
 
 const stepScales = [0.25, 0.5, 1, 2, 4, 8]
