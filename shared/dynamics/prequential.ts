@@ -123,11 +123,22 @@ function measureNetwork(
   return means(squares, steps * rowsPerStep)
 }
 
+// A search for rate and fading asks for the same predictions hundreds of times; they outlive neither base nor motion.
+const predictions = new WeakMap<Base, WeakMap<NormalisedMotion, Float64Array>>()
+
+function predictOnce(base: Base, motion: NormalisedMotion): Float64Array {
+  const known = predictions.get(base) ?? new WeakMap<NormalisedMotion, Float64Array>()
+  predictions.set(base, known)
+  const predicted = known.get(motion) ?? predictMotion(base, motion)
+  known.set(motion, predicted)
+  return predicted
+}
+
 function measureBias(base: Base, motion: NormalisedMotion, rule: AdaptationRule, onStep: OnStep | undefined): PrequentialError {
   const { rowsPerStep, lossParameters, fadingRate } = rule
   const inputs = base.network.sizes[0]
   const joints = base.network.sizes.at(-1)!
-  const basePredicted = predictMotion(base, motion)
+  const basePredicted = predictOnce(base, motion)
   const loss = lossKinds[rule.loss].create(rule.lossShape, rowsPerStep)
   const bias = new Float64Array(joints)
   const before = new Float64Array(joints)
