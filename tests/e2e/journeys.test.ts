@@ -1,11 +1,14 @@
 import type { Browser } from 'playwright-core'
-import { afterAll, afterEach, beforeAll, beforeEach, describe, expect, it } from 'vitest'
+import { afterAll, afterEach, beforeAll, beforeEach, describe, expect, it, vi } from 'vitest'
 import { twoJointArm, twoJointCsv } from '../support/recording-csv.ts'
 import { startTestServer, type TestServer, type TestTeam } from '../support/server.ts'
 import { serveModel, simulatedMotion, type ServedModel } from '../support/served-model.ts'
 import { axeFindings } from './support/accessibility.ts'
 import { openPage, startBrowser, takePicture, type OpenPage } from './support/browser.ts'
 import { buildConsole } from './support/build-console.ts'
+
+// A browser beside a database on a busy machine of two cores is slow; a journey has many steps.
+vi.setConfig({ testTimeout: 120_000 })
 
 let server: TestServer
 let team: TestTeam
@@ -141,12 +144,12 @@ describe('an engineer', () => {
     await takePicture(page, 'release-dialog')
     expect(await axeFindings(page)).toEqual([])
     await dialog.getByRole('button', { name: 'Make version' }).click()
-    await page.getByText(`version ${number} live`).waitFor()
+    await page.getByText(`version ${number} live`, { exact: true }).waitFor()
 
     await page.getByRole('button', { name: 'Roll back…' }).click()
     await page.getByRole('dialog').getByLabel('Reason').fill('Elbow is off.')
     await page.getByRole('dialog').getByRole('button', { name: 'Roll back to version 1' }).click()
-    await page.getByText('version 1 live').waitFor()
+    await page.getByText('version 1 live', { exact: true }).waitFor()
     await page.getByRole('tab', { name: 'Releases' }).click()
     await page.getByText('Elbow is off.').waitFor()
   })
@@ -168,7 +171,7 @@ describe('an engineer', () => {
     await dialog.getByRole('button', { name: 'Decide on that' }).click()
     await dialog.getByRole('button', { name: 'Make version' }).click()
 
-    await page.getByText(`version ${mine} live`).waitFor()
+    await page.getByText(`version ${mine} live`, { exact: true }).waitFor()
   })
 
   it('uploads recordings, starts a model, fits it and finds the version with its figures', async () => {
@@ -223,7 +226,7 @@ describe('an engineer', () => {
 
     await page.getByRole('table', { name: 'Error per joint' }).getByRole('row', { name: /^lift/ }).waitFor()
     await takePicture(page, 'fitted-version')
-  }, 150_000)
+  })
 
   it('finds no keys section', async () => {
     const { page } = browser
@@ -280,7 +283,7 @@ describe('an operator', () => {
     await page.getByRole('button', { name: 'Reset…' }).click()
     await page.getByRole('dialog').getByLabel('Reason').fill('Start again with it.')
     await page.getByRole('dialog').getByRole('button', { name: 'Reset', exact: true }).click()
-    await page.getByText('serves version 1 of tinker again').waitFor()
+    await page.getByText(`serves version ${adaptation.version} of tinker again`).waitFor()
     expect(await page.getByRole('button', { name: 'Promote…' }).count()).toBe(0)
 
     await page.getByLabel('Entry').selectOption('command')

@@ -1,10 +1,13 @@
 import type { Browser } from 'playwright-core'
-import { afterAll, afterEach, beforeAll, beforeEach, describe, expect, it } from 'vitest'
+import { afterAll, afterEach, beforeAll, beforeEach, describe, expect, it, vi } from 'vitest'
 import { axeFindings } from './support/accessibility.ts'
 import { openPage, startBrowser, takePicture, type OpenPage } from './support/browser.ts'
 import { buildConsole } from './support/build-console.ts'
 import { problem, startInventedApi, type InventedApi } from './support/invented-api.ts'
 import { inventTeam } from './support/invented-team.ts'
+
+// A browser beside a database on a busy machine of two cores is slow; a journey has many steps.
+vi.setConfig({ testTimeout: 120_000 })
 
 let browser: Browser
 let api: InventedApi

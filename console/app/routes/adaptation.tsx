@@ -2,32 +2,21 @@ import { useQuery, useQueryClient } from '@tanstack/react-query'
 import { useState, type ReactNode } from 'react'
 import { useParams } from 'react-router-dom'
 import { Button, TextLink, Toggle } from '../../components/button.tsx'
-import { LoadBarKey } from '../../components/load-bar.tsx'
-import { LoadStrip } from '../../components/load-strip.tsx'
-import { Facts, Page, Section } from '../../components/page.tsx'
-import { Caution, Empty, Failed, Skeleton, SkeletonRows } from '../../components/states.tsx'
+import { Page, Section } from '../../components/page.tsx'
+import { Empty, Failed, Skeleton, SkeletonRows } from '../../components/states.tsx'
 import { TimeAgo } from '../../components/time-ago.tsx'
-import {
-  adaptationOptions,
-  historyOptions,
-  rowsOptions,
-  type Adaptation,
-  type Command,
-  type LogEntry,
-} from '../../features/adaptations/adaptations.ts'
+import { adaptationOptions, historyOptions, type Adaptation, type Command } from '../../features/adaptations/adaptations.ts'
+import { BatchView } from '../../features/adaptations/batch-view.tsx'
 import { CommandDialog, PromoteDialog } from '../../features/adaptations/command-dialog.tsx'
+import { ContextSection } from '../../features/adaptations/context-section.tsx'
 import { ErrorChart } from '../../features/adaptations/error-chart.tsx'
 import { GuardPanel } from '../../features/adaptations/guard-panel.tsx'
 import { attentionOf, healthOf, lossName, schemeNames, type Health } from '../../features/adaptations/health.ts'
 import { HealthStamp } from '../../features/adaptations/health-stamp.tsx'
-import { JointTable } from '../../features/adaptations/joint-table.tsx'
-import { eventWords } from '../../features/adaptations/log.ts'
 import { LogSection } from '../../features/adaptations/log-table.tsx'
-import { VerdictStamp } from '../../features/adaptations/verdict-stamp.tsx'
 import { useBlocked, useMay } from '../../features/session/session.ts'
-import { counted, significant } from '../../lib/numbers.ts'
 import { paths } from '../../lib/paths.ts'
-import { robotTime, span, useNow } from '../../lib/times.ts'
+import { span, useNow } from '../../lib/times.ts'
 import { useUrlState } from '../../lib/url-state.ts'
 
 export function Component() {
@@ -228,150 +217,5 @@ function Live({ adaptation }: { adaptation: Adaptation }) {
         <ContextSection adaptation={adaptation} history={history.data} />
       </div>
     </>
-  )
-}
-
-/** The newest batch, or the one chosen: its joints at an instant, and over its time. */
-function BatchView({
-  adaptation,
-  history,
-  selected,
-}: {
-  adaptation: Adaptation
-  history: LogEntry[]
-  selected: number | undefined
-}) {
-  const url = useUrlState()
-  const batches = history.filter((entry) => entry.entry === 'batch')
-  const position = selected ?? batches.at(-1)!.position
-  const batch = batches.find((entry) => entry.position === position)
-  const rows = useQuery(rowsOptions(adaptation.id, position))
-  const [scale, setScale] = useState(false)
-  const [instant, setInstant] = useState<{ position: number; row: number }>()
-  const last = (rows.data?.time.length ?? 1) - 1
-  const row = instant?.position === rows.data?.position ? Math.min(instant?.row ?? last, last) : last
-  const until = batches.slice(0, batch === undefined ? undefined : batches.indexOf(batch) + 1)
-  return (
-    <>
-      <Section
-        title={selected === undefined ? 'Joints, newest batch' : `Joints, batch ${batch?.sequence ?? ''}`}
-        note={
-          batch && (
-            <span className="inline-flex flex-wrap items-baseline gap-x-3">
-              {batch.verdict && <VerdictStamp verdict={batch.verdict} />}
-              {batch.reasons?.map((reason) => reason.detail).join(' ')}
-            </span>
-          )
-        }
-        actions={
-          <>
-            <LoadBarKey />
-            <Toggle pressed={scale} onPress={() => setScale(!scale)}>
-              scale
-            </Toggle>
-            {selected !== undefined && <Button onClick={() => url.set({ batch: undefined })}>Follow the newest</Button>}
-          </>
-        }
-      >
-        {rows.isError && (
-          <Failed what="The rows of this batch could not be read" error={rows.error} retry={() => void rows.refetch()} />
-        )}
-        <JointTable joints={adaptation.joint_names} rows={rows.data} row={row} batch={batch} scale={scale} history={until} />
-      </Section>
-      {rows.data && rows.data.time.length > 1 && (
-        <Section
-          title="Over the batch"
-          note={`${counted(rows.data.time.length, 'row')}; the table above shows ${robotTime(rows.data.time[row]!)} s, ${row === last ? 'the newest row' : `row ${row + 1}`}`}
-        >
-          <LoadStrip
-            joints={rows.data.joint_names.map((name, index) => ({
-              name,
-              unit: rows.data.unit[index]!,
-              limit: rows.data.torque_limits[index]!,
-            }))}
-            time={rows.data.time}
-            predicted={rows.data.predicted}
-            measured={rows.data.torque}
-            row={row}
-            onRow={(next) => setInstant({ position: rows.data.position, row: next })}
-          />
-          <div className="mt-3">
-            <Caution>
-              A predicted torque is advisory. Keep the controller’s own torque, speed and collision limits active.
-            </Caution>
-          </div>
-        </Section>
-      )}
-    </>
-  )
-}
-
-const contextNames = {
-  tool: 'Tool',
-  payload_class: 'Payload class',
-  firmware: 'Firmware',
-  friction_setting: 'Friction setting',
-} as const
-
-function ContextSection({ adaptation, history }: { adaptation: Adaptation; history: LogEntry[] }) {
-  const event = history.findLast((entry) => entry.entry === 'event')
-  const context = Object.entries(contextNames).flatMap(([name, label]): [string, ReactNode][] => {
-    const value = adaptation.context[name as keyof typeof contextNames]
-    return value === undefined ? [] : [[label, value]]
-  })
-  const { update } = adaptation
-  const settings = [
-    update.kind,
-    update.rate !== undefined && `step size ${significant(update.rate)}`,
-    update.rows_per_step !== undefined && `${counted(update.rows_per_step, 'row')} a step`,
-    adaptation.scheme === 'bias' && update.fade !== undefined && `fades to ${significant(update.fade)} in 1 s`,
-  ]
-  return (
-    <Section title="Context">
-      <Facts
-        items={[
-          ['Robot', adaptation.robot],
-          ...context,
-          [
-            'Last event',
-            event ? (
-              <>
-                {eventWords(event)}, <TimeAgo at={event.at} />
-              </>
-            ) : (
-              'none'
-            ),
-          ],
-          ['Changes', schemeNames[adaptation.scheme]],
-          ['Update', settings.filter(Boolean).join(', ')],
-          [
-            'State as of',
-            adaptation.as_of === null ? (
-              'no accepted row yet'
-            ) : (
-              <span>
-                <span className="num">{robotTime(adaptation.as_of)}</span> s on the robot’s clock
-                {adaptation.valid_until !== null && (
-                  <>
-                    , valid until <span className="num">{robotTime(adaptation.valid_until)}</span> s
-                  </>
-                )}
-              </span>
-            ),
-          ],
-          [
-            'Started',
-            <>
-              {adaptation.created_by}, <TimeAgo at={adaptation.created_at} />
-            </>,
-          ],
-          ['Id', <code className="text-12 break-all">{adaptation.id}</code>],
-        ]}
-      />
-      <p className="mt-3 text-12 text-soft">
-        Another tool, payload class, firmware or friction setting needs an adaptation of its own; gripping and releasing within
-        the class are events of this one.
-      </p>
-    </Section>
   )
 }

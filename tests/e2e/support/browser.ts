@@ -40,7 +40,7 @@ export async function openPage(browser: Browser, { width = 1440, height = 900, t
     timezoneId: 'Europe/Berlin',
   })
   const page = await context.newPage()
-  page.setDefaultTimeout(15_000)
+  page.setDefaultTimeout(30_000)
   const errors: string[] = []
   page.on('pageerror', (error) => errors.push(String(error)))
   page.on('console', (message) => {
