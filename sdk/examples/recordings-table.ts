@@ -16,8 +16,13 @@ const uses: readonly string[] = ['fit', 'meta_train', 'validate', 'evaluate'] sa
  * @throws {Error} a column is missing or a value cannot be read: names line and column
  */
 export function readRecordingsTable(text: string): ListedRecording[] {
-  const [header, ...lines] = text.replace(/^\uFEFF/, '').split(/\r?\n/).filter((line) => line.trim() !== '').map((line) => line.split(',').map((cell) => cell.trim()))
-  for (const column of ['file', 'use']) if (!header?.includes(column)) throw new Error(`recordings.csv has no column "${column}". It needs file and use.`)
+  const [header, ...lines] = text
+    .replace(/^\uFEFF/, '')
+    .split(/\r?\n/)
+    .filter((line) => line.trim() !== '')
+    .map((line) => line.split(',').map((cell) => cell.trim()))
+  for (const column of ['file', 'use'])
+    if (!header?.includes(column)) throw new Error(`recordings.csv has no column "${column}". It needs file and use.`)
   return lines.map((cells, index) => {
     const where = `recordings.csv, line ${index + 2}`
     if (cells.length !== header.length) throw new Error(`${where} has ${cells.length} values, the header has ${header.length}.`)
@@ -36,7 +41,9 @@ export function readRecordingsTable(text: string): ListedRecording[] {
       use: use as Schemas['RecordingUse'],
       context: {
         ...(value('motion') !== '' && { motion: value('motion') }),
-        ...(mass > 0 && { payload: { mass, ...(hasCentre && { center_of_mass: [number('com_x_m'), number('com_y_m'), number('com_z_m')] }) } }),
+        ...(mass > 0 && {
+          payload: { mass, ...(hasCentre && { center_of_mass: [number('com_x_m'), number('com_y_m'), number('com_z_m')] }) },
+        }),
       },
     }
   })

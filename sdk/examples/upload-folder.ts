@@ -42,7 +42,10 @@ async function upload({ folder, url, key, armFile, model }: Options): Promise<nu
   const listed = readRecordingsTable(readFileSync(join(folder, 'recordings.csv'), 'utf8'))
   const given = armFile === undefined ? armOfUrdf(folder) : (JSON.parse(readFileSync(armFile, 'utf8')) as Schemas['NewArm'])
   const arm = await describeArm(heftwise, given)
-  console.log(`Arm ${arm.name}: ${arm.joints.length} joints, fingerprint ${arm.joints_fingerprint}, gravity (${arm.gravity.join(', ')}) m/s², fallback ${arm.fallback}.`)
+  console.log(
+    `Arm ${arm.name}: ${arm.joints.length} joints, fingerprint ${arm.joints_fingerprint}, gravity ` +
+    `(${arm.gravity.join(', ')}) m/s², fallback ${arm.fallback}.`,
+  )
   if (model !== undefined) await startModel(heftwise, model, arm.name)
 
   let sent = 0
@@ -68,7 +71,10 @@ async function send(heftwise: Heftwise, folder: string, arm: string, { file, use
   const path = join(folder, file)
   const startedAt = performance.now()
   const blob = await openAsBlob(path, { type: 'text/csv' })
-  const { recording, stored } = await heftwise.recordings.upload({ arm, use, context, file: blob, fileName: basename(file) }, { signal: stop.signal })
+  const { recording, stored } = await heftwise.recordings.upload(
+    { arm, use, context, file: blob, fileName: basename(file) },
+    { signal: stop.signal },
+  )
   return { stored, rows: recording.rows, seconds: (performance.now() - startedAt) / 1000 }
 }
 
@@ -82,7 +88,11 @@ async function describeArm(heftwise: Heftwise, given: Schemas['NewArm']): Promis
     const known = await heftwise.arms.get(given.name, { signal })
     const names = (joints: { name: string }[]) => joints.map(({ name }) => name).join(', ')
     if (names(known.joints) === names(given.joints)) return known
-    throw new Error(`There is an arm called ${given.name} already, with other joints: ${names(known.joints)}. Describe this one under another name with --arm.`, { cause: error })
+    throw new Error(
+      `There is an arm called ${given.name} already, with other joints: ${names(known.joints)}. ` +
+      'Describe this one under another name with --arm.',
+      { cause: error },
+    )
   }
 }
 
@@ -96,10 +106,14 @@ async function startModel(heftwise: Heftwise, name: string, arm: string): Promis
   }
 }
 
-/** What a URDF does not say is assumed here: floor mount, torque on the link side, nothing added by the controller. Use --arm for another arm. */
+/**
+ * What a URDF does not say is assumed here: floor mount, torque on the link side, nothing added by the controller. Use --arm
+ * for another arm.
+ */
 function armOfUrdf(folder: string): Schemas['NewArm'] {
   const files = readdirSync(folder).filter((file) => file.endsWith('.urdf'))
-  if (files.length !== 1) throw new Error(`${folder} holds ${files.length} URDF files, expected one. Name the arm's description with --arm arm.json.`)
+  if (files.length !== 1)
+    throw new Error(`${folder} holds ${files.length} URDF files, expected one. Name the arm's description with --arm arm.json.`)
   const { name, joints } = jointsOfUrdf(readFileSync(join(folder, files[0]), 'utf8'))
   return {
     name,
@@ -122,7 +136,13 @@ function readOptions(): Options {
   const folder = resolve(process.env.INIT_CWD ?? '.', positionals[0])
   if (!statSync(folder, { throwIfNoEntry: false })?.isDirectory()) throw new Error(`${folder} is no folder.\n\n${usage}`)
   const credentials = values.url !== undefined && values.key !== undefined ? undefined : readCredentials()
-  return { folder, url: values.url ?? credentials!.origin, key: values.key ?? credentials!.api_key, armFile: values.arm, model: values.model }
+  return {
+    folder,
+    url: values.url ?? credentials!.origin,
+    key: values.key ?? credentials!.api_key,
+    armFile: values.arm,
+    model: values.model,
+  }
 }
 
 function readCredentials(): { origin: string; api_key: string } {

@@ -54,7 +54,11 @@ async function importVersion({ models, versions, releases }: Services, caller: C
   }
   const model = await models.get(caller, name)
   if (model.liveVersion !== null) return
-  await releases.release(caller, name, { version: 1, reason: 'Demo: fitted on simulated recordings without payload.', ifMatch: modelEtag(model) })
+  await releases.release(caller, name, {
+    version: 1,
+    reason: 'Demo: fitted on simulated recordings without payload.',
+    ifMatch: modelEtag(model),
+  })
 }
 
 async function importLossVersion({ losses }: Services, caller: Caller, demo: Demo): Promise<void> {
@@ -63,12 +67,22 @@ async function importLossVersion({ losses }: Services, caller: Caller, demo: Dem
   await losses.import(caller, demo.loss.name, { loss, checksum, validation })
 }
 
-async function uploadRecording({ recordings }: Services, caller: Caller, arm: string, { file, name, use, context }: Demo['recordings'][number]): Promise<void> {
+async function uploadRecording(
+  { recordings }: Services,
+  caller: Caller,
+  arm: string,
+  { file, name, use, context }: Demo['recordings'][number],
+): Promise<void> {
   const { payload, ...rest } = context
   const source = createReadStream(new URL(file, folder)).pipe(createGunzip())
   await recordings.upload(
     caller,
-    { arm, name, use, context: { ...rest, ...(payload && { payload: { mass: payload.mass, centerOfMass: payload.center_of_mass } }) } },
+    {
+      arm,
+      name,
+      use,
+      context: { ...rest, ...(payload && { payload: { mass: payload.mass, centerOfMass: payload.center_of_mass } }) },
+    },
     source,
   )
 }

@@ -27,19 +27,36 @@ export async function runFit(input: FitInput, report: JobReport): Promise<JobOut
     onEpoch({ epoch, trainingError, heldOutError }) {
       report.point('training', epoch, trainingError)
       report.point('held out', epoch, heldOutError)
-      report.progress((FIT_SHARE * epoch) / epochs, `Epoch ${epoch} of ${epochs}: error ${heldOutError.toPrecision(3)} on held-out recordings.`)
+      report.progress(
+        (FIT_SHARE * epoch) / epochs,
+        `Epoch ${epoch} of ${epochs}: error ${heldOutError.toPrecision(3)} on held-out recordings.`,
+      )
       report.throwIfCancelled()
     },
   })
   const recommended = validation.length === 0 ? {} : recommend(version, input, report)
-  return { kind: 'fit', artefact: version, metrics: metricsOf(metrics, input, version.description.normalisation.outputStd), recommended }
+  return {
+    kind: 'fit',
+    artefact: version,
+    metrics: metricsOf(metrics, input, version.description.normalisation.outputStd),
+    recommended,
+  }
 }
 
 /** The better of stochastic gradient steps and Adam, each at its best rate on the validation recordings. */
-function recommend({ description, parameters }: VersionArtefact, { validation }: FitInput, report: JobReport): Version['recommended'] {
+function recommend(
+  { description, parameters }: VersionArtefact,
+  { validation }: FitInput,
+  report: JobReport,
+): Version['recommended'] {
   const motions = validation.map((motion) => normaliseMotion(motion, description.normalisation))
   const base = { network: description.network, parameters: Float64Array.from(parameters) }
-  const search = metaTrain(base, motions, motions, { ...defaultMetaTrainingOptions, loss: 'mse', innerSteps: 1, measure: createKernelNextBatch(createKernels()) })
+  const search = metaTrain(base, motions, motions, {
+    ...defaultMetaTrainingOptions,
+    loss: 'mse',
+    innerSteps: 1,
+    measure: createKernelNextBatch(createKernels()),
+  })
   for (let tried = 1; ; tried++) {
     report.throwIfCancelled()
     const { done, value } = search.next()
@@ -53,7 +70,8 @@ function recommend({ description, parameters }: VersionArtefact, { validation }:
 }
 
 function metricsOf(metrics: FitMetrics, { joints }: FitInput, outputStd: readonly number[]): StoredMetrics {
-  const perJoint = (rmse: readonly number[]): StoredJointMetric[] => joints.map(({ name, unit }, j) => ({ joint: name, rmse: rmse[j], unit }))
+  const perJoint = (rmse: readonly number[]): StoredJointMetric[] =>
+    joints.map(({ name, unit }, j) => ({ joint: name, rmse: rmse[j], unit }))
   const errorOf = (rmse: readonly number[]) => rmse.reduce((sum, value, j) => sum + (value / outputStd[j]) ** 2, 0) / rmse.length
   return {
     error: metrics.heldOutError,

@@ -3,7 +3,12 @@ import { createKernelMetaGradient } from '../../shared/dynamics/kernels/meta-gra
 import { createKernelNextBatch } from '../../shared/dynamics/kernels-next-batch.ts'
 import type { LossVersion } from '../../shared/dynamics/loss-version.ts'
 import type { ChainShape } from '../../shared/dynamics/meta-gradient.ts'
-import { defaultMetaTrainingOptions, metaTrain, type MetaTrainingProgress, type MetaTrainingResult } from '../../shared/dynamics/meta-training.ts'
+import {
+  defaultMetaTrainingOptions,
+  metaTrain,
+  type MetaTrainingProgress,
+  type MetaTrainingResult,
+} from '../../shared/dynamics/meta-training.ts'
 import { normaliseMotion } from '../../shared/dynamics/motion.ts'
 import { decodeVersion } from '../../shared/dynamics/version.ts'
 import type { StoredComparison } from '../models/loss-version.ts'
@@ -19,22 +24,30 @@ const UPDATES_SHARE = 0.85
 export function runMetaTrain(input: MetaTrainInput, report: JobReport): JobOutput {
   const { parameters, lossKind } = input
   const { description, parameters: theta } = decodeVersion(input.base)
-  const normalised = (motions: MetaTrainInput['training']) => motions.map((motion) => normaliseMotion(motion, description.normalisation))
+  const normalised = (motions: MetaTrainInput['training']) =>
+    motions.map((motion) => normaliseMotion(motion, description.normalisation))
   const kernels = createKernels()
-  const steps = metaTrain({ network: description.network, parameters: Float64Array.from(theta) }, normalised(input.training), normalised(input.validation), {
-    ...defaultMetaTrainingOptions,
-    scheme: parameters.scheme,
-    loss: lossKind,
-    positive: parameters.positive,
-    hidden: parameters.hidden,
-    updates: parameters.updates,
-    innerSteps: parameters.innerSteps,
-    streams: parameters.streams,
-    rowsPerStep: parameters.rowsPerStep,
-    seed: parameters.seed,
-    ...(parameters.scheme !== 'bias' && { createMetaGradient: (shape: ChainShape) => createKernelMetaGradient(kernels, shape) }),
-    measure: createKernelNextBatch(kernels),
-  })
+  const steps = metaTrain(
+    { network: description.network, parameters: Float64Array.from(theta) },
+    normalised(input.training),
+    normalised(input.validation),
+    {
+      ...defaultMetaTrainingOptions,
+      scheme: parameters.scheme,
+      loss: lossKind,
+      positive: parameters.positive,
+      hidden: parameters.hidden,
+      updates: parameters.updates,
+      innerSteps: parameters.innerSteps,
+      streams: parameters.streams,
+      rowsPerStep: parameters.rowsPerStep,
+      seed: parameters.seed,
+      ...(parameters.scheme !== 'bias' && {
+        createMetaGradient: (shape: ChainShape) => createKernelMetaGradient(kernels, shape),
+      }),
+      measure: createKernelNextBatch(kernels),
+    },
+  )
   let tried = 0
   for (;;) {
     report.throwIfCancelled()
@@ -47,16 +60,25 @@ export function runMetaTrain(input: MetaTrainInput, report: JobReport): JobOutpu
 
 function tell(at: MetaTrainingProgress, tried: number, report: JobReport): void {
   if (at.phase === 'rates') {
-    report.progress(RATES_SHARE * (1 - 1 / (1 + tried / 8)), `Choosing the rate of ${at.name}: ${at.rate.toPrecision(3)} gives ${at.error.toPrecision(3)}.`)
+    report.progress(
+      RATES_SHARE * (1 - 1 / (1 + tried / 8)),
+      `Choosing the rate of ${at.name}: ${at.rate.toPrecision(3)} gives ${at.error.toPrecision(3)}.`,
+    )
     return
   }
   const { update, updates, outer, validation } = at
   if (Number.isFinite(outer)) report.point('outer error', update, outer)
   if (validation !== undefined && Number.isFinite(validation)) report.point('validation', update, validation)
-  report.progress(RATES_SHARE + ((UPDATES_SHARE - RATES_SHARE) * update) / updates, `Update ${update} of ${updates}: outer error ${outer.toPrecision(3)}.`)
+  report.progress(
+    RATES_SHARE + ((UPDATES_SHARE - RATES_SHARE) * update) / updates,
+    `Update ${update} of ${updates}: outer error ${outer.toPrecision(3)}.`,
+  )
 }
 
-function outputOf({ learned, none, rivals }: MetaTrainingResult, { baseChecksum, lossKind, parameters }: MetaTrainInput): JobOutput {
+function outputOf(
+  { learned, none, rivals }: MetaTrainingResult,
+  { baseChecksum, lossKind, parameters }: MetaTrainInput,
+): JobOutput {
   const { rule } = learned
   const artefact: LossVersion = {
     description: {
@@ -66,7 +88,12 @@ function outputOf({ learned, none, rivals }: MetaTrainingResult, { baseChecksum,
       hidden: lossKind === 'structured' ? 0 : rule.lossShape.hidden,
       baseChecksum,
       scheme: parameters.scheme,
-      update: { kind: rule.update, rate: rule.rate, rowsPerStep: rule.rowsPerStep, fade: fadeOf(parameters.scheme, rule.fadingRate) },
+      update: {
+        kind: rule.update,
+        rate: rule.rate,
+        rowsPerStep: rule.rowsPerStep,
+        fade: fadeOf(parameters.scheme, rule.fadingRate),
+      },
     },
     parameters: Float32Array.from(rule.lossParameters),
   }

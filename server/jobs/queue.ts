@@ -27,7 +27,11 @@ export interface JobQueueParts {
   /** How far their threads stand back behind the event loop's. */
   readonly niceness: number
   readInput(job: Job): Promise<JobInput>
-  storeOutput(job: Job, output: JobOutput, transaction: Parameters<Parameters<Database['transaction']>[0]>[0]): Promise<NonNullable<Job['result']>>
+  storeOutput(
+    job: Job,
+    output: JobOutput,
+    transaction: Parameters<Parameters<Database['transaction']>[0]>[0],
+  ): Promise<NonNullable<Job['result']>>
 }
 
 const pollMs = 1_000
@@ -63,7 +67,8 @@ export function createJobQueue({ database, log, threads, niceness, readInput, st
   async function claim(): Promise<{ job: Job; lease: string } | undefined> {
     const lease = uuid7()
     const { affectedRows } = (await pool.query(
-      `UPDATE jobs SET state = 'running', message = 'Reading recordings.', started_at = UTC_TIMESTAMP(3), change_number = change_number + 1,
+      `UPDATE jobs SET state = 'running', message = 'Reading recordings.', started_at = UTC_TIMESTAMP(3),
+         change_number = change_number + 1,
          lease_owner = ?, lease_until = UTC_TIMESTAMP(3) + INTERVAL ${leaseSeconds} SECOND
        WHERE state = 'queued' ORDER BY id LIMIT 1`,
       [lease],
@@ -77,8 +82,10 @@ export function createJobQueue({ database, log, threads, niceness, readInput, st
     const ours = [...running.values()].map(({ lease }) => lease)
     const detail = 'The server process that ran this job ended before the job did. Start the job again.'
     await pool.query(
-      `UPDATE jobs SET state = IF(cancel_at IS NULL, 'failed', 'cancelled'), message = IF(cancel_at IS NULL, 'Run it again.', 'Cancelled.'),
-         problem = IF(cancel_at IS NULL, ?, NULL), ended_at = UTC_TIMESTAMP(3), change_number = change_number + 1, lease_owner = NULL, lease_until = NULL
+      `UPDATE jobs SET state = IF(cancel_at IS NULL, 'failed', 'cancelled'),
+         message = IF(cancel_at IS NULL, 'Run it again.', 'Cancelled.'),
+         problem = IF(cancel_at IS NULL, ?, NULL), ended_at = UTC_TIMESTAMP(3), change_number = change_number + 1,
+         lease_owner = NULL, lease_until = NULL
        WHERE state = 'running' AND lease_until < UTC_TIMESTAMP(3)${ours.length > 0 ? ' AND lease_owner NOT IN (?)' : ''}`,
       [JSON.stringify({ slug: 'internal', detail }), ...(ours.length > 0 ? [ours] : [])],
     )
@@ -131,7 +138,11 @@ type End =
   /** The lease is somebody else's: nothing more may be written. */
   | { state: 'lost' }
 
-function runJob({ database, log, niceness, readInput, storeOutput }: Omit<JobQueueParts, 'threads'>, job: Job, lease: string): Running {
+function runJob(
+  { database, log, niceness, readInput, storeOutput }: Omit<JobQueueParts, 'threads'>,
+  job: Job,
+  lease: string,
+): Running {
   const { pool } = database
   const flag = new Int32Array(new SharedArrayBuffer(4))
   let thread: Worker | undefined
@@ -154,7 +165,8 @@ function runJob({ database, log, niceness, readInput, storeOutput }: Omit<JobQue
     latest = undefined
     const change = news ? 'progress = ?, message = ?, change_number = change_number + 1,' : ''
     const { affectedRows } = (await pool.query(
-      `UPDATE jobs SET ${change} lease_until = UTC_TIMESTAMP(3) + INTERVAL ${leaseSeconds} SECOND WHERE id = ? AND lease_owner = ? AND state = 'running'`,
+      `UPDATE jobs SET ${change} lease_until = UTC_TIMESTAMP(3) + INTERVAL ${leaseSeconds} SECOND
+       WHERE id = ? AND lease_owner = ? AND state = 'running'`,
       [...(news ? [news.progress, news.message.slice(0, 300)] : []), job.id, lease],
     )) as { affectedRows: number }
     if (affectedRows === 0) settle({ state: 'lost' })
@@ -195,15 +207,24 @@ function runJob({ database, log, niceness, readInput, storeOutput }: Omit<JobQue
       thread.on('message', onMessage)
       thread.on('error', (error: NodeJS.ErrnoException) => {
         log.error({ err: error, jobId: job.id }, "a job's thread failed")
-        const detail = error.code === 'ERR_WORKER_OUT_OF_MEMORY' ? 'The job ran out of memory. Use fewer or shorter recordings, or a smaller network.' : 'The thread that ran this job failed. Start the job again.'
+        const detail =
+          error.code === 'ERR_WORKER_OUT_OF_MEMORY'
+            ? 'The job ran out of memory. Use fewer or shorter recordings, or a smaller network.'
+            : 'The thread that ran this job failed. Start the job again.'
         settle({ state: 'failed', slug: 'internal', detail })
       })
-      thread.on('exit', () => settle({ state: 'failed', slug: 'internal', detail: 'The thread that ran this job ended early. Start the job again.' }))
+      thread.on('exit', () =>
+        settle({ state: 'failed', slug: 'internal', detail: 'The thread that ran this job ended early. Start the job again.' }),
+      )
     } catch (error) {
       if (error instanceof Refusal) settle({ state: 'failed', slug: error.kind.slug, detail: error.message })
       else {
         log.error({ err: error, jobId: job.id }, 'a job could not be started')
-        settle({ state: 'failed', slug: 'internal', detail: 'The job could not be started. This has been logged; start it again.' })
+        settle({
+          state: 'failed',
+          slug: 'internal',
+          detail: 'The job could not be started. This has been logged; start it again.',
+        })
       }
     }
     const end = await outcome
@@ -219,15 +240,33 @@ function runJob({ database, log, niceness, readInput, storeOutput }: Omit<JobQue
     await beating
     await storePoints()
     await database.transaction(async (transaction) => {
-      const held = await database.models.Job.findOne({ where: { id: job.id, leaseOwner: lease, state: 'running' }, transaction, lock: transaction.LOCK.UPDATE })
+      const held = await database.models.Job.findOne({
+        where: { id: job.id, leaseOwner: lease, state: 'running' },
+        transaction,
+        lock: transaction.LOCK.UPDATE,
+      })
       if (!held) return
       const ended = { endedAt: new Date(), changeNumber: (held.changeNumber ?? 0) + 1, leaseOwner: null, leaseUntil: null }
       // A cancel that came too late to stop anything still wins: the caller was told it would.
-      if (end.state === 'cancelled' || held.cancelAt) await held.update({ ...ended, state: 'cancelled', message: 'Cancelled.' }, { transaction })
-      else if (end.state === 'failed') await held.update({ ...ended, state: 'failed', message: 'Failed.', problem: { slug: end.slug, detail: end.detail } }, { transaction })
+      if (end.state === 'cancelled' || held.cancelAt)
+        await held.update({ ...ended, state: 'cancelled', message: 'Cancelled.' }, { transaction })
+      else if (end.state === 'failed')
+        await held.update(
+          { ...ended, state: 'failed', message: 'Failed.', problem: { slug: end.slug, detail: end.detail } },
+          { transaction },
+        )
       else {
         const result = await storeOutput(job, end.output, transaction)
-        await held.update({ ...ended, state: 'done', progress: 1, message: `Made version ${result.version} of ${result.model ?? result.loss}.`, result }, { transaction })
+        await held.update(
+          {
+            ...ended,
+            state: 'done',
+            progress: 1,
+            message: `Made version ${result.version} of ${result.model ?? result.loss}.`,
+            result,
+          },
+          { transaction },
+        )
       }
     })
   }
@@ -240,7 +279,12 @@ function runJob({ database, log, niceness, readInput, storeOutput }: Omit<JobQue
       } catch (error) {
         if (error instanceof Refusal) return store({ state: 'failed', slug: error.kind.slug, detail: error.message })
         log.error({ err: error, jobId: job.id, attempt }, "a job's result could not be stored")
-        if (attempt === storeAttempts) return store({ state: 'failed', slug: 'internal', detail: 'The result could not be stored. This has been logged; start the job again.' })
+        if (attempt === storeAttempts)
+          return store({
+            state: 'failed',
+            slug: 'internal',
+            detail: 'The result could not be stored. This has been logged; start the job again.',
+          })
         await sleep(1_000)
       }
     }
@@ -265,6 +309,7 @@ function runJob({ database, log, niceness, readInput, storeOutput }: Omit<JobQue
 
 /** The large arrays of an input, which move to the thread instead of being copied. */
 function buffersOf(input: JobInput): ArrayBuffer[] {
-  const motions = input.kind === 'fit' ? [...input.training, ...input.heldOut, ...input.validation] : [...input.training, ...input.validation]
+  const motions =
+    input.kind === 'fit' ? [...input.training, ...input.heldOut, ...input.validation] : [...input.training, ...input.validation]
   return motions.flatMap(({ time, states, torque }) => [time.buffer, states.buffer, torque.buffer] as ArrayBuffer[])
 }

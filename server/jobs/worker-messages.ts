@@ -36,7 +36,12 @@ export type JobInput =
     }
 
 export type JobOutput =
-  | { readonly kind: 'fit'; readonly artefact: VersionArtefact; readonly metrics: StoredMetrics; readonly recommended: Version['recommended'] }
+  | {
+      readonly kind: 'fit'
+      readonly artefact: VersionArtefact
+      readonly metrics: StoredMetrics
+      readonly recommended: Version['recommended']
+    }
   | { readonly kind: 'meta_train'; readonly artefact: LossVersion; readonly validation: readonly StoredComparison[] }
 
 /** What a worker is started with. */

@@ -1,7 +1,14 @@
 import { setPriority } from 'node:os'
 import { parentPort, workerData } from 'node:worker_threads'
 import { Refusal } from '../../shared/contract/problems.ts'
-import { JobCancelled, type JobInput, type JobOutput, type JobReport, type WorkerMessage, type WorkerStart } from './worker-messages.ts'
+import {
+  JobCancelled,
+  type JobInput,
+  type JobOutput,
+  type JobReport,
+  type WorkerMessage,
+  type WorkerStart,
+} from './worker-messages.ts'
 
 const port = parentPort!
 const { input, niceness, cancel } = workerData.data as WorkerStart
@@ -35,8 +42,15 @@ try {
   if (error instanceof JobCancelled) send({ kind: 'cancelled' })
   else if (error instanceof Refusal) send({ kind: 'failed', slug: error.kind.slug, detail: error.message })
   // What the training code refuses by RangeError or ShapeError is about the recordings it was given.
-  else if (error instanceof RangeError) send({ kind: 'failed', slug: 'recordings-unsuitable', detail: error.message, stack: error.stack })
-  else send({ kind: 'failed', slug: 'internal', detail: 'This is our mistake and has been logged. Start the job again.', stack: (error as Error).stack })
+  else if (error instanceof RangeError)
+    send({ kind: 'failed', slug: 'recordings-unsuitable', detail: error.message, stack: error.stack })
+  else
+    send({
+      kind: 'failed',
+      slug: 'internal',
+      detail: 'This is our mistake and has been logged. Start the job again.',
+      stack: (error as Error).stack,
+    })
 }
 // Not closed by itself while tfjs keeps handles of its own.
 port.close()

@@ -21,7 +21,8 @@ const MOST_FIELDS = 20
  */
 export async function readUploadForm(req: Request, fileField: string, mostFileBytes: number): Promise<UploadForm> {
   // What is announced as too large need not be read to its limit; fields and boundaries are small.
-  if (Number(req.headers['content-length'] ?? 0) > mostFileBytes + MOST_FIELDS * (FIELD_BYTES + 1_000)) throw tooLarge(mostFileBytes)
+  if (Number(req.headers['content-length'] ?? 0) > mostFileBytes + MOST_FIELDS * (FIELD_BYTES + 1_000))
+    throw tooLarge(mostFileBytes)
   const form = openForm(req, mostFileBytes)
   const fields: Record<string, string> = {}
   let late: string | undefined
@@ -49,7 +50,9 @@ export async function readUploadForm(req: Request, fileField: string, mostFileBy
       stream.on('error', () => undefined)
       if (opened || name !== fileField) {
         stream.resume()
-        const detail = opened ? 'There is more than one file. Send one file a request.' : `The file is in the part "${shortened(name)}". Name its part "${fileField}".`
+        const detail = opened
+          ? 'There is more than one file. Send one file a request.'
+          : `The file is in the part "${shortened(name)}". Name its part "${fileField}".`
         if (opened) late ??= detail
         else refuse(detail)
         return
@@ -101,11 +104,22 @@ function openForm(req: Request, mostFileBytes: number): busboy.Busboy {
   try {
     return busboy({
       headers: req.headers,
-      limits: { fieldNameSize: 100, fieldSize: FIELD_BYTES, fields: MOST_FIELDS, fileSize: mostFileBytes, files: 2, headerPairs: 50 },
+      limits: {
+        fieldNameSize: 100,
+        fieldSize: FIELD_BYTES,
+        fields: MOST_FIELDS,
+        fileSize: mostFileBytes,
+        files: 2,
+        headerPairs: 50,
+      },
       defParamCharset: 'utf8',
     })
   } catch (error) {
-    throw new Refusal('malformed-body', `The form cannot be read: ${(error as Error).message}. Send multipart/form-data with its boundary.`, { cause: error })
+    throw new Refusal(
+      'malformed-body',
+      `The form cannot be read: ${(error as Error).message}. Send multipart/form-data with its boundary.`,
+      { cause: error },
+    )
   }
 }
 
@@ -115,11 +129,18 @@ function letRunDry(req: Request, form: busboy.Busboy): void {
 }
 
 function tooLarge(mostBytes: number): Refusal {
-  return new Refusal('body-too-large', `The file is larger than ${mostBytes / 1e6} MB, which is the most a recording may have. Cut the log into several.`)
+  return new Refusal(
+    'body-too-large',
+    `The file is larger than ${mostBytes / 1e6} MB, which is the most a recording may have. Cut the log into several.`,
+  )
 }
 
 function incomplete(cause: unknown): Refusal {
-  return new Refusal('upload-incomplete', 'The upload broke off before the form was whole, and nothing was stored. Send it again.', { cause })
+  return new Refusal(
+    'upload-incomplete',
+    'The upload broke off before the form was whole, and nothing was stored. Send it again.',
+    { cause },
+  )
 }
 
 function shortened(text: string): string {

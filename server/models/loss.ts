@@ -1,5 +1,12 @@
 import { DataTypes } from 'sequelize'
-import type { CreationOptional, InferAttributes, InferCreationAttributes, Model as SequelizeModel, NonAttribute, Sequelize } from 'sequelize'
+import type {
+  CreationOptional,
+  InferAttributes,
+  InferCreationAttributes,
+  Model as SequelizeModel,
+  NonAttribute,
+  Sequelize,
+} from 'sequelize'
 import type { LearnedLossKind } from '../../shared/dynamics/loss-version.ts'
 import type { Model } from './model.ts'
 

@@ -1,5 +1,12 @@
 import { DataTypes } from 'sequelize'
-import type { CreationOptional, InferAttributes, InferCreationAttributes, Model as SequelizeModel, NonAttribute, Sequelize } from 'sequelize'
+import type {
+  CreationOptional,
+  InferAttributes,
+  InferCreationAttributes,
+  Model as SequelizeModel,
+  NonAttribute,
+  Sequelize,
+} from 'sequelize'
 import type { Arm } from './arm.ts'
 
 /** A model of an arm. What is live, and how often that changed, is repeated here from releases, under the row's lock. */

@@ -11,23 +11,35 @@ type Schemas = components['schemas']
 export function armRoutes({ arms }: Services, contract: Contract): Router {
   const router = Router()
 
-  router.get('/v1/arms', contract.handle('listArms', async ({ caller, query }, res, req) => {
-    const page = await arms.list(caller, { cursor: query.cursor, limit: query.limit!, archived: query.archived })
-    answerPage(req, res, { ...page, items: page.items.map(armToWire) })
-  }))
+  router.get(
+    '/v1/arms',
+    contract.handle('listArms', async ({ caller, query }, res, req) => {
+      const page = await arms.list(caller, { cursor: query.cursor, limit: query.limit!, archived: query.archived })
+      answerPage(req, res, { ...page, items: page.items.map(armToWire) })
+    }),
+  )
 
-  router.post('/v1/arms', contract.handle('createArm', async ({ caller, body, requestId }, res) => {
-    const arm = await arms.create(caller, armFromWire(body), requestId)
-    res.status(201).location(`/v1/arms/${arm.name}`).json(armToWire(arm))
-  }))
+  router.post(
+    '/v1/arms',
+    contract.handle('createArm', async ({ caller, body, requestId }, res) => {
+      const arm = await arms.create(caller, armFromWire(body), requestId)
+      res.status(201).location(`/v1/arms/${arm.name}`).json(armToWire(arm))
+    }),
+  )
 
-  router.get('/v1/arms/:arm', contract.handle('getArm', async ({ caller, path }, res) => {
-    res.json(armToWire(await arms.get(caller, path.arm)))
-  }))
+  router.get(
+    '/v1/arms/:arm',
+    contract.handle('getArm', async ({ caller, path }, res) => {
+      res.json(armToWire(await arms.get(caller, path.arm)))
+    }),
+  )
 
-  router.post('/v1/arms/:arm/archive', contract.handle('archiveArm', async ({ caller, path, body, requestId }, res) => {
-    res.json(armToWire(await arms.archive(caller, path.arm, body.reason, requestId)))
-  }))
+  router.post(
+    '/v1/arms/:arm/archive',
+    contract.handle('archiveArm', async ({ caller, path, body, requestId }, res) => {
+      res.json(armToWire(await arms.archive(caller, path.arm, body.reason, requestId)))
+    }),
+  )
 
   return router
 }
@@ -73,7 +85,11 @@ function armToWire(arm: ArmRecord): Schemas['Arm'] {
     })),
     joints_fingerprint: arm.jointsFingerprint,
     gravity: [...arm.gravity],
-    torque: { side: arm.torque.side, positive_accelerates: arm.torque.positiveAccelerates, controller_adds: arm.torque.controllerAdds },
+    torque: {
+      side: arm.torque.side,
+      positive_accelerates: arm.torque.positiveAccelerates,
+      controller_adds: arm.torque.controllerAdds,
+    },
     fallback: arm.fallback,
     horizon: arm.horizon,
     firmware: arm.firmware,

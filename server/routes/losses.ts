@@ -14,39 +14,65 @@ type Schemas = components['schemas']
 export function lossRoutes({ losses }: Services, contract: Contract): Router {
   const router = Router()
 
-  router.get('/v1/losses', contract.handle('listLosses', async ({ caller, query }, res, req) => {
-    const page = await losses.list(caller, { cursor: query.cursor, limit: query.limit!, model: query.model })
-    answerPage(req, res, { ...page, items: page.items.map(lossRecordToWire) })
-  }))
+  router.get(
+    '/v1/losses',
+    contract.handle('listLosses', async ({ caller, query }, res, req) => {
+      const page = await losses.list(caller, { cursor: query.cursor, limit: query.limit!, model: query.model })
+      answerPage(req, res, { ...page, items: page.items.map(lossRecordToWire) })
+    }),
+  )
 
-  router.post('/v1/losses', contract.handle('createLoss', async ({ caller, body, requestId }, res) => {
-    const loss = await losses.create(caller, body, requestId)
-    res.status(201).location(`/v1/losses/${loss.name}`).json(lossRecordToWire(loss))
-  }))
+  router.post(
+    '/v1/losses',
+    contract.handle('createLoss', async ({ caller, body, requestId }, res) => {
+      const loss = await losses.create(caller, body, requestId)
+      res.status(201).location(`/v1/losses/${loss.name}`).json(lossRecordToWire(loss))
+    }),
+  )
 
-  router.get('/v1/losses/:loss', contract.handle('getLoss', async ({ caller, path }, res) => {
-    res.json(lossRecordToWire(await losses.get(caller, path.loss)))
-  }))
+  router.get(
+    '/v1/losses/:loss',
+    contract.handle('getLoss', async ({ caller, path }, res) => {
+      res.json(lossRecordToWire(await losses.get(caller, path.loss)))
+    }),
+  )
 
-  router.get('/v1/losses/:loss/versions', contract.handle('listLossVersions', async ({ caller, path, query }, res, req) => {
-    const page = await losses.versions(caller, path.loss, { cursor: query.cursor, limit: query.limit! })
-    answerPage(req, res, { ...page, items: page.items.map(lossVersionToWire) })
-  }))
+  router.get(
+    '/v1/losses/:loss/versions',
+    contract.handle('listLossVersions', async ({ caller, path, query }, res, req) => {
+      const page = await losses.versions(caller, path.loss, { cursor: query.cursor, limit: query.limit! })
+      answerPage(req, res, { ...page, items: page.items.map(lossVersionToWire) })
+    }),
+  )
 
-  router.post('/v1/losses/:loss/versions', contract.handle('importLossVersion', async ({ caller, path, body, requestId }, res) => {
-    const { checksum, validation = [], ...loss } = body
-    const version = await losses.import(caller, path.loss, { loss, checksum, validation: validation.map(comparisonOf) }, requestId)
-    res.status(201).location(`/v1/losses/${version.loss}/versions/${version.version}`).json(lossVersionToWire(version))
-  }))
+  router.post(
+    '/v1/losses/:loss/versions',
+    contract.handle('importLossVersion', async ({ caller, path, body, requestId }, res) => {
+      const { checksum, validation = [], ...loss } = body
+      const version = await losses.import(
+        caller,
+        path.loss,
+        { loss, checksum, validation: validation.map(comparisonOf) },
+        requestId,
+      )
+      res.status(201).location(`/v1/losses/${version.loss}/versions/${version.version}`).json(lossVersionToWire(version))
+    }),
+  )
 
-  router.get('/v1/losses/:loss/versions/:version', contract.handle('getLossVersion', async ({ caller, path }, res) => {
-    res.json(lossVersionToWire(await losses.version(caller, path.loss, path.version)))
-  }))
+  router.get(
+    '/v1/losses/:loss/versions/:version',
+    contract.handle('getLossVersion', async ({ caller, path }, res) => {
+      res.json(lossVersionToWire(await losses.version(caller, path.loss, path.version)))
+    }),
+  )
 
-  router.get('/v1/losses/:loss/versions/:version/snapshot', contract.handle('getLossSnapshot', async ({ caller, path }, res, req) => {
-    const snapshot = await losses.snapshot(caller, path.loss, path.version)
-    answerUnlessKnown(req, res, snapshot.checksum, () => lossSnapshotToWire(snapshot))
-  }))
+  router.get(
+    '/v1/losses/:loss/versions/:version/snapshot',
+    contract.handle('getLossSnapshot', async ({ caller, path }, res, req) => {
+      const snapshot = await losses.snapshot(caller, path.loss, path.version)
+      answerUnlessKnown(req, res, snapshot.checksum, () => lossSnapshotToWire(snapshot))
+    }),
+  )
 
   return router
 }

@@ -13,56 +13,89 @@ const SNAPSHOT_BYTES = 16 * 1024 * 1024
 export function modelRoutes({ models, versions }: Services, contract: Contract): Router {
   const router = Router()
 
-  router.get('/v1/models', contract.handle('listModels', async ({ caller, query }, res, req) => {
-    const page = await models.list(caller, { cursor: query.cursor, limit: query.limit!, archived: query.archived, arm: query.arm })
-    answerPage(req, res, { ...page, items: page.items.map(modelToWire) })
-  }))
+  router.get(
+    '/v1/models',
+    contract.handle('listModels', async ({ caller, query }, res, req) => {
+      const page = await models.list(caller, {
+        cursor: query.cursor,
+        limit: query.limit!,
+        archived: query.archived,
+        arm: query.arm,
+      })
+      answerPage(req, res, { ...page, items: page.items.map(modelToWire) })
+    }),
+  )
 
-  router.post('/v1/models', contract.handle('createModel', async ({ caller, body, requestId }, res) => {
-    const model = await models.create(caller, body, requestId)
-    res.status(201).location(`/v1/models/${model.name}`).json(modelToWire(model))
-  }))
+  router.post(
+    '/v1/models',
+    contract.handle('createModel', async ({ caller, body, requestId }, res) => {
+      const model = await models.create(caller, body, requestId)
+      res.status(201).location(`/v1/models/${model.name}`).json(modelToWire(model))
+    }),
+  )
 
-  router.get('/v1/models/:model', contract.handle('getModel', async ({ caller, path }, res) => {
-    const model = await models.get(caller, path.model)
-    res.setHeader('ETag', modelEtag(model))
-    res.json(modelToWire(model))
-  }))
+  router.get(
+    '/v1/models/:model',
+    contract.handle('getModel', async ({ caller, path }, res) => {
+      const model = await models.get(caller, path.model)
+      res.setHeader('ETag', modelEtag(model))
+      res.json(modelToWire(model))
+    }),
+  )
 
-  router.post('/v1/models/:model/archive', contract.handle('archiveModel', async ({ caller, path, body, requestId }, res) => {
-    res.json(modelToWire(await models.archive(caller, path.model, body.reason, requestId)))
-  }))
+  router.post(
+    '/v1/models/:model/archive',
+    contract.handle('archiveModel', async ({ caller, path, body, requestId }, res) => {
+      res.json(modelToWire(await models.archive(caller, path.model, body.reason, requestId)))
+    }),
+  )
 
-  router.get('/v1/models/:model/versions', contract.handle('listVersions', async ({ caller, path, query }, res, req) => {
-    const page = await versions.list(caller, path.model, { cursor: query.cursor, limit: query.limit! })
-    answerPage(req, res, { ...page, items: page.items.map(versionToJson) })
-  }))
+  router.get(
+    '/v1/models/:model/versions',
+    contract.handle('listVersions', async ({ caller, path, query }, res, req) => {
+      const page = await versions.list(caller, path.model, { cursor: query.cursor, limit: query.limit! })
+      answerPage(req, res, { ...page, items: page.items.map(versionToJson) })
+    }),
+  )
 
-  router.post('/v1/models/:model/versions', contract.handle('importVersion', async ({ caller, path, body, requestId }, res) => {
-    const version = await versions.import(
-      caller,
-      path.model,
-      {
-        jointNames: body.joint_names,
-        unit: body.unit,
-        description: body.description,
-        parameters: body.parameters,
-        checksum: body.checksum,
-        metrics: metricsFromWire(body.metrics),
+  router.post(
+    '/v1/models/:model/versions',
+    contract.handle(
+      'importVersion',
+      async ({ caller, path, body, requestId }, res) => {
+        const version = await versions.import(
+          caller,
+          path.model,
+          {
+            jointNames: body.joint_names,
+            unit: body.unit,
+            description: body.description,
+            parameters: body.parameters,
+            checksum: body.checksum,
+            metrics: metricsFromWire(body.metrics),
+          },
+          requestId,
+        )
+        res.status(201).location(`/v1/models/${version.model}/versions/${version.version}`).json(versionToJson(version))
       },
-      requestId,
-    )
-    res.status(201).location(`/v1/models/${version.model}/versions/${version.version}`).json(versionToJson(version))
-  }, { bodyBytes: SNAPSHOT_BYTES }))
+      { bodyBytes: SNAPSHOT_BYTES },
+    ),
+  )
 
-  router.get('/v1/models/:model/versions/:version', contract.handle('getVersion', async ({ caller, path }, res) => {
-    res.json(versionToJson(await versions.get(caller, path.model, path.version)))
-  }))
+  router.get(
+    '/v1/models/:model/versions/:version',
+    contract.handle('getVersion', async ({ caller, path }, res) => {
+      res.json(versionToJson(await versions.get(caller, path.model, path.version)))
+    }),
+  )
 
-  router.get('/v1/models/:model/versions/:version/snapshot', contract.handle('getVersionSnapshot', async ({ caller, path }, res, req) => {
-    const snapshot = await versions.snapshot(caller, path.model, path.version)
-    answerUnlessKnown(req, res, snapshot.checksum, () => snapshotToJson(snapshot))
-  }))
+  router.get(
+    '/v1/models/:model/versions/:version/snapshot',
+    contract.handle('getVersionSnapshot', async ({ caller, path }, res, req) => {
+      const snapshot = await versions.snapshot(caller, path.model, path.version)
+      answerUnlessKnown(req, res, snapshot.checksum, () => snapshotToJson(snapshot))
+    }),
+  )
 
   return router
 }

@@ -17,26 +17,43 @@ const MOST_FILE_BYTES = 200_000_000
 export function recordingRoutes({ recordings }: Services, contract: Contract): Router {
   const router = Router()
 
-  router.get('/v1/recordings', contract.handle('listRecordings', async ({ caller, query }, res, req) => {
-    const page = await recordings.list(caller, { cursor: query.cursor, limit: query.limit!, arm: query.arm, use: query.use })
-    answerPage(req, res, { ...page, items: page.items.map(recordingToWire) })
-  }))
+  router.get(
+    '/v1/recordings',
+    contract.handle('listRecordings', async ({ caller, query }, res, req) => {
+      const page = await recordings.list(caller, { cursor: query.cursor, limit: query.limit!, arm: query.arm, use: query.use })
+      answerPage(req, res, { ...page, items: page.items.map(recordingToWire) })
+    }),
+  )
 
-  router.post('/v1/recordings', contract.handle('createRecording', async ({ caller, requestId }, res, req) => {
-    const { fields, fileName, file } = await readUploadForm(req, 'file', MOST_FILE_BYTES)
-    const { recording, stored } = await recordings.upload(caller, fieldsFromWire(contract.document, fields, fileName), file, requestId)
-    if (stored) res.status(201).location(`/v1/recordings/${recording.id}`)
-    res.json(recordingToWire(recording))
-  }))
+  router.post(
+    '/v1/recordings',
+    contract.handle('createRecording', async ({ caller, requestId }, res, req) => {
+      const { fields, fileName, file } = await readUploadForm(req, 'file', MOST_FILE_BYTES)
+      const { recording, stored } = await recordings.upload(
+        caller,
+        fieldsFromWire(contract.document, fields, fileName),
+        file,
+        requestId,
+      )
+      if (stored) res.status(201).location(`/v1/recordings/${recording.id}`)
+      res.json(recordingToWire(recording))
+    }),
+  )
 
-  router.get('/v1/recordings/:recording', contract.handle('getRecording', async ({ caller, path }, res) => {
-    res.json(recordingToWire(await recordings.get(caller, path.recording)))
-  }))
+  router.get(
+    '/v1/recordings/:recording',
+    contract.handle('getRecording', async ({ caller, path }, res) => {
+      res.json(recordingToWire(await recordings.get(caller, path.recording)))
+    }),
+  )
 
-  router.delete('/v1/recordings/:recording', contract.handle('deleteRecording', async ({ caller, path, query, requestId }, res) => {
-    await recordings.delete(caller, path.recording, query.reason, requestId)
-    res.status(204).end()
-  }))
+  router.delete(
+    '/v1/recordings/:recording',
+    contract.handle('deleteRecording', async ({ caller, path, query, requestId }, res) => {
+      await recordings.delete(caller, path.recording, query.reason, requestId)
+      res.status(204).end()
+    }),
+  )
 
   return router
 }
@@ -46,12 +63,21 @@ const knownFields = ['arm', 'use', 'name', 'context']
 /** @throws {Refusal} invalid-request: a field is missing, unknown or not as the contract says */
 function fieldsFromWire(document: ContractDocument, fields: Readonly<Record<string, string>>, fileName: string): NewRecording {
   const unknown = Object.keys(fields).find((name) => !knownFields.includes(name))
-  if (unknown !== undefined) throw new Refusal('invalid-request', `The field "${unknown}" is not known here. Known: ${knownFields.join(', ')}, then the file.`)
+  if (unknown !== undefined)
+    throw new Refusal(
+      'invalid-request',
+      `The field "${unknown}" is not known here. Known: ${knownFields.join(', ')}, then the file.`,
+    )
   const checked = { ...fields, file: '' }
   refuseFaults('', document.bodyCheck('createRecording', 'multipart/form-data')(checked).map(faultOf))
   const { arm, use, name, context } = checked as unknown as Schemas['NewRecording']
   const isNamed = name !== undefined && name.trim() !== ''
-  return { arm, use, name: (isNamed ? name : fileName || 'recording.csv').slice(0, 200), context: contextFromWire(document, context) }
+  return {
+    arm,
+    use,
+    name: (isNamed ? name : fileName || 'recording.csv').slice(0, 200),
+    context: contextFromWire(document, context),
+  }
 }
 
 function contextFromWire(document: ContractDocument, text: string | undefined): RecordingContext {
@@ -60,11 +86,17 @@ function contextFromWire(document: ContractDocument, text: string | undefined): 
   try {
     context = JSON.parse(text) as Schemas['RecordingContext']
   } catch (error) {
-    throw new Refusal('invalid-request', `context is not JSON: ${(error as Error).message}.`, { errors: [{ pointer: '/context', detail: 'Not JSON.' }], cause: error })
+    throw new Refusal('invalid-request', `context is not JSON: ${(error as Error).message}.`, {
+      errors: [{ pointer: '/context', detail: 'Not JSON.' }],
+      cause: error,
+    })
   }
   refuseFaults('/context', document.schemaCheck('RecordingContext')(context).map(faultOf))
   const { payload, ...rest } = context
-  return { ...rest, ...(payload && { payload: { mass: payload.mass, ...(payload.center_of_mass && { centerOfMass: payload.center_of_mass }) } }) }
+  return {
+    ...rest,
+    ...(payload && { payload: { mass: payload.mass, ...(payload.center_of_mass && { centerOfMass: payload.center_of_mass }) } }),
+  }
 }
 
 function refuseFaults(prefix: string, given: ReturnType<typeof faultOf>[]): void {

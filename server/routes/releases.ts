@@ -8,19 +8,28 @@ import type { Released, ReleaseRecord } from '../services/releases.ts'
 export function releaseRoutes({ releases }: Services, contract: Contract): Router {
   const router = Router()
 
-  router.get('/v1/models/:model/releases', contract.handle('listReleases', async ({ caller, path, query }, res, req) => {
-    const { etag, ...page } = await releases.list(caller, path.model, { cursor: query.cursor, limit: query.limit! })
-    res.setHeader('ETag', etag)
-    answerPage(req, res, { ...page, items: page.items.map(releaseToWire) })
-  }))
+  router.get(
+    '/v1/models/:model/releases',
+    contract.handle('listReleases', async ({ caller, path, query }, res, req) => {
+      const { etag, ...page } = await releases.list(caller, path.model, { cursor: query.cursor, limit: query.limit! })
+      res.setHeader('ETag', etag)
+      answerPage(req, res, { ...page, items: page.items.map(releaseToWire) })
+    }),
+  )
 
-  router.post('/v1/models/:model/releases', contract.handle('releaseVersion', async ({ caller, path, header, body, requestId }, res) => {
-    answer(res, await releases.release(caller, path.model, { ...body, ifMatch: header['if-match'] }, requestId))
-  }))
+  router.post(
+    '/v1/models/:model/releases',
+    contract.handle('releaseVersion', async ({ caller, path, header, body, requestId }, res) => {
+      answer(res, await releases.release(caller, path.model, { ...body, ifMatch: header['if-match'] }, requestId))
+    }),
+  )
 
-  router.post('/v1/models/:model/rollback', contract.handle('rollBack', async ({ caller, path, header, body, requestId }, res) => {
-    answer(res, await releases.rollBack(caller, path.model, { ...body, ifMatch: header['if-match'] }, requestId))
-  }))
+  router.post(
+    '/v1/models/:model/rollback',
+    contract.handle('rollBack', async ({ caller, path, header, body, requestId }, res) => {
+      answer(res, await releases.rollBack(caller, path.model, { ...body, ifMatch: header['if-match'] }, requestId))
+    }),
+  )
 
   return router
 }
@@ -30,6 +39,14 @@ function answer(res: Response, { release, etag }: Released): void {
   res.json(releaseToWire(release))
 }
 
-function releaseToWire({ number, kind, version, previousVersion, reason, at, by }: ReleaseRecord): components['schemas']['Release'] {
+function releaseToWire({
+  number,
+  kind,
+  version,
+  previousVersion,
+  reason,
+  at,
+  by,
+}: ReleaseRecord): components['schemas']['Release'] {
   return { number, kind, version, previous_version: previousVersion, reason, at: at.toISOString(), by }
 }

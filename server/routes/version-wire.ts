@@ -29,7 +29,14 @@ export function versionToJson(version: VersionRecord): Schemas['Version'] {
   }
 }
 
-export function snapshotToJson({ model, version, joints, artefact, checksum, metrics }: VersionWithArtefact): Schemas['VersionSnapshot'] {
+export function snapshotToJson({
+  model,
+  version,
+  joints,
+  artefact,
+  checksum,
+  metrics,
+}: VersionWithArtefact): Schemas['VersionSnapshot'] {
   return {
     format: 'heftwise-version-1',
     model,
@@ -45,7 +52,8 @@ export function snapshotToJson({ model, version, joints, artefact, checksum, met
 
 export function metricsFromWire(metrics: Schemas['VersionMetrics'] | null | undefined): StoredMetrics | null {
   if (!metrics) return null
-  const jointMetrics = (list: Schemas['JointMetric'][]): StoredJointMetric[] => list.map(({ joint, rmse, unit }) => ({ joint, rmse, unit }))
+  const jointMetrics = (list: Schemas['JointMetric'][]): StoredJointMetric[] =>
+    list.map(({ joint, rmse, unit }) => ({ joint, rmse, unit }))
   return {
     error: metrics.error,
     perJoint: jointMetrics(metrics.per_joint),

@@ -72,13 +72,21 @@ export function createArmService({ database, clock, audit, changeFeed }: Depende
           )
           const record = recordOf(arm)
           await audit.record(transaction, {
-            by: caller, action: 'arm.create', subject: { kind: 'arm', id: arm.id, name: arm.name }, after: record, requestId,
+            by: caller,
+            action: 'arm.create',
+            subject: { kind: 'arm', id: arm.id, name: arm.name },
+            after: record,
+            requestId,
           })
           return record
         })
       } catch (error) {
         if (duplicateKey(error) !== 'arms_name') throw error
-        throw new Refusal('name-taken', `There is an arm called "${given.name}" already. Choose another name; archived arms keep theirs.`, { cause: error })
+        throw new Refusal(
+          'name-taken',
+          `There is an arm called "${given.name}" already. Choose another name; archived arms keep theirs.`,
+          { cause: error },
+        )
       }
     },
 
@@ -108,7 +116,11 @@ export function createArmService({ database, clock, audit, changeFeed }: Depende
         if (arm.archivedAt) return recordOf(arm)
         await arm.update({ archivedAt: clock.now() }, { transaction })
         await audit.record(transaction, {
-          by: caller, action: 'arm.archive', subject: { kind: 'arm', id: arm.id, name: arm.name }, reason, requestId,
+          by: caller,
+          action: 'arm.archive',
+          subject: { kind: 'arm', id: arm.id, name: arm.name },
+          reason,
+          requestId,
         })
         await changeFeed.announce(transaction, { kind: 'archive', teamId: caller.teamId, subject: arm.id })
         return recordOf(arm)
@@ -119,21 +131,36 @@ export function createArmService({ database, clock, audit, changeFeed }: Depende
 
 /** The team's arm, locked when a transaction is given. @throws {Refusal} not-found */
 export async function findArm(database: Database, teamId: string, name: string, transaction?: Transaction): Promise<Arm> {
-  const arm = await database.models.Arm.findOne({ where: { teamId, name }, ...(transaction && { transaction, lock: transaction.LOCK.UPDATE }) })
+  const arm = await database.models.Arm.findOne({
+    where: { teamId, name },
+    ...(transaction && { transaction, lock: transaction.LOCK.UPDATE }),
+  })
   if (!arm) throw new Refusal('not-found', `There is no arm called "${name}" in your team. GET /v1/arms lists them.`)
   return arm
 }
 
 /** @throws {Refusal} archived */
 export function requireArmInUse(arm: Arm): void {
-  if (arm.archivedAt) throw new Refusal('archived', `Arm "${arm.name}" has been archived; nothing new is built on it. Describe a new arm.`)
+  if (arm.archivedAt)
+    throw new Refusal('archived', `Arm "${arm.name}" has been archived; nothing new is built on it. Describe a new arm.`)
 }
 
 function recordOf(arm: Arm): ArmRecord {
   const { id, name, description, joints, gravity, torque, fallback, horizon, firmware, archivedAt, createdAt, createdBy } = arm
   return {
-    id, name, description, joints, jointsFingerprint: arm.jointsFingerprint, gravity, torque, fallback, horizon, firmware,
-    archivedAt: archivedAt ?? null, createdAt, createdBy,
+    id,
+    name,
+    description,
+    joints,
+    jointsFingerprint: arm.jointsFingerprint,
+    gravity,
+    torque,
+    fallback,
+    horizon,
+    firmware,
+    archivedAt: archivedAt ?? null,
+    createdAt,
+    createdBy,
   }
 }
 
@@ -151,12 +178,17 @@ export function checkArm({ joints, gravity, torque }: Pick<NewArm, 'joints' | 'g
       fault(`${at}/name`, `Joint ${index} is called ${JSON.stringify(joint.name)}: leave out line ends and blanks at the ends.`)
     }
     const earlier = first.get(joint.name)
-    if (earlier !== undefined) fault(`${at}/name`, `Joints ${earlier} and ${index} are both called "${joint.name}". Give every joint its own name.`)
+    if (earlier !== undefined)
+      fault(`${at}/name`, `Joints ${earlier} and ${index} are both called "${joint.name}". Give every joint its own name.`)
     else first.set(joint.name, index)
     checkPositionLimits(joint, at, fault)
   })
   const size = Math.hypot(...gravity)
-  if (size > MOST_GRAVITY) fault('/gravity', `Gravity has ${size.toPrecision(4)} m/s², expected at most ${MOST_GRAVITY}: (0, 0, -9.81) for an arm on the floor.`)
+  if (size > MOST_GRAVITY)
+    fault(
+      '/gravity',
+      `Gravity has ${size.toPrecision(4)} m/s², expected at most ${MOST_GRAVITY}: (0, 0, -9.81) for an arm on the floor.`,
+    )
   if (faults.length > 0) {
     const more = faults.length > 1 ? ` And ${faults.length - 1} more; each is in "errors".` : ''
     throw new Refusal('invalid-request', faults[0].detail + more, { errors: faults })
@@ -164,7 +196,8 @@ export function checkArm({ joints, gravity, torque }: Pick<NewArm, 'joints' | 'g
   if (torque.controllerAdds.length > 0) {
     throw new Refusal(
       'rigid-body-required',
-      `controller_adds names ${torque.controllerAdds.join(', ')}: taking these out of a predicted torque needs the arm's rigid-body description, ` +
+      `controller_adds names ${torque.controllerAdds.join(', ')}: ` +
+      `taking these out of a predicted torque needs the arm's rigid-body description, ` +
         'which an arm cannot have yet. Send [] and have the controller add nothing to the torque it gets.',
       { errors: [{ pointer: '/torque/controller_adds', detail: 'Must be empty.' }] },
     )
@@ -178,6 +211,14 @@ function checkPositionLimits(joint: StoredJoint, at: string, fault: (pointer: st
     fault(`${at}/${missing}`, `Joint "${name}" has ${there} but no ${missing}. Give both, or neither.`)
   }
   if (lower === undefined || upper === undefined) return
-  if (type === 'continuous') fault(`${at}/position_lower`, `Joint "${name}" is continuous and so has no position limits. Leave them out, or call it revolute.`)
-  else if (!(lower < upper)) fault(`${at}/position_lower`, `Joint "${name}" has position limits from ${lower} to ${upper}: the lower must be less than the upper.`)
+  if (type === 'continuous')
+    fault(
+      `${at}/position_lower`,
+      `Joint "${name}" is continuous and so has no position limits. Leave them out, or call it revolute.`,
+    )
+  else if (!(lower < upper))
+    fault(
+      `${at}/position_lower`,
+      `Joint "${name}" has position limits from ${lower} to ${upper}: the lower must be less than the upper.`,
+    )
 }

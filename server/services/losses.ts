@@ -1,7 +1,12 @@
 import { Op, type Transaction } from 'sequelize'
 import { Refusal } from '../../shared/contract/problems.ts'
 import { lossFromWire, type WireLoss } from '../../shared/contract/snapshots.ts'
-import { decodeLossVersion, encodeLossVersion, type LearnedLossKind, type LossVersion as LossArtefact } from '../../shared/dynamics/loss-version.ts'
+import {
+  decodeLossVersion,
+  encodeLossVersion,
+  type LearnedLossKind,
+  type LossVersion as LossArtefact,
+} from '../../shared/dynamics/loss-version.ts'
 import { duplicateKey } from '../database/connection.ts'
 import { uuid7 } from '../database/uuid7.ts'
 import type { Dependencies } from '../dependencies.ts'
@@ -55,7 +60,11 @@ export interface NewLossVersion {
 }
 
 export interface LossService {
-  create(caller: Caller, given: { name: string; model: string; kind: LearnedLossKind | 'mse'; description?: string }, requestId?: string): Promise<LossRecord>
+  create(
+    caller: Caller,
+    given: { name: string; model: string; kind: LearnedLossKind | 'mse'; description?: string },
+    requestId?: string,
+  ): Promise<LossRecord>
   get(caller: Caller, name: string): Promise<LossRecord>
   list(caller: Caller, page: PageRequest & { model?: string }): Promise<Page<LossRecord>>
   versions(caller: Caller, name: string, page: PageRequest): Promise<Page<LossVersionRecord>>
@@ -68,7 +77,13 @@ export interface LossService {
   ): Promise<LossVersionRecord>
   snapshot(caller: Caller, name: string, version: number): Promise<LossWithArtefact>
   /** Appends a loss version in the transaction of what made it. The loss's row must be locked in it. */
-  add(transaction: Transaction, by: Caller | 'system', loss: LossWithModel, given: NewLossVersion, requestId?: string): Promise<LossVersionRecord>
+  add(
+    transaction: Transaction,
+    by: Caller | 'system',
+    loss: LossWithModel,
+    given: NewLossVersion,
+    requestId?: string,
+  ): Promise<LossVersionRecord>
   /** The team's loss, locked when a transaction is given. @throws {Refusal} not-found */
   find(teamId: string, name: string, transaction?: Transaction): Promise<LossWithModel>
 }
@@ -139,9 +154,14 @@ export function createLossService({ database, clock, audit, changeFeed }: Depend
       requireAction(caller, 'build')
       const { kind } = given
       if (kind === 'mse') {
-        throw new Refusal('setting-refused', 'mse has nothing to learn, so it needs no loss: an adaptation names it as "loss": "mse". Choose structured, state_dependent or unstructured.', {
-          errors: [{ pointer: '/kind', detail: 'mse is not learned.' }],
-        })
+        throw new Refusal(
+          'setting-refused',
+          'mse has nothing to learn, so it needs no loss: an adaptation names it as "loss": "mse". ' +
+          'Choose structured, state_dependent or unstructured.',
+          {
+            errors: [{ pointer: '/kind', detail: 'mse is not learned.' }],
+          },
+        )
       }
       try {
         return await database.transaction(async (transaction) => {
@@ -161,7 +181,11 @@ export function createLossService({ database, clock, audit, changeFeed }: Depend
             { transaction },
           )
           await audit.record(transaction, {
-            by: caller, action: 'loss.create', subject: { kind: 'loss', id: loss.id, name: loss.name }, after: { name: loss.name, model: model.name, kind }, requestId,
+            by: caller,
+            action: 'loss.create',
+            subject: { kind: 'loss', id: loss.id, name: loss.name },
+            after: { name: loss.name, model: model.name, kind },
+            requestId,
           })
           return recordOf(Object.assign(loss, { model }))
         })
@@ -184,7 +208,12 @@ export function createLossService({ database, clock, audit, changeFeed }: Depend
         order: [['name', 'ASC']],
         limit: limit + 1,
       })
-      return pageOf(rows, limit, ({ name }) => [name], (row) => recordOf(row as LossWithModel))
+      return pageOf(
+        rows,
+        limit,
+        ({ name }) => [name],
+        (row) => recordOf(row as LossWithModel),
+      )
     },
 
     async versions(caller, name, { cursor, limit }) {
@@ -195,7 +224,12 @@ export function createLossService({ database, clock, audit, changeFeed }: Depend
         order: [['number', 'DESC']],
         limit: limit + 1,
       })
-      return pageOf(rows, limit, ({ number }) => [number], (row) => versionRecordOf(loss, row))
+      return pageOf(
+        rows,
+        limit,
+        ({ number }) => [number],
+        (row) => versionRecordOf(loss, row),
+      )
     },
 
     async version(caller, name, number) {
@@ -212,22 +246,37 @@ export function createLossService({ database, clock, audit, changeFeed }: Depend
         const loss = await find(caller.teamId, name, transaction)
         requireModelInUse(loss.model)
         if (wire.kind !== loss.kind) {
-          throw new Refusal('artefact-unreadable', `The snapshot holds a loss of kind ${wire.kind}; loss "${name}" is ${loss.kind}. Import it into a loss of its kind.`, {
-            errors: [{ pointer: '/kind', detail: `Expected ${loss.kind}.` }],
-          })
+          throw new Refusal(
+            'artefact-unreadable',
+            `The snapshot holds a loss of kind ${wire.kind}; loss "${name}" is ${loss.kind}. Import it into a loss of its kind.`,
+            {
+              errors: [{ pointer: '/kind', detail: `Expected ${loss.kind}.` }],
+            },
+          )
         }
         const artefact = readImport('parameters', () => lossFromWire(wire))
         requireChecksum(encodeLossVersion(artefact), checksum)
-        const base = await Version.findOne({ where: { modelId: loss.modelId, checksum: wire.base_checksum }, order: [['number', 'DESC']], transaction })
+        const base = await Version.findOne({
+          where: { modelId: loss.modelId, checksum: wire.base_checksum },
+          order: [['number', 'DESC']],
+          transaction,
+        })
         if (!base) {
           throw new Refusal(
             'loss-of-another-base',
-            `The loss was learned for the version with checksum ${wire.base_checksum.slice(0, 64)}, which model "${loss.model.name}" does not have. Import that version first.`,
+            `The loss was learned for the version with checksum ${wire.base_checksum.slice(0, 64)}, which model ` +
+            `"${loss.model.name}" does not have. Import that version first.`,
             { errors: [{ pointer: '/base_checksum', detail: 'No version of this model has that checksum.' }] },
           )
         }
         requireJoints(artefact, base)
-        return add(transaction, caller, loss, { artefact, base, origin: { kind: 'imported' }, validation, createdBy: callerLabel(caller) }, requestId)
+        return add(
+          transaction,
+          caller,
+          loss,
+          { artefact, base, origin: { kind: 'imported' }, validation, createdBy: callerLabel(caller) },
+          requestId,
+        )
       })
     },
 
@@ -244,9 +293,14 @@ export function createLossService({ database, clock, audit, changeFeed }: Depend
 function requireJoints(artefact: LossArtefact, base: Version): void {
   const joints = base.network.sizes.at(-1)
   if (artefact.description.joints === joints) return
-  throw new Refusal('artefact-unreadable', `The loss is for ${artefact.description.joints} joints, its base version for ${joints}. Export the snapshot again and send it unchanged.`, {
-    errors: [{ pointer: '/description/joints', detail: `Expected ${joints}.` }],
-  })
+  throw new Refusal(
+    'artefact-unreadable',
+    `The loss is for ${artefact.description.joints} joints, its base version for ${joints}. ` +
+    'Export the snapshot again and send it unchanged.',
+    {
+      errors: [{ pointer: '/description/joints', detail: `Expected ${joints}.` }],
+    },
+  )
 }
 
 function noVersion({ name }: Loss, number: number): Refusal {
@@ -260,5 +314,18 @@ function recordOf(loss: LossWithModel): LossRecord {
 
 function versionRecordOf({ name, kind }: Loss, row: LossVersion): LossVersionRecord {
   const { number, baseVersion, baseChecksum, scheme, updateSettings, checksum, origin, validation, createdAt, createdBy } = row
-  return { loss: name, version: number, kind, baseVersion, baseChecksum, scheme, update: updateSettings, checksum, origin, validation, createdAt, createdBy }
+  return {
+    loss: name,
+    version: number,
+    kind,
+    baseVersion,
+    baseChecksum,
+    scheme,
+    update: updateSettings,
+    checksum,
+    origin,
+    validation,
+    createdAt,
+    createdBy,
+  }
 }

@@ -7,7 +7,12 @@ import type { Model } from '../models/model.ts'
 export type ModelWithArm = Model & { arm: Arm }
 
 /** The team's model with its arm, its row locked when a transaction is given. @throws {Refusal} not-found */
-export async function findModel(database: Database, teamId: string, name: string, transaction?: Transaction): Promise<ModelWithArm> {
+export async function findModel(
+  database: Database,
+  teamId: string,
+  name: string,
+  transaction?: Transaction,
+): Promise<ModelWithArm> {
   const model = await database.models.Model.findOne({
     where: { teamId, name },
     include: [{ model: database.models.Arm, as: 'arm', required: true }],
@@ -19,5 +24,9 @@ export async function findModel(database: Database, teamId: string, name: string
 
 /** @throws {Refusal} archived */
 export function requireModelInUse(model: Model): void {
-  if (model.archivedAt) throw new Refusal('archived', `Model "${model.name}" has been archived: it still predicts, nothing new is made of it. Start another model.`)
+  if (model.archivedAt)
+    throw new Refusal(
+      'archived',
+      `Model "${model.name}" has been archived: it still predicts, nothing new is made of it. Start another model.`,
+    )
 }

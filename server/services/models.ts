@@ -63,7 +63,11 @@ export function createModelService({ database, clock, audit, changeFeed }: Depen
         })
       } catch (error) {
         if (duplicateKey(error) !== 'models_name') throw error
-        throw new Refusal('name-taken', `There is a model called "${given.name}" already. Choose another name; archived models keep theirs.`, { cause: error })
+        throw new Refusal(
+          'name-taken',
+          `There is a model called "${given.name}" already. Choose another name; archived models keep theirs.`,
+          { cause: error },
+        )
       }
     },
 
@@ -84,7 +88,12 @@ export function createModelService({ database, clock, audit, changeFeed }: Depen
         order: [['name', 'ASC']],
         limit: limit + 1,
       })
-      return pageOf(rows, limit, ({ name }) => [name], (row) => modelRecord(row as ModelWithArm))
+      return pageOf(
+        rows,
+        limit,
+        ({ name }) => [name],
+        (row) => modelRecord(row as ModelWithArm),
+      )
     },
 
     async archive(caller, name, reason, requestId) {
@@ -94,7 +103,11 @@ export function createModelService({ database, clock, audit, changeFeed }: Depen
         if (model.archivedAt) return modelRecord(model)
         await model.update({ archivedAt: clock.now() }, { transaction })
         await audit.record(transaction, {
-          by: caller, action: 'model.archive', subject: { kind: 'model', id: model.id, name: model.name }, reason, requestId,
+          by: caller,
+          action: 'model.archive',
+          subject: { kind: 'model', id: model.id, name: model.name },
+          reason,
+          requestId,
         })
         await changeFeed.announce(transaction, { kind: 'archive', teamId: caller.teamId, subject: model.id })
         return modelRecord(model)
@@ -124,7 +137,12 @@ export function modelRecord(model: ModelWithArm): ModelRecord {
  * The model's entity tag. It changes with everything the model says; releases and rollbacks look at its first part only,
  * so that a fitting that ends in between does not turn a release down.
  */
-export function modelEtag({ id, releaseCount, newestVersion, archivedAt }: Pick<ModelRecord, 'id' | 'releaseCount' | 'newestVersion' | 'archivedAt'>): string {
+export function modelEtag({
+  id,
+  releaseCount,
+  newestVersion,
+  archivedAt,
+}: Pick<ModelRecord, 'id' | 'releaseCount' | 'newestVersion' | 'archivedAt'>): string {
   return `"${id.slice(-12)}.${releaseCount}-${newestVersion ?? 0}${archivedAt ? '-archived' : ''}"`
 }
 
@@ -137,11 +155,18 @@ export function modelEtag({ id, releaseCount, newestVersion, archivedAt }: Pick<
  */
 export function requireReleaseMatch(ifMatch: string | undefined, model: ModelRecord): void {
   if (ifMatch === undefined || ifMatch.trim() === '' || ifMatch.trim() === '*') {
-    throw new Refusal('precondition-required', `Send If-Match with the ETag of GET /v1/models/${model.name}, so that nobody's release is overwritten unseen.`)
+    throw new Refusal(
+      'precondition-required',
+      `Send If-Match with the ETag of GET /v1/models/${model.name}, so that nobody's release is overwritten unseen.`,
+    )
   }
   const stem = `"${model.id.slice(-12)}.${model.releaseCount}-`
   const tags = ifMatch.match(/(?:W\/)?"[^"]*"/g) ?? []
   if (tags.some((tag) => tag.startsWith(stem))) return
   const live = model.liveVersion === null ? 'no version is live' : `version ${model.liveVersion} is live`
-  throw new Refusal('precondition-failed', `Model "${model.name}" has changed since you looked: now ${live}, after ${model.releaseCount} releases. Get it again and decide anew.`)
+  throw new Refusal(
+    'precondition-failed',
+    `Model "${model.name}" has changed since you looked: now ${live}, after ${model.releaseCount} releases. ` +
+    'Get it again and decide anew.',
+  )
 }

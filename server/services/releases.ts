@@ -26,8 +26,18 @@ export interface Released {
 }
 
 export interface ReleaseService {
-  release(caller: Caller, model: string, given: { version: number; reason: string; ifMatch?: string }, requestId?: string): Promise<Released>
-  rollBack(caller: Caller, model: string, given: { to?: number; reason: string; ifMatch?: string }, requestId?: string): Promise<Released>
+  release(
+    caller: Caller,
+    model: string,
+    given: { version: number; reason: string; ifMatch?: string },
+    requestId?: string,
+  ): Promise<Released>
+  rollBack(
+    caller: Caller,
+    model: string,
+    given: { to?: number; reason: string; ifMatch?: string },
+    requestId?: string,
+  ): Promise<Released>
   list(caller: Caller, model: string, page: PageRequest): Promise<Page<ReleaseRecord> & { etag: string }>
 }
 
@@ -38,7 +48,11 @@ export function createReleaseService({ database, clock, audit, changeFeed }: Dep
     const found = await Version.count({ where: { modelId: model.id, number }, transaction })
     if (found === 0) {
       const newest = model.newestVersion ?? null
-      throw new Refusal('not-found', `Model "${model.name}" has no version ${number}; ${newest === null ? 'it has none yet. Fit or import one.' : `its newest is ${newest}.`}`)
+      throw new Refusal(
+        'not-found',
+        `Model "${model.name}" has no version ${number}; ` +
+        `${newest === null ? 'it has none yet. Fit or import one.' : `its newest is ${newest}.`}`,
+      )
     }
   }
 
@@ -56,7 +70,18 @@ export function createReleaseService({ database, clock, audit, changeFeed }: Dep
     const previousVersion = model.liveVersion ?? null
     const number = (model.releaseCount ?? 0) + 1
     const release = await Release.create(
-      { id: uuid7(), teamId: caller.teamId, modelId: model.id, number, kind, version, previousVersion, reason, createdAt: at, createdBy: callerLabel(caller) },
+      {
+        id: uuid7(),
+        teamId: caller.teamId,
+        modelId: model.id,
+        number,
+        kind,
+        version,
+        previousVersion,
+        reason,
+        createdAt: at,
+        createdBy: callerLabel(caller),
+      },
       { transaction },
     )
     await Model.update({ liveVersion: version, liveSince: at, releaseCount: number }, { where: { id: model.id }, transaction })
@@ -86,17 +111,23 @@ export function createReleaseService({ database, clock, audit, changeFeed }: Dep
       'nothing-to-roll-back-to',
       live === null
         ? `Model "${model.name}" has never had a live version. Release one.`
-        : `No version of model "${model.name}" was live before version ${live}. Name one that was live with "to", or release another.`,
+        : `No version of model "${model.name}" was live before version ${live}. ` +
+          'Name one that was live with "to", or release another.',
     )
   }
 
   async function requireOnceLive(model: ModelWithArm, version: number, transaction: Transaction): Promise<void> {
     if ((await Release.count({ where: { modelId: model.id, version }, transaction })) > 0) return
-    throw new Refusal('nothing-to-roll-back-to', `Version ${version} of model "${model.name}" has never been live. Rolling back leads to versions that were; release it instead.`)
+    throw new Refusal(
+      'nothing-to-roll-back-to',
+      `Version ${version} of model "${model.name}" has never been live. Rolling back leads to versions that were; ` +
+      'release it instead.',
+    )
   }
 
   function refuseLive(model: ModelWithArm, version: number): void {
-    if (model.liveVersion === version) throw new Refusal('already-live', `Version ${version} of model "${model.name}" is live already.`)
+    if (model.liveVersion === version)
+      throw new Refusal('already-live', `Version ${version} of model "${model.name}" is live already.`)
   }
 
   return {

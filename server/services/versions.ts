@@ -60,7 +60,13 @@ export interface VersionService {
   import(caller: Caller, model: string, given: VersionImport, requestId?: string): Promise<VersionRecord>
   snapshot(caller: Caller, model: string, version: number): Promise<VersionWithArtefact>
   /** Appends a version in the transaction of what made it. The model's row must be locked in it. */
-  add(transaction: Transaction, by: Caller | 'system', model: ModelWithArm, given: NewVersion, requestId?: string): Promise<VersionRecord>
+  add(
+    transaction: Transaction,
+    by: Caller | 'system',
+    model: ModelWithArm,
+    given: NewVersion,
+    requestId?: string,
+  ): Promise<VersionRecord>
 }
 
 export function createVersionService({ database, clock, audit, changeFeed }: Dependencies): VersionService {
@@ -134,8 +140,16 @@ export function createVersionService({ database, clock, audit, changeFeed }: Dep
         order: [['number', 'DESC']],
         limit: limit + 1,
       })
-      const released = await firstReleases(model.id, rows.map(({ number }) => number))
-      return pageOf(rows, limit, ({ number }) => [number], (row) => recordOf(model.name, row, released.get(row.number)))
+      const released = await firstReleases(
+        model.id,
+        rows.map(({ number }) => number),
+      )
+      return pageOf(
+        rows,
+        limit,
+        ({ number }) => [number],
+        (row) => recordOf(model.name, row, released.get(row.number)),
+      )
     },
 
     async import(caller, name, given, requestId) {
@@ -162,7 +176,12 @@ export function createVersionService({ database, clock, audit, changeFeed }: Dep
       const row = await Version.scope('withArtefact').findOne({ where: { modelId: model.id, number } })
       if (!row) throw noVersion(model, number)
       return {
-        model: model.name, version: number, joints: model.arm.joints, artefact: decodeVersion(row.artefact), checksum: row.checksum, metrics: row.metrics,
+        model: model.name,
+        version: number,
+        joints: model.arm.joints,
+        artefact: decodeVersion(row.artefact),
+        checksum: row.checksum,
+        metrics: row.metrics,
       }
     },
   }
@@ -179,7 +198,10 @@ export function readImport<T>(pointer: string, read: () => T): T {
     return read()
   } catch (error) {
     if (!(error instanceof ShapeError)) throw error
-    throw new Refusal('artefact-unreadable', `${error.message} Export the snapshot again and send it unchanged.`, { errors: [{ pointer: `/${pointer}`, detail: error.message }], cause: error })
+    throw new Refusal('artefact-unreadable', `${error.message} Export the snapshot again and send it unchanged.`, {
+      errors: [{ pointer: `/${pointer}`, detail: error.message }],
+      cause: error,
+    })
   }
 }
 
@@ -187,7 +209,8 @@ export function readImport<T>(pointer: string, read: () => T): T {
 export function requireChecksum(bytes: Uint8Array, given: string): void {
   const found = checksumOf(bytes)
   if (found === given) return
-  const detail = `The content's checksum is ${found}, the snapshot says ${given}: it was changed on the way. Export it again and send it unchanged.`
+  const detail = `The content's checksum is ${found}, the snapshot says ${given}: it was changed on the way. ` +
+    'Export it again and send it unchanged.'
   throw new Refusal('artefact-unreadable', detail, { errors: [{ pointer: '/checksum', detail }] })
 }
 
@@ -196,14 +219,19 @@ function requireSameJoints({ arm }: ModelWithArm, { jointNames, unit }: VersionI
   if (names.length !== jointNames.length || names.some((name, k) => name !== jointNames[k])) {
     throw new Refusal(
       'wrong-joints',
-      `The snapshot is for joints ${jointNames.join(', ')}; arm "${arm.name}" has ${names.join(', ')}. A version fits one joint list, in one order: import it into a model of that arm.`,
+      `The snapshot is for joints ${jointNames.join(', ')}; arm "${arm.name}" has ${names.join(', ')}. ` +
+      'A version fits one joint list, in one order: import it into a model of that arm.',
       { errors: [{ pointer: '/joint_names', detail: 'Not the joints of the arm, in its order.' }] },
     )
   }
   arm.joints.forEach((joint, k) => {
     const expected = joint.type === 'prismatic' ? 'N' : 'N·m'
     if (unit[k] !== expected) {
-      throw new Refusal('wrong-joints', `unit: joint "${joint.name}" is in ${unit[k]} in the snapshot and in ${expected} on arm "${arm.name}". Import it into a model of the arm it was made for.`)
+      throw new Refusal(
+        'wrong-joints',
+        `unit: joint "${joint.name}" is in ${unit[k]} in the snapshot and in ${expected} on arm "${arm.name}". ` +
+        'Import it into a model of the arm it was made for.',
+      )
     }
   })
 }
@@ -215,7 +243,16 @@ function noVersion({ name }: ModelWithArm, number: number): Refusal {
 function recordOf(model: string, row: Version, firstReleasedAt: Date | undefined): VersionRecord {
   const { id, number, origin, network, checksum, metrics, recommended, createdAt, createdBy } = row
   return {
-    id, model, version: number, origin, network, checksum, metrics: metrics ?? null, recommended, createdAt, createdBy,
+    id,
+    model,
+    version: number,
+    origin,
+    network,
+    checksum,
+    metrics: metrics ?? null,
+    recommended,
+    createdAt,
+    createdBy,
     firstReleasedAt: firstReleasedAt ?? null,
   }
 }

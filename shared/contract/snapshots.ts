@@ -48,9 +48,21 @@ export function versionToWire(version: Version): { description: WireVersionDescr
  * @throws {ShapeError} a part is missing, unknown, of the wrong size or not finite; names it
  */
 export function versionFromWire(description: object, parameters: string): Version {
-  const given = partsOf('description', description, ['joints', 'network', 'normalisation', 'coverage', 'noise', 'reference_states'])
+  const given = partsOf('description', description, [
+    'joints',
+    'network',
+    'normalisation',
+    'coverage',
+    'noise',
+    'reference_states',
+  ])
   const network = partsOf('description.network', given.network, ['sizes', 'activation'])
-  const normalisation = partsOf('description.normalisation', given.normalisation, ['input_mean', 'input_std', 'output_mean', 'output_std'])
+  const normalisation = partsOf('description.normalisation', given.normalisation, [
+    'input_mean',
+    'input_std',
+    'output_mean',
+    'output_std',
+  ])
   const coverage = partsOf('description.coverage', given.coverage, ['low', 'high', 'mean', 'whitening', 'd99'])
   if (!Array.isArray(network.sizes)) throw new ShapeError('description.network.sizes is no list of layer widths.')
   if (!Array.isArray(given.reference_states)) throw new ShapeError('description.reference_states is no list of rows.')
@@ -80,7 +92,10 @@ export type WireLossDescription = {
 }
 
 /** What of a loss's snapshot the loss itself says. */
-export type WireLoss = Pick<Schemas['LossSnapshot'], 'kind' | 'base_checksum' | 'scheme' | 'update' | 'description' | 'parameters'>
+export type WireLoss = Pick<
+  Schemas['LossSnapshot'],
+  'kind' | 'base_checksum' | 'scheme' | 'update' | 'description' | 'parameters'
+>
 
 /** The loss in the contract's words. */
 export function lossToWire({ description, parameters }: LossVersion): WireLoss {
@@ -160,7 +175,8 @@ export function floatsFromBase64(what: string, base64: string): Float32Array {
 }
 
 function partsOf<K extends string>(what: string, given: unknown, names: readonly K[]): Record<K, unknown> {
-  if (typeof given !== 'object' || given === null || Array.isArray(given)) throw new ShapeError(`${what} is missing or no object.`)
+  if (typeof given !== 'object' || given === null || Array.isArray(given))
+    throw new ShapeError(`${what} is missing or no object.`)
   for (const name of names) if (!Object.hasOwn(given, name)) throw new ShapeError(`${what}.${name} is missing.`)
   for (const name of Object.keys(given)) {
     if (!(names as readonly string[]).includes(name)) throw new ShapeError(`${what}.${name} is not a part this program knows.`)

@@ -1,5 +1,6 @@
 import { createHash } from 'node:crypto'
 import { afterAll, beforeAll, describe, expect, test } from 'vitest'
+import type { Answer } from '../support/api.ts'
 import { twoJointArm } from '../support/recording-csv.ts'
 import { startTestServer, type TestServer } from '../support/server.ts'
 
@@ -31,9 +32,24 @@ describe('an arm is refused', () => {
   const swivel = twoJointArm().joints[0]
   test.each([
     ['with two joints of one name', { joints: [swivel, swivel] }, '/joints/1/name', /Joints 0 and 1 are both called "swivel"/],
-    ['with crossed limits', { joints: [{ ...swivel, position_lower: 1, position_upper: -1 }] }, '/joints/0/position_lower', /from 1 to -1: the lower must be less/],
-    ['with half a limit', { joints: [{ ...swivel, position_lower: undefined }] }, '/joints/0/position_lower', /has position_upper but no position_lower/],
-    ['with limits on a continuous joint', { joints: [{ ...swivel, type: 'continuous' }] }, '/joints/0/position_lower', /continuous/],
+    [
+      'with crossed limits',
+      { joints: [{ ...swivel, position_lower: 1, position_upper: -1 }] },
+      '/joints/0/position_lower',
+      /from 1 to -1: the lower must be less/,
+    ],
+    [
+      'with half a limit',
+      { joints: [{ ...swivel, position_lower: undefined }] },
+      '/joints/0/position_lower',
+      /has position_upper but no position_lower/,
+    ],
+    [
+      'with limits on a continuous joint',
+      { joints: [{ ...swivel, type: 'continuous' }] },
+      '/joints/0/position_lower',
+      /continuous/,
+    ],
     ['with a torque limit of zero', { joints: [{ ...swivel, torque_limit: 0 }] }, '/joints/0/torque_limit', /./],
     ['with a negative velocity limit', { joints: [{ ...swivel, velocity_limit: -1 }] }, '/joints/0/velocity_limit', /./],
     ['with gravity in other units', { gravity: [0, 0, -9810] }, '/gravity', /9810 m\/s²/],
@@ -92,9 +108,9 @@ test('a list is paged by cursor and link, and each arm is on one page', async ()
   const seen: string[] = []
   let path: string | undefined = '/v1/arms?limit=2'
   while (path) {
-    const page = await key.get(path)
+    const page: Answer = await key.get(path)
     seen.push(...page.body.items.map((arm: { name: string }) => arm.name))
-    const link = page.headers.get('link')
+    const link: string | null = page.headers.get('link')
     expect(link === null).toBe(page.body.next_cursor === null)
     path = link ? /^<([^>]+)>; rel="next"$/.exec(link)![1] : undefined
   }

@@ -22,8 +22,14 @@ test('the demo team gets its arm, a live version, a loss for it and recordings; 
   const loss = (await key.get('/v1/losses/alder-7-payload/versions/1')).body
   expect(loss).toMatchObject({ base_checksum: version.checksum, scheme: 'all', kind: 'state_dependent' })
   const recordings = (await key.get('/v1/recordings')).body.items
-  expect(new Set(recordings.map((recording: { use: string }) => recording.use))).toEqual(new Set(['fit', 'meta_train', 'validate', 'evaluate']))
+  expect(new Set(recordings.map((recording: { use: string }) => recording.use))).toEqual(
+    new Set(['fit', 'meta_train', 'validate', 'evaluate']),
+  )
   expect((await key.get('/v1/models/alder-7-base/releases')).body.items).toHaveLength(1)
-  const adaptation = await key.post('/v1/adaptations', { model: 'alder-7-base', loss: { name: 'alder-7-payload' }, robot: 'kiln-cart-loader-1' })
+  const adaptation = await key.post('/v1/adaptations', {
+    model: 'alder-7-base',
+    loss: { name: 'alder-7-payload' },
+    robot: 'kiln-cart-loader-1',
+  })
   expect(adaptation.status).toBe(201)
 }, 120_000)

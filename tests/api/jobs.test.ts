@@ -42,11 +42,14 @@ async function teamWithRecordings() {
 }
 
 async function ended(key: ApiClient, id: string) {
-  await expect.poll(async () => (await key.get(`/v1/jobs/${id}`)).body.state, { timeout: 110_000, interval: 100 }).toMatch(/done|failed|cancelled/)
+  await expect
+    .poll(async () => (await key.get(`/v1/jobs/${id}`)).body.state, { timeout: 110_000, interval: 100 })
+    .toMatch(/done|failed|cancelled/)
   return (await key.get(`/v1/jobs/${id}`)).body
 }
 
-const importVersion = (key: ApiClient) => key.post('/v1/models/tinker-base/versions', versionSnapshot(smallVersion(), ['swivel', 'lift']))
+const importVersion = (key: ApiClient) =>
+  key.post('/v1/models/tinker-base/versions', versionSnapshot(smallVersion(), ['swivel', 'lift']))
 
 test('a fitting makes a version with metrics on the recordings it did not see', async () => {
   const { team, key, fit } = await teamWithRecordings()
@@ -54,17 +57,48 @@ test('a fitting makes a version with metrics on the recordings it did not see', 
   const job = await key.post('/v1/jobs', { kind: 'fit', model: 'tinker-base', ...tinyFit })
 
   expect(job.status).toBe(201)
-  expect(job.body.parameters).toMatchObject({ hidden: [8], activation: 'relu', recordings: fit.map(({ id }) => id), held_out: [fit[2].id] })
+  expect(job.body.parameters).toMatchObject({
+    hidden: [8],
+    activation: 'relu',
+    recordings: fit.map(({ id }) => id),
+    held_out: [fit[2].id],
+  })
   const done = await ended(key, job.body.id)
-  expect(done, JSON.stringify(done.problem)).toMatchObject({ state: 'done', progress: 1, result: { model: 'tinker-base', version: 1 } })
+  expect(done, JSON.stringify(done.problem)).toMatchObject({
+    state: 'done',
+    progress: 1,
+    result: { model: 'tinker-base', version: 1 },
+  })
   const { body: version } = await key.get('/v1/models/tinker-base/versions/1')
-  expect(version).toMatchObject({ origin: { kind: 'fitted', job: job.body.id }, network: { sizes: [6, 8, 2], activation: 'relu' } })
-  expect(version.origin.recordings.map((recording: { name: string }) => recording.name)).toEqual(['fit-1.csv', 'fit-2.csv', 'fit-3.csv'])
+  expect(version).toMatchObject({
+    origin: { kind: 'fitted', job: job.body.id },
+    network: { sizes: [6, 8, 2], activation: 'relu' },
+  })
+  expect(version.origin.recordings.map((recording: { name: string }) => recording.name)).toEqual([
+    'fit-1.csv',
+    'fit-2.csv',
+    'fit-3.csv',
+  ])
   expect(version.metrics.recordings.map((recording: { name: string }) => recording.name)).toEqual(['fit-3.csv'])
-  expect(version.metrics.per_joint).toMatchObject([{ joint: 'swivel', unit: 'N·m' }, { joint: 'lift', unit: 'N·m' }])
-  expect(version.recommended).toMatchObject({ scheme: 'all', update: { kind: expect.stringMatching(/sgd|adam/), rate: expect.any(Number), rows_per_step: 4 } })
+  expect(version.metrics.per_joint).toMatchObject([
+    { joint: 'swivel', unit: 'N·m' },
+    { joint: 'lift', unit: 'N·m' },
+  ])
+  expect(version.recommended).toMatchObject({
+    scheme: 'all',
+    update: { kind: expect.stringMatching(/sgd|adam/), rate: expect.any(Number), rows_per_step: 4 },
+  })
   const { body: curve } = await key.get(`/v1/jobs/${job.body.id}/curve`)
-  expect(curve.series).toMatchObject([{ name: 'training', points: [[1, expect.any(Number)], [2, expect.any(Number)]] }, { name: 'held out' }])
+  expect(curve.series).toMatchObject([
+    {
+      name: 'training',
+      points: [
+        [1, expect.any(Number)],
+        [2, expect.any(Number)],
+      ],
+    },
+    { name: 'held out' },
+  ])
   const actions = (await server.database.models.AuditEvent.findAll({ where: { teamId: team.id } })).map(({ action }) => action)
   expect(actions).toEqual(expect.arrayContaining(['job.create', 'version.fitted']))
 })
@@ -88,16 +122,36 @@ test('a meta-training makes a loss version for the base, with everything compare
 
   const job = await key.post('/v1/jobs', { kind: 'meta_train', loss: 'tinker-payload', ...tinyMetaTrain })
 
-  expect(job.body.parameters).toMatchObject({ version: 1, scheme: 'all', recordings: metaTrain.map(({ id }) => id), validation: [validate.id], inner_steps: 3 })
+  expect(job.body.parameters).toMatchObject({
+    version: 1,
+    scheme: 'all',
+    recordings: metaTrain.map(({ id }) => id),
+    validation: [validate.id],
+    inner_steps: 3,
+  })
   const done = await ended(key, job.body.id)
   expect(done, JSON.stringify(done.problem)).toMatchObject({ state: 'done', result: { loss: 'tinker-payload', version: 1 } })
   const { body: version } = await key.get('/v1/losses/tinker-payload/versions/1')
-  expect(version).toMatchObject({ kind: 'state_dependent', base_version: 1, base_checksum: base.checksum, scheme: 'all', origin: { kind: 'meta_trained', job: job.body.id } })
-  expect(version.validation.map((entry: { name: string }) => entry.name)).toEqual(['none', 'mse, sgd', 'mse, adam', 'state_dependent'])
+  expect(version).toMatchObject({
+    kind: 'state_dependent',
+    base_version: 1,
+    base_checksum: base.checksum,
+    scheme: 'all',
+    origin: { kind: 'meta_trained', job: job.body.id },
+  })
+  expect(version.validation.map((entry: { name: string }) => entry.name)).toEqual([
+    'none',
+    'mse, sgd',
+    'mse, adam',
+    'state_dependent',
+  ])
   const { body: curve } = await key.get(`/v1/jobs/${job.body.id}/curve`)
   expect(curve.series.map((series: { name: string }) => series.name)).toContain('outer error')
   const { body: snapshot } = await key.get('/v1/losses/tinker-payload/versions/1/snapshot')
-  expect((await key.post('/v1/losses/tinker-payload/versions', snapshot)).body).toMatchObject({ version: 2, checksum: version.checksum })
+  expect((await key.post('/v1/losses/tinker-payload/versions', snapshot)).body).toMatchObject({
+    version: 2,
+    checksum: version.checksum,
+  })
 })
 
 describe('a job is refused by name of the recording', () => {
@@ -105,7 +159,11 @@ describe('a job is refused by name of the recording', () => {
     const made = await teamWithRecordings()
     const wrong = use === 'meta_train' ? made.metaTrain[0] : made[use]
 
-    const refused = await made.key.post('/v1/jobs', { kind: 'fit', model: 'tinker-base', recordings: [made.fit[0].id, made.fit[1].id, wrong.id] })
+    const refused = await made.key.post('/v1/jobs', {
+      kind: 'fit',
+      model: 'tinker-base',
+      recordings: [made.fit[0].id, made.fit[1].id, wrong.id],
+    })
 
     expect(refused.status).toBe(422)
     expect(refused.body.type).toBe('tag:heftwise.invalid,2026:recordings-unsuitable')
@@ -143,7 +201,9 @@ describe('a job is refused by name of the recording', () => {
   test('and a meta-training without any base version says so', async () => {
     const { key } = await teamWithRecordings()
 
-    expect((await key.post('/v1/jobs', { kind: 'meta_train', loss: 'tinker-payload' })).body.type).toBe('tag:heftwise.invalid,2026:no-live-version')
+    expect((await key.post('/v1/jobs', { kind: 'meta_train', loss: 'tinker-payload' })).body.type).toBe(
+      'tag:heftwise.invalid,2026:no-live-version',
+    )
   })
 })
 
@@ -151,14 +211,18 @@ describe('cancelling', () => {
   test('a running job stops it within seconds and makes no version', async () => {
     const { key } = await teamWithRecordings()
     const job = await key.post('/v1/jobs', { kind: 'fit', model: 'tinker-base', epochs: 2000, hidden: [64, 64] })
-    await expect.poll(async () => (await key.get(`/v1/jobs/${job.body.id}`)).body.progress, { timeout: 30_000 }).toBeGreaterThan(0)
+    await expect
+      .poll(async () => (await key.get(`/v1/jobs/${job.body.id}`)).body.progress, { timeout: 30_000 })
+      .toBeGreaterThan(0)
 
     const cancelled = await key.post(`/v1/jobs/${job.body.id}/cancel`, { reason: 'Wrong recordings.' })
 
     expect(cancelled.status).toBe(200)
     expect(await ended(key, job.body.id)).toMatchObject({ state: 'cancelled', result: null, problem: null })
     expect((await key.get('/v1/models/tinker-base')).body.newest_version).toBeNull()
-    expect((await key.post(`/v1/jobs/${job.body.id}/cancel`, { reason: 'Once more.' })).body.type).toBe('tag:heftwise.invalid,2026:job-ended')
+    expect((await key.post(`/v1/jobs/${job.body.id}/cancel`, { reason: 'Once more.' })).body.type).toBe(
+      'tag:heftwise.invalid,2026:job-ended',
+    )
   })
 
   test('a queued job ends it at once, and the next in line runs', async () => {
@@ -183,7 +247,10 @@ test('a job whose recording was deleted while it waited fails, and says which', 
 
   await server.services.jobs.start()
 
-  expect(await ended(key, body.id)).toMatchObject({ state: 'failed', problem: { type: 'tag:heftwise.invalid,2026:recordings-unsuitable', detail: expect.stringContaining(fit[1].id) } })
+  expect(await ended(key, body.id)).toMatchObject({
+    state: 'failed',
+    problem: { type: 'tag:heftwise.invalid,2026:recordings-unsuitable', detail: expect.stringContaining(fit[1].id) },
+  })
 })
 
 test('a job whose process has gone is failed, to be run again', async () => {
@@ -192,13 +259,23 @@ test('a job whose process has gone is failed, to be run again', async () => {
   await expect.poll(async () => (await key.get(`/v1/jobs/${body.id}`)).body.state, { timeout: 30_000 }).toBe('running')
 
   // What is left in the database when a process is killed: a lease that nobody renews, held by nobody who lives.
-  await server.database.pool.query("UPDATE jobs SET lease_owner = 'gone', lease_until = UTC_TIMESTAMP(3) - INTERVAL 1 SECOND WHERE id = ?", [body.id])
+  await server.database.pool.query(
+    "UPDATE jobs SET lease_owner = 'gone', lease_until = UTC_TIMESTAMP(3) - INTERVAL 1 SECOND WHERE id = ?",
+    [body.id],
+  )
 
   const failed = await ended(key, body.id)
-  expect(failed).toMatchObject({ state: 'failed', result: null, problem: { detail: expect.stringMatching(/Start the job again/) } })
+  expect(failed).toMatchObject({
+    state: 'failed',
+    result: null,
+    problem: { detail: expect.stringMatching(/Start the job again/) },
+  })
   const again = await key.post('/v1/jobs', { kind: 'fit', model: 'tinker-base', ...tinyFit })
   expect((await ended(key, again.body.id)).state).toBe('done')
-  expect(await server.database.models.Version.count({ where: { teamId: team.id } }), 'the one that lost its lease stored nothing').toBe(1)
+  expect(
+    await server.database.models.Version.count({ where: { teamId: team.id } }),
+    'the one that lost its lease stored nothing',
+  ).toBe(1)
 })
 
 test('stopping a server fails what it ran', async () => {
@@ -211,14 +288,19 @@ test('stopping a server fails what it ran', async () => {
   await other.stop()
   await server.services.jobs.start()
 
-  expect((await key.get(`/v1/jobs/${body.id}`)).body).toMatchObject({ state: 'failed', problem: { detail: expect.stringMatching(/stopped while this job ran/) } })
+  expect((await key.get(`/v1/jobs/${body.id}`)).body).toMatchObject({
+    state: 'failed',
+    problem: { detail: expect.stringMatching(/stopped while this job ran/) },
+  })
 })
 
 test('two processes never work on the same job', async () => {
   const { key } = await teamWithRecordings()
   const other = await server.another()
   try {
-    const asked = await Promise.all(Array.from({ length: 3 }, () => key.post('/v1/jobs', { kind: 'fit', model: 'tinker-base', ...tinyFit })))
+    const asked = await Promise.all(
+      Array.from({ length: 3 }, () => key.post('/v1/jobs', { kind: 'fit', model: 'tinker-base', ...tinyFit })),
+    )
     const jobs = []
     for (const { body } of asked) jobs.push(await ended(key, body.id))
 
@@ -299,7 +381,13 @@ test('predictions are answered while a job computes', async () => {
   const times: number[] = []
   for (let k = 0; k < 50; k++) {
     const at = performance.now()
-    await key.post('/v1/models/tinker-base/predict', { joint_names: ['swivel', 'lift'], version: 1, position: row, velocity: row, acceleration: row })
+    await key.post('/v1/models/tinker-base/predict', {
+      joint_names: ['swivel', 'lift'],
+      version: 1,
+      position: row,
+      velocity: row,
+      acceleration: row,
+    })
     times.push(performance.now() - at)
   }
   await key.post(`/v1/jobs/${body.id}/cancel`, { reason: 'Seen enough.' })

@@ -28,12 +28,21 @@ test('an imported loss version names its base and comes back unchanged', async (
 
   expect(imported.status).toBe(201)
   expect(imported.body).toMatchObject({
-    loss: 'tinker-payload', version: 1, kind: 'state_dependent', base_version: 1, base_checksum: base.checksum,
-    scheme: 'all', update: { kind: 'sgd', rate: 0.02, rows_per_step: 4 }, checksum: snapshot.checksum, origin: { kind: 'imported' },
+    loss: 'tinker-payload',
+    version: 1,
+    kind: 'state_dependent',
+    base_version: 1,
+    base_checksum: base.checksum,
+    scheme: 'all',
+    update: { kind: 'sgd', rate: 0.02, rows_per_step: 4 },
+    checksum: snapshot.checksum,
+    origin: { kind: 'imported' },
   })
   const exported = await key.get('/v1/losses/tinker-payload/versions/1/snapshot')
   expect(exported.body).toEqual(snapshot)
-  const repeated = await key.get('/v1/losses/tinker-payload/versions/1/snapshot', { headers: { 'if-none-match': exported.headers.get('etag')! } })
+  const repeated = await key.get('/v1/losses/tinker-payload/versions/1/snapshot', {
+    headers: { 'if-none-match': exported.headers.get('etag')! },
+  })
   expect(repeated.status).toBe(304)
   expect((await key.get('/v1/losses/tinker-payload')).body.newest_version).toBe(1)
   expect((await key.get('/v1/losses/tinker-payload/versions')).body.items).toEqual([imported.body])
@@ -43,8 +52,18 @@ test('an imported loss version names its base and comes back unchanged', async (
 describe('a loss import is refused', () => {
   const good = lossSnapshot(smallLoss(base.checksum))
   test.each([
-    ['for a base that the model does not have', lossSnapshot(smallLoss('ab'.repeat(32))), 'loss-of-another-base', /Import that version first/],
-    ['with changed parameters', { ...good, parameters: lossSnapshot(smallLoss(base.checksum, 1)).parameters }, 'artefact-unreadable', /parameters/],
+    [
+      'for a base that the model does not have',
+      lossSnapshot(smallLoss('ab'.repeat(32))),
+      'loss-of-another-base',
+      /Import that version first/,
+    ],
+    [
+      'with changed parameters',
+      { ...good, parameters: lossSnapshot(smallLoss(base.checksum, 1)).parameters },
+      'artefact-unreadable',
+      /parameters/,
+    ],
     ['with another checksum', { ...good, checksum: base.checksum }, 'artefact-unreadable', /changed on the way/],
     ['with a changed rate', { ...good, update: { ...good.update, rate: 0.03 } }, 'artefact-unreadable', /changed on the way/],
     ['without its rate', { ...good, update: { kind: 'sgd' } }, 'artefact-unreadable', /update\.rate is missing/],
@@ -74,7 +93,10 @@ test('losses are listed by name, of one model if asked, and names are taken once
   await key.post('/v1/models', { name: 'tinker-two', arm: 'tinker-2' })
   await key.post('/v1/losses', { name: 'ahead-of-it', model: 'tinker-two', kind: 'structured' })
 
-  expect((await key.get('/v1/losses')).body.items.map((loss: { name: string }) => loss.name)).toEqual(['ahead-of-it', 'tinker-payload'])
+  expect((await key.get('/v1/losses')).body.items.map((loss: { name: string }) => loss.name)).toEqual([
+    'ahead-of-it',
+    'tinker-payload',
+  ])
   expect((await key.get('/v1/losses?model=tinker-two')).body.items).toHaveLength(1)
   expect((await key.post('/v1/losses', { name: 'ahead-of-it', model: 'tinker-two', kind: 'structured' })).status).toBe(409)
 })

@@ -24,7 +24,14 @@ test('a model begins without versions, and names its arm', async () => {
 
   const model = await key.get('/v1/models/tinker-base')
 
-  expect(model.body).toMatchObject({ name: 'tinker-base', arm: 'tinker-2', live_version: null, live_since: null, newest_version: null, archived_at: null })
+  expect(model.body).toMatchObject({
+    name: 'tinker-base',
+    arm: 'tinker-2',
+    live_version: null,
+    live_since: null,
+    newest_version: null,
+    archived_at: null,
+  })
   expect(model.headers.get('etag')).toMatch(/^"[^"]+"$/)
   expect((await key.get('/v1/models?arm=tinker-2')).body.items).toHaveLength(1)
   expect((await key.get('/v1/models?arm=other')).body.items).toHaveLength(0)
@@ -47,9 +54,19 @@ test('an imported version is exported with the same content and checksum', async
 
   expect(imported.status).toBe(201)
   expect(imported.headers.get('location')).toBe('/v1/models/tinker-base/versions/1')
-  expect(imported.body).toMatchObject({ model: 'tinker-base', version: 1, origin: { kind: 'imported' }, checksum: snapshot.checksum, first_released_at: null })
+  expect(imported.body).toMatchObject({
+    model: 'tinker-base',
+    version: 1,
+    origin: { kind: 'imported' },
+    checksum: snapshot.checksum,
+    first_released_at: null,
+  })
   const exported = await key.get('/v1/models/tinker-base/versions/1/snapshot')
-  expect(exported.body).toMatchObject({ description: snapshot.description, parameters: snapshot.parameters, checksum: snapshot.checksum })
+  expect(exported.body).toMatchObject({
+    description: snapshot.description,
+    parameters: snapshot.parameters,
+    checksum: snapshot.checksum,
+  })
   const again = await key.post('/v1/models/tinker-base/versions', exported.body)
   expect(again.body).toMatchObject({ version: 2, checksum: snapshot.checksum })
   expect((await key.get('/v1/models/tinker-base')).body.newest_version).toBe(2)
@@ -71,17 +88,32 @@ describe('an import is refused', () => {
   const description = good.description as Record<string, object>
   test.each([
     ['with the joints in another order', { joint_names: ['lift', 'swivel'] }, 'wrong-joints', /lift, swivel/],
-    ['with another arm\'s joints', { joint_names: ['a', 'b'] }, 'wrong-joints', /a, b/],
+    ["with another arm's joints", { joint_names: ['a', 'b'] }, 'wrong-joints', /a, b/],
     ['with a joint too few', { joint_names: ['swivel'] }, 'wrong-joints', /swivel/],
     ['in other units', { unit: ['N', 'N·m'] }, 'wrong-joints', /swivel/],
     ['with another checksum', { checksum: other.checksum }, 'artefact-unreadable', /changed on the way/],
-    ['with another version\'s parameters', { parameters: other.parameters }, 'artefact-unreadable', /changed on the way/],
+    ["with another version's parameters", { parameters: other.parameters }, 'artefact-unreadable', /changed on the way/],
     ['with parameters that are not base64', { parameters: '***' }, 'artefact-unreadable', /base64/],
     ['with parameters cut short', { parameters: good.parameters.slice(0, 40) }, 'artefact-unreadable', /parameters has/],
     ['with a part missing', { description: { ...description, noise: undefined } }, 'artefact-unreadable', /noise is missing/],
-    ['with null for a number', { description: { ...description, noise: [null, 1] } }, 'artefact-unreadable', /noise: value 0 is null/],
-    ['with sizes that do not fit', { description: { ...description, network: { sizes: [6, 9, 2], activation: 'relu' } } }, 'artefact-unreadable', /parameters/],
-    ['with sizes too large to be meant', { description: { ...description, network: { sizes: [6, 1e9, 2], activation: 'relu' } } }, 'artefact-unreadable', /parameters/],
+    [
+      'with null for a number',
+      { description: { ...description, noise: [null, 1] } },
+      'artefact-unreadable',
+      /noise: value 0 is null/,
+    ],
+    [
+      'with sizes that do not fit',
+      { description: { ...description, network: { sizes: [6, 9, 2], activation: 'relu' } } },
+      'artefact-unreadable',
+      /parameters/,
+    ],
+    [
+      'with sizes too large to be meant',
+      { description: { ...description, network: { sizes: [6, 1e9, 2], activation: 'relu' } } },
+      'artefact-unreadable',
+      /parameters/,
+    ],
     ['in another format', { format: 'someone-elses' }, 'invalid-request', /heftwise-version-1/],
   ])('%s', async (_, change, slug, detail) => {
     const { key } = await teamWithModel()

@@ -26,7 +26,9 @@ function form(csv: string | Uint8Array, fields: Record<string, string> = {}, fil
 
 /** Nothing of any upload is left besides whole recordings. */
 async function expectNothingHalfStored() {
-  const chunks = await server.database.pool.query('SELECT recording_id FROM recording_chunks WHERE recording_id NOT IN (SELECT id FROM recordings)')
+  const chunks = await server.database.pool.query(
+    'SELECT recording_id FROM recording_chunks WHERE recording_id NOT IN (SELECT id FROM recordings)',
+  )
   const uploads = await server.database.pool.query('SELECT recording_id FROM recording_uploads')
   expect([...chunks, ...uploads]).toEqual([])
 }
@@ -42,8 +44,15 @@ test('a recording is stored with its context, and every number can be read back'
   expect(stored.status).toBe(201)
   expect(stored.headers.get('location')).toBe(`/v1/recordings/${stored.body.id}`)
   expect(stored.body).toMatchObject({
-    arm: 'tinker-2', name: 'reach-01.csv', use: 'meta_train', context, rows: 200, duration: 3.98, rate: 50,
-    bytes: csv.length, checksum: createHash('sha256').update(csv).digest('hex'),
+    arm: 'tinker-2',
+    name: 'reach-01.csv',
+    use: 'meta_train',
+    context,
+    rows: 200,
+    duration: 3.98,
+    rate: 50,
+    bytes: csv.length,
+    checksum: createHash('sha256').update(csv).digest('hex'),
   })
   expect((await key.get(`/v1/recordings/${stored.body.id}`)).body).toEqual(stored.body)
   const motion = await server.services.recordings.motion(team.id, stored.body.id)
@@ -77,7 +86,13 @@ test('the same content uploaded several times at once is stored once', async () 
 describe('an upload is refused', () => {
   const csv = twoJointCsv()
   test.each([
-    ['with NaN in a row', form(csv.replace(/\n([^\n]*),([^,\n]*)\n$/, '\n$1,NaN\n')), 422, 'recording-unreadable', /line 401, column torque_lift \(joint lift\) is "NaN"/],
+    [
+      'with NaN in a row',
+      form(csv.replace(/\n([^\n]*),([^,\n]*)\n$/, '\n$1,NaN\n')),
+      422,
+      'recording-unreadable',
+      /line 401, column torque_lift \(joint lift\) is "NaN"/,
+    ],
     ['that is no CSV', form(new Uint8Array(3000).fill(7)), 422, 'recording-unreadable', /./],
     ['for an arm that is not there', form(csv, { arm: 'nobody' }), 404, 'not-found', /nobody/],
     ['with an unknown use', form(csv, { use: 'fun' }), 422, 'invalid-request', /use: Found "fun"/],
@@ -133,7 +148,9 @@ describe('an upload is refused', () => {
     const { key } = await teamWithArm()
 
     expect((await key.post('/v1/recordings', { arm: 'tinker-2' })).status).toBe(415)
-    expect((await key.send('POST', '/v1/recordings', { body: 'x', headers: { 'content-type': 'multipart/form-data' } })).status).toBe(400)
+    expect(
+      (await key.send('POST', '/v1/recordings', { body: 'x', headers: { 'content-type': 'multipart/form-data' } })).status,
+    ).toBe(400)
   })
 
   test('by a key without the scope', async () => {
@@ -145,9 +162,14 @@ describe('an upload is refused', () => {
 })
 
 /** Sends a form's beginning, then as much of a CSV as `rows` gives, then what `end` does. */
-async function stream(secret: string, rows: () => Generator<string>, end: 'whole' | 'break' | 'cut'): Promise<{ status?: number; body: any }> {
+async function stream(
+  secret: string,
+  rows: () => Generator<string>,
+  end: 'whole' | 'break' | 'cut',
+): Promise<{ status?: number; body: any }> {
   const boundary = 'a-boundary'
-  const field = (name: string, value: string) => `--${boundary}\r\ncontent-disposition: form-data; name="${name}"\r\n\r\n${value}\r\n`
+  const field = (name: string, value: string) =>
+    `--${boundary}\r\ncontent-disposition: form-data; name="${name}"\r\n\r\n${value}\r\n`
   const head = `${field('arm', 'tinker-2')}${field('use', 'fit')}--${boundary}\r\ncontent-disposition: form-data; name="file"; filename="long.csv"\r\n\r\n`
   return new Promise((resolve) => {
     const req = request(`${server.origin}/v1/recordings`, {
@@ -170,10 +192,15 @@ async function stream(secret: string, rows: () => Generator<string>, end: 'whole
 }
 
 function* longCsv(bytes: number, seed = 1): Generator<string> {
-  const rows = twoJointRows({ rows: 1000, seed }).map((row) => row.slice(1).map((value) => value.toFixed(15)).join(','))
+  const rows = twoJointRows({ rows: 1000, seed }).map((row) =>
+    row
+      .slice(1)
+      .map((value) => value.toFixed(15))
+      .join(','),
+  )
   yield `${twoJointHeader.join(',')}\n`
   let written = 0
-  for (let row = 0; written < bytes; ) {
+  for (let row = 0; written < bytes;) {
     let piece = ''
     for (let k = 0; k < 500; k++, row++) piece += `${(row / 50).toFixed(2)},${rows[row % rows.length]}\n`
     written += piece.length
@@ -191,7 +218,16 @@ test('an upload that breaks off leaves nothing behind', async () => {
   expect(cut.status).toBe(400)
   expect(cut.body.type).toBe('tag:heftwise.invalid,2026:upload-incomplete')
   expect((await key.get('/v1/recordings')).body.items).toEqual(before)
-  await expect.poll(() => expectNothingHalfStored().then(() => 'clean', () => 'dirty'), { timeout: 5_000 }).toBe('clean')
+  await expect
+    .poll(
+      () =>
+        expectNothingHalfStored().then(
+          () => 'clean',
+          () => 'dirty',
+        ),
+      { timeout: 5_000 },
+    )
+    .toBe('clean')
 })
 
 test('30 MB are streamed with flat memory while the server answers others', async () => {
@@ -227,7 +263,8 @@ test('30 MB are streamed with flat memory while the server answers others', asyn
 
 test('recordings are listed newest first, by arm and use, page after page', async () => {
   const { key } = await teamWithArm()
-  for (const seed of [1, 2, 3]) await key.post('/v1/recordings', form(twoJointCsv({ seed }), { use: seed === 3 ? 'validate' : 'fit' }, `m-${seed}.csv`))
+  for (const seed of [1, 2, 3])
+    await key.post('/v1/recordings', form(twoJointCsv({ seed }), { use: seed === 3 ? 'validate' : 'fit' }, `m-${seed}.csv`))
 
   const first = await key.get('/v1/recordings?limit=2')
   const second = await key.get(`/v1/recordings?limit=2&cursor=${first.body.next_cursor}`)

@@ -17,7 +17,8 @@ async function teamWithVersions(count = 3) {
   const key = await team.createKey(['build', 'read', 'release', 'predict'])
   await key.post('/v1/arms', twoJointArm())
   await key.post('/v1/models', { name: 'tinker-base', arm: 'tinker-2' })
-  for (let seed = 1; seed <= count; seed++) await key.post(`${base}/versions`, versionSnapshot(smallVersion(seed), ['swivel', 'lift']))
+  for (let seed = 1; seed <= count; seed++)
+    await key.post(`${base}/versions`, versionSnapshot(smallVersion(seed), ['swivel', 'lift']))
   return { team, key }
 }
 
@@ -37,7 +38,13 @@ test('a release makes a version live and answers the new ETag', async () => {
   const released = await release(key, 2)
 
   expect(released.status).toBe(201)
-  expect(released.body).toMatchObject({ number: 1, kind: 'release', version: 2, previous_version: null, reason: 'Version 2 is better.' })
+  expect(released.body).toMatchObject({
+    number: 1,
+    kind: 'release',
+    version: 2,
+    previous_version: null,
+    reason: 'Version 2 is better.',
+  })
   expect(released.headers.get('etag')).toBe(await etagOf(key))
   expect((await key.get(base)).body).toMatchObject({ live_version: 2, live_since: released.body.at })
   expect((await key.get(`${base}/versions/2`)).body.first_released_at).toBe(released.body.at)
@@ -48,7 +55,9 @@ test('the next predict uses what was just released, and after a rollback what wa
   const { key } = await teamWithVersions()
   const predict = async () => {
     const row = [[0.3, -0.2]]
-    return (await key.post(`${base}/predict`, { joint_names: ['swivel', 'lift'], position: row, velocity: row, acceleration: row })).body
+    return (
+      await key.post(`${base}/predict`, { joint_names: ['swivel', 'lift'], position: row, velocity: row, acceleration: row })
+    ).body
   }
 
   await release(key, 1)
@@ -80,7 +89,8 @@ test('when two administrators release at once, exactly one wins', async () => {
   const { team, key } = await teamWithVersions()
   const [one, other] = [await team.signIn('administrator'), await team.signIn('administrator')]
   const etag = await etagOf(key)
-  const send = (client: ApiClient, version: number) => client.post(`${base}/releases`, { version, reason: 'Mine.' }, { headers: { 'if-match': etag } })
+  const send = (client: ApiClient, version: number) =>
+    client.post(`${base}/releases`, { version, reason: 'Mine.' }, { headers: { 'if-match': etag } })
 
   const answers = await Promise.all([send(one, 1), send(other, 2), send(one, 3), send(other, 1)])
 
@@ -97,7 +107,8 @@ test('two server processes on one database agree on who won', async () => {
   try {
     const elsewhere = second.api(secret)
     const etag = await etagOf(key)
-    const send = (client: ApiClient, version: number) => client.post(`${base}/releases`, { version, reason: 'Mine.' }, { headers: { 'if-match': etag } })
+    const send = (client: ApiClient, version: number) =>
+      client.post(`${base}/releases`, { version, reason: 'Mine.' }, { headers: { 'if-match': etag } })
 
     const answers = await Promise.all([send(key, 1), send(elsewhere, 2)])
 
@@ -160,7 +171,10 @@ test('what cannot be released says why', async () => {
   await release(key, 1)
 
   expect((await release(key, 1)).body.type).toBe('tag:heftwise.invalid,2026:already-live')
-  expect((await release(key, 7)).body).toMatchObject({ type: 'tag:heftwise.invalid,2026:not-found', detail: expect.stringMatching(/no version 7; its newest is 1/) })
+  expect((await release(key, 7)).body).toMatchObject({
+    type: 'tag:heftwise.invalid,2026:not-found',
+    detail: expect.stringMatching(/no version 7; its newest is 1/),
+  })
   expect((await key.post(`${base}/releases`, { version: 1 }, { headers: { 'if-match': await etagOf(key) } })).status).toBe(422)
 })
 
@@ -178,7 +192,9 @@ test('history is kept, newest first, page after page, with who and why', async (
   expect(first.body.items[1]).toMatchObject({ reason: 'Fitted on the new gripper.', by: 'A engineer' })
   expect(second.body.items.map((item: { number: number }) => item.number)).toEqual([1])
   expect(first.headers.get('etag')).toBe(await etagOf(key))
-  const events = await server.database.models.AuditEvent.findAll({ where: { teamId: team.id, action: ['model.release', 'model.roll_back'] } })
+  const events = await server.database.models.AuditEvent.findAll({
+    where: { teamId: team.id, action: ['model.release', 'model.roll_back'] },
+  })
   expect(events.map(({ reason }) => reason)).toContain('Fitted on the new gripper.')
 })
 

@@ -8,7 +8,15 @@ export function twoJointArm(name = 'tinker-2'): NewArm {
   return {
     name,
     joints: [
-      { name: 'swivel', type: 'revolute', position_lower: -2.5, position_upper: 2.5, velocity_limit: 4, torque_limit: 60, torque_rate_limit: 2000 },
+      {
+        name: 'swivel',
+        type: 'revolute',
+        position_lower: -2.5,
+        position_upper: 2.5,
+        velocity_limit: 4,
+        torque_limit: 60,
+        torque_rate_limit: 2000,
+      },
       { name: 'lift', type: 'revolute', position_lower: -2, position_upper: 2, velocity_limit: 4, torque_limit: 90 },
     ],
     gravity: [0, 0, -9.81],
@@ -53,8 +61,15 @@ export function twoJointRows({ rows = 400, rate = 50, payload = 0, seed = 1 }: T
 }
 
 export const twoJointHeader = [
-  'time', 'position_swivel', 'position_lift', 'velocity_swivel', 'velocity_lift',
-  'acceleration_swivel', 'acceleration_lift', 'torque_swivel', 'torque_lift',
+  'time',
+  'position_swivel',
+  'position_lift',
+  'velocity_swivel',
+  'velocity_lift',
+  'acceleration_swivel',
+  'acceleration_lift',
+  'torque_swivel',
+  'torque_lift',
 ]
 
 export function csvOf(header: readonly string[], rows: readonly (readonly (number | string)[])[], lineEnd = '\n'): string {

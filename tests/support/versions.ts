@@ -22,7 +22,12 @@ export function smallVersion(seed = 1, joints = 2): Version {
     description: {
       joints,
       network,
-      normalisation: { inputMean: all(channels, 0), inputStd: all(channels, 1), outputMean: all(joints, 0), outputStd: all(joints, 5) },
+      normalisation: {
+        inputMean: all(channels, 0),
+        inputStd: all(channels, 1),
+        outputMean: all(joints, 0),
+        outputStd: all(joints, 5),
+      },
       coverage: { low: all(channels, -3), high: all(channels, 3), mean: all(channels, 0), whitening: identity, d99: 5 },
       noise: all(joints, 0.01),
       referenceStates: [all(channels, 0), all(channels, 0.5)],
@@ -50,7 +55,12 @@ export function smallLoss(baseChecksum: string, joints = 2): LossVersion {
   const shape = { joints, inputs: 3 * joints, hidden: 4, positive: 'exp' as const }
   return {
     description: {
-      kind: 'state_dependent', positive: 'exp', joints, hidden: 4, baseChecksum, scheme: 'all',
+      kind: 'state_dependent',
+      positive: 'exp',
+      joints,
+      hidden: 4,
+      baseChecksum,
+      scheme: 'all',
       update: { kind: 'sgd', rate: 0.02, rowsPerStep: 4, fade: 1 },
     },
     parameters: Float32Array.from(lossKinds.state_dependent.initialParameters(shape, createRandom(3))),

@@ -1,5 +1,12 @@
 import { describe, expect, it } from 'vitest'
-import { floatsFromBase64, floatsToBase64, lossFromWire, lossToWire, versionFromWire, versionToWire } from '../../shared/contract/snapshots.ts'
+import {
+  floatsFromBase64,
+  floatsToBase64,
+  lossFromWire,
+  lossToWire,
+  versionFromWire,
+  versionToWire,
+} from '../../shared/contract/snapshots.ts'
 import { lossKinds } from '../../shared/dynamics/losses/index.ts'
 import type { LossVersion } from '../../shared/dynamics/loss-version.ts'
 import { encodeLossVersion } from '../../shared/dynamics/loss-version.ts'
@@ -20,7 +27,11 @@ function someVersion(): Version {
       network,
       normalisation: { inputMean: list(channels), inputStd: list(channels), outputMean: list(joints), outputStd: list(joints) },
       coverage: {
-        low: list(channels), high: list(channels), mean: list(channels), whitening: list((channels * (channels + 1)) / 2), d99: 4.2,
+        low: list(channels),
+        high: list(channels),
+        mean: list(channels),
+        whitening: list((channels * (channels + 1)) / 2),
+        d99: 4.2,
       },
       noise: list(joints),
       referenceStates: [list(channels), list(channels)],
@@ -33,7 +44,12 @@ function someLoss(): LossVersion {
   const shape = { joints, inputs: channels, hidden: 4, positive: 'exp' as const }
   return {
     description: {
-      kind: 'state_dependent', positive: 'exp', joints, hidden: 4, baseChecksum: 'ab'.repeat(32), scheme: 'all',
+      kind: 'state_dependent',
+      positive: 'exp',
+      joints,
+      hidden: 4,
+      baseChecksum: 'ab'.repeat(32),
+      scheme: 'all',
       update: { kind: 'sgd', rate: 0.0123456789, rowsPerStep: 4, fade: 1 },
     },
     parameters: Float32Array.from(list(lossKinds.state_dependent.parameterCount(shape))),
@@ -66,11 +82,19 @@ describe('snapshots', () => {
   it.each([
     ['a missing part', (d: Record<string, unknown>) => delete d.noise, /description\.noise is missing/],
     ['an unknown part', (d: Record<string, unknown>) => (d.colour = 1), /description\.colour is not a part/],
-    ['a part of another type', (d: Record<string, unknown>) => (d.coverage = 'wide'), /description\.coverage is missing or no object/],
+    [
+      'a part of another type',
+      (d: Record<string, unknown>) => (d.coverage = 'wide'),
+      /description\.coverage is missing or no object/,
+    ],
     ['a list that is too short', (d: Record<string, unknown>) => (d.noise as number[]).pop(), /noise has 1/],
     ['null in a list', (d: Record<string, unknown>) => ((d.noise as unknown[])[0] = null), /noise: value 0 is null/],
     ['text in a list', (d: Record<string, unknown>) => ((d.noise as unknown[])[0] = '1'), /noise: value 0 is 1/],
-    ['sizes that are no list', (d: Record<string, unknown>) => ((d.network as Record<string, unknown>).sizes = 6), /sizes is no list/],
+    [
+      'sizes that are no list',
+      (d: Record<string, unknown>) => ((d.network as Record<string, unknown>).sizes = 6),
+      /sizes is no list/,
+    ],
   ])('refuse %s by name', (_, spoil, message) => {
     const { description, parameters } = JSON.parse(JSON.stringify(versionToWire(someVersion())))
 

@@ -27,10 +27,35 @@ export interface JobPoint {
 }
 
 export function jobRecord(job: Job): JobRecord {
-  const { id, kind, state, progress, message, parameters, result, problem, changeNumber, createdAt, createdBy, startedAt, endedAt } = job
+  const {
+    id,
+    kind,
+    state,
+    progress,
+    message,
+    parameters,
+    result,
+    problem,
+    changeNumber,
+    createdAt,
+    createdBy,
+    startedAt,
+    endedAt,
+  } = job
   return {
-    id, kind, state, progress, message, parameters, result: result ?? null, problem: problem ?? null, changeNumber: changeNumber ?? 1, createdAt, createdBy,
-    startedAt: startedAt ?? null, endedAt: endedAt ?? null,
+    id,
+    kind,
+    state,
+    progress,
+    message,
+    parameters,
+    result: result ?? null,
+    problem: problem ?? null,
+    changeNumber: changeNumber ?? 1,
+    createdAt,
+    createdBy,
+    startedAt: startedAt ?? null,
+    endedAt: endedAt ?? null,
   }
 }
 

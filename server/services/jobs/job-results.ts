@@ -16,7 +16,11 @@ interface Parts {
   readonly losses: LossService
 }
 
-/** Reads everything a job computes from. @throws {Refusal} recordings-unsuitable: a recording was deleted since the job was asked for */
+/**
+ * Reads everything a job computes from.
+ *
+ * @throws {Refusal} recordings-unsuitable: a recording was deleted since the job was asked for
+ */
 export async function readJobInput({ database, recordings }: Parts, job: Job): Promise<JobInput> {
   const motionsOf = async (ids: readonly string[]) => {
     const motions: Motion[] = []
@@ -49,7 +53,12 @@ export async function readJobInput({ database, recordings }: Parts, job: Job): P
 }
 
 /** Stores what a job made, in the transaction that ends it, and answers where it is. */
-export async function storeJobOutput({ database, versions, losses }: Parts, job: Job, output: JobOutput, transaction: Transaction): Promise<NonNullable<Job['result']>> {
+export async function storeJobOutput(
+  { database, versions, losses }: Parts,
+  job: Job,
+  output: JobOutput,
+  transaction: Transaction,
+): Promise<NonNullable<Job['result']>> {
   if (output.kind === 'fit' && job.parameters.kind === 'fit') {
     const model = await modelOf(database, job, transaction)
     const { artefact, metrics, recommended } = output
@@ -67,7 +76,11 @@ export async function storeJobOutput({ database, versions, losses }: Parts, job:
     const base = await database.models.Version.findByPk(job.work.baseVersionId, { transaction, rejectOnEmpty: true })
     const { artefact, validation } = output
     const { version } = await losses.add(transaction, 'system', loss, {
-      artefact, base, validation, origin: { kind: 'meta_trained', job: job.id }, createdBy: job.createdBy,
+      artefact,
+      base,
+      validation,
+      origin: { kind: 'meta_trained', job: job.id },
+      createdBy: job.createdBy,
     })
     return { loss: loss.name, version }
   }
@@ -79,7 +92,11 @@ async function motionOf(recordings: RecordingService, teamId: string, id: string
     return await recordings.motion(teamId, id)
   } catch (error) {
     if (!(error instanceof Refusal)) throw error
-    throw new Refusal('recordings-unsuitable', `Recording ${id} was deleted before the job began. Start the job again without it.`, { cause: error })
+    throw new Refusal(
+      'recordings-unsuitable',
+      `Recording ${id} was deleted before the job began. Start the job again without it.`,
+      { cause: error },
+    )
   }
 }
 

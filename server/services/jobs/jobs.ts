@@ -37,7 +37,9 @@ export interface JobService {
 /** Points read at a time by one who follows a job. */
 const MOST_POINTS = 2_000
 
-export function createJobService(d: Dependencies & { recordings: RecordingService; versions: VersionService; losses: LossService }): JobService {
+export function createJobService(
+  d: Dependencies & { recordings: RecordingService; versions: VersionService; losses: LossService },
+): JobService {
   const { database, clock, audit, log, settings } = d
   const { Job } = database.models
   const queue = createJobQueue({
@@ -56,7 +58,10 @@ export function createJobService(d: Dependencies & { recordings: RecordingServic
   }
 
   async function pointsAfter(id: string, number: number, most: number): Promise<JobPoint[]> {
-    return database.pool.query<JobPoint[]>('SELECT number, series, x, y FROM job_points WHERE job_id = ? AND number > ? ORDER BY number LIMIT ?', [id, number, most])
+    return database.pool.query<JobPoint[]>(
+      'SELECT number, series, x, y FROM job_points WHERE job_id = ? AND number > ? ORDER BY number LIMIT ?',
+      [id, number, most],
+    )
   }
 
   return {
@@ -82,7 +87,11 @@ export function createJobService(d: Dependencies & { recordings: RecordingServic
           { transaction },
         )
         await audit.record(transaction, {
-          by: caller, action: 'job.create', subject: { kind: 'job', id: job.id, name: parameters.kind }, after: parameters, requestId,
+          by: caller,
+          action: 'job.create',
+          subject: { kind: 'job', id: job.id, name: parameters.kind },
+          after: parameters,
+          requestId,
         })
         return jobRecord(job)
       })
@@ -124,10 +133,22 @@ export function createJobService(d: Dependencies & { recordings: RecordingServic
         if (hasEnded(job)) throw new Refusal('job-ended', `The job is ${job.state} already, so there is nothing to cancel.`)
         if (job.cancelAt) return jobRecord(job)
         const now = clock.now()
-        const change = { cancelAt: now, cancelBy: callerLabel(caller), cancelReason: reason, changeNumber: (job.changeNumber ?? 0) + 1 }
-        if (job.state === 'queued') await job.update({ ...change, state: 'cancelled', message: 'Cancelled.', endedAt: now }, { transaction })
+        const change = {
+          cancelAt: now,
+          cancelBy: callerLabel(caller),
+          cancelReason: reason,
+          changeNumber: (job.changeNumber ?? 0) + 1,
+        }
+        if (job.state === 'queued')
+          await job.update({ ...change, state: 'cancelled', message: 'Cancelled.', endedAt: now }, { transaction })
         else await job.update({ ...change, message: 'Cancelling.' }, { transaction })
-        await audit.record(transaction, { by: caller, action: 'job.cancel', subject: { kind: 'job', id, name: job.kind }, reason, requestId })
+        await audit.record(transaction, {
+          by: caller,
+          action: 'job.cancel',
+          subject: { kind: 'job', id, name: job.kind },
+          reason,
+          requestId,
+        })
         return jobRecord(job)
       })
       queue.noticeCancel(id)

@@ -26,7 +26,10 @@ const jointQuantities = ['position', 'velocity', 'acceleration', 'torque'] as co
  * @returns per stored value, where in the file it stands
  * @throws {Refusal} recording-unreadable: names every missing, unknown and doubled column
  */
-export function placeColumns(header: readonly string[], joints: readonly RecordedJoint[]): { places: number[]; columns: Column[] } {
+export function placeColumns(
+  header: readonly string[],
+  joints: readonly RecordedJoint[],
+): { places: number[]; columns: Column[] } {
   refuseForeignHeader(header)
   const wanted = storedColumns(joints)
   const placeOf = new Map<string, number>()
@@ -50,7 +53,8 @@ export function placeColumns(header: readonly string[], joints: readonly Recorde
     throw new Refusal(
       'recording-unreadable',
       `line 1: ${faults.slice(0, 6).join(' ')}${faults.length > 6 ? ` And ${faults.length - 6} more.` : ''} Expected time and, ` +
-        `for every joint of the arm, position_<joint>, velocity_<joint>, acceleration_<joint> and torque_<joint> (or effort_<joint>), ` +
+        `for every joint of the arm, position_<joint>, velocity_<joint>, acceleration_<joint> and torque_<joint> (or ` +
+        'effort_<joint>), ' +
         `once each. The arm's joints are ${joints.map(({ name }) => name).join(', ')}.`,
       { errors: faults.slice(0, 50).map((detail) => ({ detail })) },
     )
@@ -69,10 +73,16 @@ function storedColumns(joints: readonly RecordedJoint[]): Column[] {
 function refuseForeignHeader(header: readonly string[]): void {
   if (header.length === 1 && /[;\t]/.test(header[0])) {
     const separator = header[0].includes(';') ? 'semicolons' : 'tabs'
-    throw new Refusal('recording-unreadable', `line 1: the columns are separated by ${separator}. Export with commas between columns and points in numbers.`)
+    throw new Refusal(
+      'recording-unreadable',
+      `line 1: the columns are separated by ${separator}. Export with commas between columns and points in numbers.`,
+    )
   }
   if (header.length > 1 && header.every((title) => title.trim() !== '' && Number.isFinite(Number(title)))) {
-    throw new Refusal('recording-unreadable', 'line 1 holds numbers, expected the names of the columns: time, position_<joint>, and so on. Add a header.')
+    throw new Refusal(
+      'recording-unreadable',
+      'line 1 holds numbers, expected the names of the columns: time, position_<joint>, and so on. Add a header.',
+    )
   }
 }
 

@@ -100,14 +100,21 @@ function createRowChecker(joints: readonly RecordedJoint[], header: readonly str
   }
 
   function refuse(): never {
-    const more = faults.length > 1 ? ` ${faults.length < MOST_FAULTS ? '' : 'At least '}${faults.length} such faults; each is in "errors".` : ''
+    const more =
+      faults.length > 1
+        ? ` ${faults.length < MOST_FAULTS ? '' : 'At least '}${faults.length} such faults; each is in "errors".`
+        : ''
     throw new Refusal('recording-unreadable', faults[0].detail + more, { errors: faults })
   }
 
   function checkTime(time: number, line: number): void {
     if (count === 0) first = time
     else if (time <= last) {
-      fault(`line ${line}, column time: ${time} s comes after ${last} s. Time must rise from row to row; sort the log, or cut it where the clock was set.`, -1)
+      fault(
+        `line ${line}, column time: ${time} s comes after ${last} s. Time must rise from row to row; ` +
+        'sort the log, or cut it where the clock was set.',
+        -1,
+      )
     } else periods.add(time - last)
     last = Math.max(last, time)
   }
@@ -115,7 +122,11 @@ function createRowChecker(joints: readonly RecordedJoint[], header: readonly str
   return {
     check(record, line) {
       if (record.length !== header.length) {
-        fault(`line ${line} has ${record.length} values, the header has ${header.length} columns. Every row needs a value in every column.`, -1)
+        fault(
+          `line ${line} has ${record.length} values, the header has ${header.length} columns. ` +
+          'Every row needs a value in every column.',
+          -1,
+        )
         count += 1
         return row
       }
@@ -136,13 +147,17 @@ function createRowChecker(joints: readonly RecordedJoint[], header: readonly str
     end() {
       if (faults.length > 0) refuse()
       if (count < LEAST_ROWS) {
-        throw new Refusal('recording-unreadable', `The file has ${count} rows; at least ${LEAST_ROWS} are needed to learn from. Record a longer motion.`)
+        throw new Refusal(
+          'recording-unreadable',
+          `The file has ${count} rows; at least ${LEAST_ROWS} are needed to learn from. Record a longer motion.`,
+        )
       }
       const rate = 1 / periods.value()
       if (rate < LEAST_RATE * 0.999) {
         throw new Refusal(
           'recording-unreadable',
-          `The rows come at ${rate.toPrecision(3)} Hz; at least ${LEAST_RATE} Hz are needed, since slower logs miss the accelerations. Log at 100 Hz or more.`,
+          `The rows come at ${rate.toPrecision(3)} Hz; ` +
+          `at least ${LEAST_RATE} Hz are needed, since slower logs miss the accelerations. Log at 100 Hz or more.`,
         )
       }
       return { count, duration: Number((last - first).toPrecision(12)), rate: Number(rate.toPrecision(6)) }
@@ -162,7 +177,8 @@ export function readNumber(text: string): number {
 function absentValue({ title, joint }: Column, joints: readonly RecordedJoint[], text: string, line: number): string {
   const found = text.trim() === '' ? 'is empty' : `is "${text.trim().slice(0, 40)}"`
   const whose = joint < 0 ? '' : ` (joint ${joints[joint].name})`
-  return `line ${line}, column ${title}${whose} ${found}, expected a number. Missing values are not filled in: cut the log there, or repair it.`
+  return `line ${line}, column ${title}${whose} ${found}, expected a number. Missing values are not filled in: ` +
+    'cut the log there, or repair it.'
 }
 
 function farPositionOf(joints: readonly RecordedJoint[], { quantity, joint }: Column): number {
@@ -176,7 +192,8 @@ function farBeyondLimit({ title, joint }: Column, joints: readonly RecordedJoint
   const { name, type, positionLower, positionUpper } = joints[joint]
   const [unit, suspicion] = type === 'prismatic' ? ['m', 'millimetres?'] : ['rad', 'degrees?']
   return (
-    `line ${line}, column ${title}: ${value} ${unit} is far outside joint ${name}'s limits of ${positionLower} to ${positionUpper} ${unit}. ` +
+    `line ${line}, column ${title}: ` +
+    `${value} ${unit} is far outside joint ${name}'s limits of ${positionLower} to ${positionUpper} ${unit}. ` +
     `Is it in ${suspicion} Send ${unit} and ${unit}/s and ${unit}/s².`
   )
 }
@@ -186,7 +203,8 @@ function unreadableCsv(error: CsvError): Refusal {
   const what = error.code === 'CSV_MAX_RECORD_SIZE' ? 'a line is longer than a megabyte' : printable(error.message).slice(0, 200)
   return new Refusal(
     'recording-unreadable',
-    `${line === undefined ? '' : `line ${line}: `}the file cannot be read as CSV: ${what}. Send text with commas between columns and one line per row.`,
+    `${line === undefined ? '' : `line ${line}: `}the file cannot be read as CSV: ${what}. ` +
+    'Send text with commas between columns and one line per row.',
     { cause: error },
   )
 }

@@ -8,7 +8,11 @@ import type { ReaderAnswer, ReaderMessage } from './csv-thread-messages.ts'
 /** Reads recordings in a thread of its own: 200 MB of text are ten seconds of work, which predictions must not wait for. */
 export interface CsvReading {
   /** As readRecording, elsewhere. */
-  read(source: AsyncIterable<Uint8Array>, joints: readonly RecordedJoint[], store: (chunk: ArrayBuffer) => Promise<void>): Promise<ReadSummary>
+  read(
+    source: AsyncIterable<Uint8Array>,
+    joints: readonly RecordedJoint[],
+    store: (chunk: ArrayBuffer) => Promise<void>,
+  ): Promise<ReadSummary>
   stop(): Promise<void>
 }
 
@@ -75,8 +79,13 @@ export function createCsvReading(): CsvReading {
           } else if (answer.kind === 'chunk') {
             storing = storing.then(() => store(answer.chunk)).then(() => send({ kind: 'stored', id }))
             storing.catch((error: unknown) => settle(() => reject(error as Error)))
-          } else if (answer.kind === 'read') storing.then(() => settle(() => resolve(answer.summary)), () => undefined)
-          else if (answer.kind === 'refused') settle(() => reject(new Refusal(answer.slug, answer.detail, { errors: answer.errors })))
+          } else if (answer.kind === 'read')
+            storing.then(
+              () => settle(() => resolve(answer.summary)),
+              () => undefined,
+            )
+          else if (answer.kind === 'refused')
+            settle(() => reject(new Refusal(answer.slug, answer.detail, { errors: answer.errors })))
           else settle(() => reject(new Error(`Reading a recording failed: ${answer.message}`)))
         })
       })

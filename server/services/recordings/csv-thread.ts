@@ -53,7 +53,8 @@ function begin(id: number, joints: (ReaderMessage & { kind: 'begin' })['joints']
     .then(
       (summary) => answer({ kind: 'read', id, summary }),
       (error: unknown) => {
-        if (error instanceof Refusal) answer({ kind: 'refused', id, slug: error.kind.slug, detail: error.message, errors: [...error.errors] })
+        if (error instanceof Refusal)
+          answer({ kind: 'refused', id, slug: error.kind.slug, detail: error.message, errors: [...error.errors] })
         else answer({ kind: 'failed', id, message: (error as Error).stack ?? String(error) })
       },
     )

@@ -40,7 +40,12 @@ export interface RecordingService {
    *
    * @param source  the file; when it throws, nothing stays behind
    */
-  upload(caller: Caller, given: NewRecording, source: AsyncIterable<Uint8Array>, requestId?: string): Promise<{ recording: RecordingRecord; stored: boolean }>
+  upload(
+    caller: Caller,
+    given: NewRecording,
+    source: AsyncIterable<Uint8Array>,
+    requestId?: string,
+  ): Promise<{ recording: RecordingRecord; stored: boolean }>
   get(caller: Caller, id: string): Promise<RecordingRecord>
   list(caller: Caller, page: PageRequest & { arm?: string; use?: RecordingUse }): Promise<Page<RecordingRecord>>
   delete(caller: Caller, id: string, reason: string, requestId?: string): Promise<void>
@@ -62,7 +67,9 @@ export function createRecordingService({ database, clock, audit, log }: Dependen
   const csv = createCsvReading()
   let timer: NodeJS.Timeout | undefined
 
-  const include = (arm?: string) => [{ model: Arm, as: 'arm', required: true, ...(arm !== undefined && { where: { name: arm } }) }]
+  const include = (arm?: string) => [
+    { model: Arm, as: 'arm', required: true, ...(arm !== undefined && { where: { name: arm } }) },
+  ]
 
   async function find(teamId: string, id: string): Promise<RecordingWithArm> {
     const recording = await Recording.findOne({ where: { teamId, id }, include: include() })
@@ -82,7 +89,9 @@ export function createRecordingService({ database, clock, audit, log }: Dependen
   /** False when the upload had been given up and its chunks taken away. */
   async function endUpload(id: string, transaction: Transaction): Promise<boolean> {
     const ended = await database.sequelize.query('DELETE FROM recording_uploads WHERE recording_id = ?', {
-      replacements: [id], transaction, type: QueryTypes.BULKDELETE,
+      replacements: [id],
+      transaction,
+      type: QueryTypes.BULKDELETE,
     })
     return ended === 1
   }
@@ -99,7 +108,11 @@ export function createRecordingService({ database, clock, audit, log }: Dependen
     let position = 0
     return async (chunk) => {
       // Prepared, so that a megabyte goes as it is instead of being escaped on the event loop.
-      await database.pool.execute('INSERT INTO recording_chunks (recording_id, position, content) VALUES (?, ?, ?)', [id, position++, Buffer.from(chunk)])
+      await database.pool.execute('INSERT INTO recording_chunks (recording_id, position, content) VALUES (?, ?, ?)', [
+        id,
+        position++,
+        Buffer.from(chunk),
+      ])
       await database.pool.query('UPDATE recording_uploads SET touched_at = UTC_TIMESTAMP(3) WHERE recording_id = ?', [id])
     }
   }
@@ -141,15 +154,22 @@ export function createRecordingService({ database, clock, audit, log }: Dependen
             { transaction },
           )
           // The sweep takes abandoned uploads away; this one must still be there to become a recording.
-          if (!(await endUpload(id, transaction))) throw new Refusal('upload-incomplete', 'The upload took too long and was given up. Send it again.')
+          if (!(await endUpload(id, transaction)))
+            throw new Refusal('upload-incomplete', 'The upload took too long and was given up. Send it again.')
           const record = recordOf(Object.assign(recording, { arm }))
           await audit.record(transaction, {
-            by: caller, action: 'recording.upload', subject: { kind: 'recording', id, name: given.name }, after: record, requestId,
+            by: caller,
+            action: 'recording.upload',
+            subject: { kind: 'recording', id, name: given.name },
+            after: record,
+            requestId,
           })
           return { recording: record, stored: true }
         })
       } catch (error) {
-        await discard(id).catch((cause: unknown) => log.warn({ err: cause }, 'a broken upload could not be cleared yet; the sweep will'))
+        await discard(id).catch((cause: unknown) =>
+          log.warn({ err: cause }, 'a broken upload could not be cleared yet; the sweep will'),
+        )
         const known = duplicateKey(error) === 'recordings_content' ? await sameContent(arm, checksum) : null
         if (known) return { recording: recordOf(known), stored: false }
         throw error
@@ -173,13 +193,22 @@ export function createRecordingService({ database, clock, audit, log }: Dependen
         order: [['id', 'DESC']],
         limit: limit + 1,
       })
-      return pageOf(rows, limit, ({ id }) => [id], (row) => recordOf(row as RecordingWithArm))
+      return pageOf(
+        rows,
+        limit,
+        ({ id }) => [id],
+        (row) => recordOf(row as RecordingWithArm),
+      )
     },
 
     async delete(caller, id, reason, requestId) {
       requireAction(caller, 'build')
       await database.transaction(async (transaction) => {
-        const recording = await Recording.findOne({ where: { teamId: caller.teamId, id }, transaction, lock: transaction.LOCK.UPDATE })
+        const recording = await Recording.findOne({
+          where: { teamId: caller.teamId, id },
+          transaction,
+          lock: transaction.LOCK.UPDATE,
+        })
         if (!recording) throw new Refusal('not-found', `There is no recording ${id} in your team. GET /v1/recordings lists them.`)
         await database.sequelize.query('DELETE FROM recording_chunks WHERE recording_id = ?', { replacements: [id], transaction })
         await recording.destroy({ transaction })
@@ -196,15 +225,26 @@ export function createRecordingService({ database, clock, audit, log }: Dependen
 
     async motion(teamId, id) {
       const recording = await find(teamId, id)
-      const chunks = await database.pool.query<{ content: Buffer }[]>('SELECT content FROM recording_chunks WHERE recording_id = ? ORDER BY position', [id])
-      const motion = motionOfChunks(recording.name, recording.arm.joints.length, chunks.map(({ content }) => content))
-      if (motion.rows !== recording.rowCount) throw new RangeError(`Recording ${id} has ${motion.rows} stored rows, expected ${recording.rowCount}.`)
+      const chunks = await database.pool.query<{ content: Buffer }[]>(
+        'SELECT content FROM recording_chunks WHERE recording_id = ? ORDER BY position',
+        [id],
+      )
+      const motion = motionOfChunks(
+        recording.name,
+        recording.arm.joints.length,
+        chunks.map(({ content }) => content),
+      )
+      if (motion.rows !== recording.rowCount)
+        throw new RangeError(`Recording ${id} has ${motion.rows} stored rows, expected ${recording.rowCount}.`)
       return motion
     },
 
     async start() {
       await sweep()
-      timer = setInterval(() => void sweep().catch((error: unknown) => log.warn({ err: error }, 'abandoned uploads could not be cleared')), SWEEP_MS)
+      timer = setInterval(
+        () => void sweep().catch((error: unknown) => log.warn({ err: error }, 'abandoned uploads could not be cleared')),
+        SWEEP_MS,
+      )
       timer.unref()
     },
 
@@ -217,5 +257,18 @@ export function createRecordingService({ database, clock, audit, log }: Dependen
 
 function recordOf(recording: RecordingWithArm): RecordingRecord {
   const { id, name, use, context, rowCount, duration, rate, bytes, checksum, createdAt, createdBy } = recording
-  return { id, arm: recording.arm.name, name, use, context, rows: rowCount, duration, rate, bytes: Number(bytes), checksum, createdAt, createdBy }
+  return {
+    id,
+    arm: recording.arm.name,
+    name,
+    use,
+    context,
+    rows: rowCount,
+    duration,
+    rate,
+    bytes: Number(bytes),
+    checksum,
+    createdAt,
+    createdBy,
+  }
 }

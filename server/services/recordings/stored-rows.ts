@@ -13,7 +13,10 @@ export function rowsPerChunk(joints: number): number {
 }
 
 /** Gathers rows into chunks. `add` answers a full chunk when there is one; `rest` what is left. */
-export function createChunkWriter(joints: number): { add(row: Float64Array): ArrayBuffer | undefined; rest(): ArrayBuffer | undefined } {
+export function createChunkWriter(joints: number): {
+  add(row: Float64Array): ArrayBuffer | undefined
+  rest(): ArrayBuffer | undefined
+} {
   const width = storedWidth(joints)
   const most = rowsPerChunk(joints)
   let view = new DataView(new ArrayBuffer(8 * width * most))
@@ -48,7 +51,8 @@ export function motionOfChunks(name: string, joints: number, chunks: readonly Ui
   const width = storedWidth(joints)
   const bytes = chunks.reduce((sum, chunk) => sum + chunk.byteLength, 0)
   const rows = bytes / (8 * width)
-  if (!Number.isInteger(rows)) throw new RangeError(`Recording ${name}: ${bytes} bytes are no whole number of rows of ${joints} joints.`)
+  if (!Number.isInteger(rows))
+    throw new RangeError(`Recording ${name}: ${bytes} bytes are no whole number of rows of ${joints} joints.`)
   const time = new Float64Array(rows)
   const states = new Float64Array(rows * 3 * joints)
   const torque = new Float64Array(rows * joints)

@@ -5,11 +5,17 @@ import { jointsOfUrdf } from '../../../sdk/examples/urdf-joints.ts'
 
 describe('a folder of recordings', () => {
   test('lists files with use, motion and payload', () => {
-    const listed = readRecordingsTable('file,motion,payload_kg,com_x_m,com_y_m,com_z_m,use\r\na.csv,sine,0,0,0,0,fit\r\nb.csv,pick,1.5,0.01,-0.02,0.1,meta_train\r\n')
+    const listed = readRecordingsTable(
+      'file,motion,payload_kg,com_x_m,com_y_m,com_z_m,use\r\na.csv,sine,0,0,0,0,fit\r\nb.csv,pick,1.5,0.01,-0.02,0.1,meta_train\r\n',
+    )
 
     expect(listed).toEqual([
       { file: 'a.csv', use: 'fit', context: { motion: 'sine' } },
-      { file: 'b.csv', use: 'meta_train', context: { motion: 'pick', payload: { mass: 1.5, center_of_mass: [0.01, -0.02, 0.1] } } },
+      {
+        file: 'b.csv',
+        use: 'meta_train',
+        context: { motion: 'pick', payload: { mass: 1.5, center_of_mass: [0.01, -0.02, 0.1] } },
+      },
     ])
   })
 
@@ -30,7 +36,14 @@ describe('joints of a URDF', () => {
 
     expect(name).toBe('heron-7')
     expect(joints).toHaveLength(7)
-    expect(joints[0]).toEqual({ name: 'heron_base_yaw', type: 'revolute', position_lower: -2.8, position_upper: 2.8, velocity_limit: 1.6, torque_limit: 150 })
+    expect(joints[0]).toEqual({
+      name: 'heron_base_yaw',
+      type: 'revolute',
+      position_lower: -2.8,
+      position_upper: 2.8,
+      velocity_limit: 1.6,
+      torque_limit: 150,
+    })
   })
 
   test.each([

@@ -17,7 +17,11 @@ async function* inPieces(bytes: Uint8Array, size: number) {
 async function read(text: string | Uint8Array, pieceSize = 1000) {
   const bytes = typeof text === 'string' ? new TextEncoder().encode(text) : text
   const chunks: Uint8Array[] = []
-  const summary = await readRecording(inPieces(bytes, pieceSize), joints, async (chunk) => void chunks.push(new Uint8Array(chunk)))
+  const summary = await readRecording(
+    inPieces(bytes, pieceSize),
+    joints,
+    async (chunk) => void chunks.push(new Uint8Array(chunk)),
+  )
   return { summary, motion: motionOfChunks('test', 2, chunks), chunks }
 }
 
@@ -33,7 +37,10 @@ async function refusal(text: string | Uint8Array): Promise<Refusal> {
 
 const rows = twoJointRows({ rows: 150 })
 const changed = (row: number, column: number, value: number | string) =>
-  csvOf(twoJointHeader, rows.map((cells, r) => (r === row ? cells.map((cell, c) => (c === column ? value : cell)) : cells)))
+  csvOf(
+    twoJointHeader,
+    rows.map((cells, r) => (r === row ? cells.map((cell, c) => (c === column ? value : cell)) : cells)),
+  )
 
 describe('reading a recording', () => {
   it('keeps every number in its place and says what the file is', async () => {
@@ -55,11 +62,32 @@ describe('reading a recording', () => {
   })
 
   it.each([
-    ['columns in any order', (t: string) => t.split('\n').map((line) => line.split(',').reverse().join(',')).join('\n')],
+    [
+      'columns in any order',
+      (t: string) =>
+        t
+          .split('\n')
+          .map((line) => line.split(',').reverse().join(','))
+          .join('\n'),
+    ],
     ['effort for torque', (t: string) => t.replaceAll('torque_', 'effort_')],
     ['a byte order mark', (t: string) => `\uFEFF${t}`],
     ['CRLF line ends', (t: string) => t.replaceAll('\n', '\r\n')],
-    ['quoted cells', (t: string) => t.split('\n').map((line) => line && line.split(',').map((cell) => `"${cell}"`).join(',')).join('\n')],
+    [
+      'quoted cells',
+      (t: string) =>
+        t
+          .split('\n')
+          .map(
+            (line) =>
+              line &&
+              line
+                .split(',')
+                .map((cell) => `"${cell}"`)
+                .join(','),
+          )
+          .join('\n'),
+    ],
     ['blanks around cells', (t: string) => t.replaceAll(',', ' , ')],
     ['no line end at the end', (t: string) => t.trimEnd()],
     ['empty lines', (t: string) => t.replaceAll('\n', '\n\n')],
@@ -104,16 +132,31 @@ describe('reading a recording', () => {
   })
 
   it('lists several faults and stops at ten', async () => {
-    const spoilt = csvOf(twoJointHeader, rows.map((cells) => cells.map((cell, c) => (c === 3 ? '' : cell))))
+    const spoilt = csvOf(
+      twoJointHeader,
+      rows.map((cells) => cells.map((cell, c) => (c === 3 ? '' : cell))),
+    )
 
     expect((await refusal(spoilt)).errors).toHaveLength(10)
   })
 
   it.each([
-    ['a missing column', (h: string[]) => h.with(3, 'x_swivel'), /Column velocity_swivel is missing\. Column "x_swivel" is unknown/],
+    [
+      'a missing column',
+      (h: string[]) => h.with(3, 'x_swivel'),
+      /Column velocity_swivel is missing\. Column "x_swivel" is unknown/,
+    ],
     ['a doubled column', (h: string[]) => h.with(3, 'velocity_lift'), /Column velocity_lift is there twice/],
-    ['torque and effort of one joint', (h: string[]) => h.with(7, 'effort_lift'), /Column torque_lift is there twice|Column effort_lift is there twice/],
-    ['an unknown joint', (h: string[]) => h.map((title) => title.replace('lift', 'tilt')), /"position_tilt" is unknown[\s\S]*joints are swivel, lift/],
+    [
+      'torque and effort of one joint',
+      (h: string[]) => h.with(7, 'effort_lift'),
+      /Column torque_lift is there twice|Column effort_lift is there twice/,
+    ],
+    [
+      'an unknown joint',
+      (h: string[]) => h.map((title) => title.replace('lift', 'tilt')),
+      /"position_tilt" is unknown[\s\S]*joints are swivel, lift/,
+    ],
   ])('refuses %s by name', async (_, rename, message) => {
     expect((await refusal(csvOf(rename(twoJointHeader), rows))).message).toMatch(message)
   })
@@ -155,7 +198,13 @@ describe('reading a recording', () => {
 
 describe('reading a number', () => {
   it.each([
-    ['1', 1], ['-1.5e-3', -1.5e-3], ['+2', 2], ['.5', 0.5], [' 7 ', 7], ['0', 0], ['-0.0', -0],
+    ['1', 1],
+    ['-1.5e-3', -1.5e-3],
+    ['+2', 2],
+    ['.5', 0.5],
+    [' 7 ', 7],
+    ['0', 0],
+    ['-0.0', -0],
   ])('takes %s', (text, value) => expect(readNumber(text)).toBe(value))
 
   it.each(['', ' ', '0x10', ' 0X1', '0b1', '0o7', '1,5', '1_000', 'Infinity', 'one'])('refuses "%s"', (text) => {

@@ -41,7 +41,12 @@ const file = (bytes = 500): Blob => new Blob([new Uint8Array(bytes).fill(65)])
 test('fields come with the file as it arrives, whatever its size within the limit', async () => {
   const url = await formServer()
 
-  expect(await send(url, [['arm', 'ü-2'], ['file', file(99_999), 'a b.csv']])).toEqual({ fields: { arm: 'ü-2' }, fileName: 'a b.csv', bytes: 99_999 })
+  expect(
+    await send(url, [
+      ['arm', 'ü-2'],
+      ['file', file(99_999), 'a b.csv'],
+    ]),
+  ).toEqual({ fields: { arm: 'ü-2' }, fileName: 'a b.csv', bytes: 99_999 })
   expect(await send(url, [['file', file(0), 'empty.csv']])).toMatchObject({ bytes: 0 })
 })
 
@@ -54,11 +59,49 @@ describe('a form is refused', () => {
     ['whose file is too large', [['file', file(100_001), 'a.csv']], 'body-too-large', /0\.1 MB/],
     ['that is announced as far too large', [['file', file(900_000), 'a.csv']], 'body-too-large', /0\.1 MB/],
     ['whose file is in another part', [['csv', file(), 'a.csv']], 'invalid-request', /Name its part "file"/],
-    ['with two files', [['file', file(), 'a.csv'], ['file', file(), 'b.csv']], 'invalid-request', /more than one file/],
-    ['with a field twice', [['arm', 'a'], ['arm', 'b'], ['file', file(), 'a.csv']], 'invalid-request', /"arm" is there twice/],
-    ['with a field after the file', [['file', file(), 'a.csv'], ['arm', 'a']], 'invalid-request', /comes after the file/],
-    ['with a field too long', [['arm', 'a'.repeat(20_000)], ['file', file(), 'a.csv']], 'invalid-request', /longer than/],
-    ['with too many fields', [...Array.from({ length: 30 }, (_, k): [string, string] => [`f${k}`, '']), ['file', file(), 'a.csv']], 'invalid-request', /more than 20/],
+    [
+      'with two files',
+      [
+        ['file', file(), 'a.csv'],
+        ['file', file(), 'b.csv'],
+      ],
+      'invalid-request',
+      /more than one file/,
+    ],
+    [
+      'with a field twice',
+      [
+        ['arm', 'a'],
+        ['arm', 'b'],
+        ['file', file(), 'a.csv'],
+      ],
+      'invalid-request',
+      /"arm" is there twice/,
+    ],
+    [
+      'with a field after the file',
+      [
+        ['file', file(), 'a.csv'],
+        ['arm', 'a'],
+      ],
+      'invalid-request',
+      /comes after the file/,
+    ],
+    [
+      'with a field too long',
+      [
+        ['arm', 'a'.repeat(20_000)],
+        ['file', file(), 'a.csv'],
+      ],
+      'invalid-request',
+      /longer than/,
+    ],
+    [
+      'with too many fields',
+      [...Array.from({ length: 30 }, (_, k): [string, string] => [`f${k}`, '']), ['file', file(), 'a.csv']],
+      'invalid-request',
+      /more than 20/,
+    ],
     ['without a file', [['arm', 'a']], 'invalid-request', /no file/],
   ])('%s', async (_, entries, slug, detail) => {
     const answer = await send(await formServer(), entries)
@@ -69,13 +112,20 @@ describe('a form is refused', () => {
 
   test.each([
     ['without a boundary', 'multipart/form-data', '', 'malformed-body'],
-    ['that ends before its last boundary', 'multipart/form-data; boundary=b', '--b\r\ncontent-disposition: form-data; name="file"; filename="a"\r\n\r\n1,2', 'upload-incomplete'],
+    [
+      'that ends before its last boundary',
+      'multipart/form-data; boundary=b',
+      '--b\r\ncontent-disposition: form-data; name="file"; filename="a"\r\n\r\n1,2',
+      'upload-incomplete',
+    ],
     ['that ends within a header', 'multipart/form-data; boundary=b', '--b\r\ncontent-dispos', 'upload-incomplete'],
     ['of garbage', 'multipart/form-data; boundary=b', 'garbage', 'upload-incomplete'],
   ])('%s', async (_, type, body, slug) => {
     const url = await formServer()
 
-    const answer = (await (await fetch(url, { method: 'POST', headers: { 'content-type': type }, body })).json()) as { refused: string }
+    const answer = (await (await fetch(url, { method: 'POST', headers: { 'content-type': type }, body })).json()) as {
+      refused: string
+    }
 
     expect(answer.refused).toBe(slug)
   })
@@ -84,7 +134,10 @@ describe('a form is refused', () => {
 test('the sender of a refused form gets to read why, and the connection goes on', async () => {
   const url = await formServer(1_000)
   const connection = await new Promise<string>((resolve, reject) => {
-    const req = request(url, { method: 'POST', headers: { 'content-type': 'multipart/form-data; boundary=b', 'transfer-encoding': 'chunked' } })
+    const req = request(url, {
+      method: 'POST',
+      headers: { 'content-type': 'multipart/form-data; boundary=b', 'transfer-encoding': 'chunked' },
+    })
     req.on('response', (res) => {
       let text = ''
       res.on('data', (piece) => (text += piece)).on('end', () => resolve(text))
