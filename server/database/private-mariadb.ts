@@ -62,8 +62,8 @@ export async function startPrivateMariaDb(options: PrivateMariaDbOptions): Promi
     if (await answers(credentials, 3_000)) return handle(left, true)
     await stopProcess(left)
   }
-  credentials.port = await freePort(credentials.port)
-  await writeCredentials(folder, credentials)
+  const port = await freePort(credentials.port)
+  if (port !== credentials.port) await writeCredentials(folder, Object.assign(credentials, { port }))
   return handle(await launch(program, folder, owner, credentials, options), false)
 
   function handle(firstPid: number, adopted: boolean): PrivateMariaDb {
