@@ -288,7 +288,9 @@ describe('an operator', () => {
 
     await page.getByLabel('Entry').selectOption('command')
     await page.getByText('Start again with it.').waitFor()
-    expect(await page.getByRole('list', { name: 'Log entries' }).getByRole('listitem').count()).toBe(3)
+    await expect
+      .poll(() => page.getByRole('list', { name: 'Log entries' }).getByRole('listitem').count(), { timeout: 15_000 })
+      .toBe(3)
     await page.reload()
     await page.getByText('Start again with it.').waitFor()
     expect(await page.getByLabel('Entry').inputValue()).toBe('command')

@@ -57,7 +57,11 @@ export function LogSection({ id, ended }: { id: string; ended: boolean }) {
           {entry || verdict ? 'Set them back to any.' : 'The first batch of the controller starts it.'}
         </Empty>
       ) : (
-        <ol className="border-t border-edge" aria-label="Log entries">
+        <ol
+          aria-label="Log entries"
+          aria-busy={log.isPlaceholderData}
+          className={`border-t border-edge ${log.isPlaceholderData ? 'opacity-60' : ''}`}
+        >
           {log.data.items.map((item) => (
             <li
               key={item.position}
