@@ -3,7 +3,8 @@
  * chosen on the recordings to validate, figures of those to evaluate.
  *
  *   nice -n 15 npx tsx tests/load/linear.ts FOLDER [--bases identified,network] [--schemes payload,context]
- *     [--updates recursive,mse,structured,state_dependent,least_squares] [--seeds 1,2,3] [--rounds 180] [--version FILE] [--recorded-only]
+ *     [--updates recursive,mse,structured,state_dependent,least_squares] [--seeds 1,2,3] [--rounds 180] [--version FILE]
+ *     [--recorded-only] [--verbose]
  *
  * FOLDER holds recordings.csv (columns file, payload_kg and use), the files it names and one URDF. Motions whose name begins
  * with switching or grip-release have their payload gripped at 10 s and released at 20 s. --version: a network base to use
@@ -20,7 +21,9 @@ import { createPayloadBasis, type Basis } from '../../shared/dynamics/linear/bas
 import { fitContextBasis } from '../../shared/dynamics/linear/context-fit.ts'
 import { learnLinear, type LinearCandidate } from '../../shared/dynamics/linear/learn.ts'
 import { fitConstant } from '../../shared/dynamics/linear/least-squares.ts'
-import { mixedMotions, prepareMotion, simulatedMotions, type BaseEvaluator, type LinearMotion } from '../../shared/dynamics/linear/linear-motion.ts'
+import {
+  mixedMotions, prepareMotion, simulatedMotions, type BaseEvaluator, type LinearMotion,
+} from '../../shared/dynamics/linear/linear-motion.ts'
 import { meanErrors, measureLinear } from '../../shared/dynamics/linear/measure.ts'
 import { defaultLinearMetaTrainingOptions } from '../../shared/dynamics/linear/meta-training.ts'
 import { createKernels } from '../../shared/dynamics/kernels/kernels.ts'
@@ -66,7 +69,8 @@ interface Ground {
 function identified(): Ground {
   const started = performance.now()
   const { base, rank, conditioning, constrained, afterPerJoint } = finish(identifyBase(chain, byUse.fit))
-  console.log(`identified base in ${seconds(started)} s: rank ${rank}, conditioning ${conditioning.toFixed(0)}, constrained ${constrained}, `
+  console.log(`identified base in ${seconds(started)} s: rank ${rank}, conditioning ${conditioning.toFixed(0)}, `
+    + `constrained ${constrained}, `
     + `error per joint ${afterPerJoint.map(value => value.toFixed(3)).join(' ')} N·m`)
   const evaluator = createRigidBodyEvaluator(base)
   return { normalisation: fitNormalisation(byUse.fit, joints), evaluator: () => evaluator, rigid: base }
@@ -103,7 +107,8 @@ function compareOn(name: string, ground: Ground, seed: number): void {
     const started = performance.now()
     const basis = scheme === 'payload' ? payloadBasis(ground) : contextBasis(ground, seed)
     if (scheme === 'context') console.log(`context basis in ${seconds(started)} s`)
-    const prepare = (motion: Motion) => prepareMotion(motion, ground.evaluator(motion), basis, ground.normalisation, contexts.get(motion.name)!)
+    const prepare = (motion: Motion) =>
+      prepareMotion(motion, ground.evaluator(motion), basis, ground.normalisation, contexts.get(motion.name)!)
     const own = [...byUse.meta_train, ...byUse.fit.filter(({ name: file }) => file.startsWith('unloaded'))].map(prepare)
     const simulated = values['recorded-only'] ? [] : simulatedMotions(own.filter(({ unloaded }) => unloaded), createRandom(seed),
       scheme === 'payload' ? null : payloadTable(ground))
@@ -113,24 +118,30 @@ function compareOn(name: string, ground: Ground, seed: number): void {
     const title = `${name}, ${scheme}`
     const noise = evaluation.filter(({ changes }) => changes!.length === 0).map(motion => fitConstant(motion).error)
     console.log(`\n${title}: floor (best constant z) ${noise.map(value => value.toFixed(4)).join(' ')}`)
-    console.log(`${'update'.padEnd(18)} next     0.4 s    1 s      frozen   | switch next, 1 s | unloaded next, 1 s ÷ none | after 2 s, 1 s | µs a step | friction × 1.25, frozen`)
+    console.log(
+      `${'update'.padEnd(18)} next     0.4 s    1 s      frozen   | switch next, 1 s `
+      + '| unloaded next, 1 s ÷ none | after 2 s, 1 s | µs a step | friction × 1.25, frozen',
+    )
     report('none', null, evaluation, own)
     for (const update of values.updates.split(',') as LinearCandidate[]) {
       const begun = performance.now()
       const learned = finish(learnLinear(update, training, validation, {
         ...defaultLinearMetaTrainingOptions, seed, updates: Number(values.rounds), positive: 'exp', hidden: 32,
       }), progress => {
-        if (values.verbose && progress.validation !== undefined) console.log(`  ${progress.update} outer ${progress.outer.toFixed(3)} validation ${progress.validation.toFixed(3)}`)
+        if (values.verbose && progress.validation !== undefined) console.log(
+          `  ${progress.update} outer ${progress.outer.toFixed(3)} validation ${progress.validation.toFixed(3)}`,
+        )
       })
       report(update, learned.create(), evaluation, own)
       console.log(`  learned in ${seconds(begun)} s${learned.update === undefined ? '' : `, kept update ${learned.update}`}`)
-      if (values.verbose && learned.constants.kind !== 'first_order') console.log(JSON.stringify(learned.constants, (_, value) => (typeof value === 'number' ? Number(value.toPrecision(3)) : value)))
+      if (values.verbose && learned.constants.kind !== 'first_order') console.log(shortJson(learned.constants))
     }
   }
 }
 
 function payloadBasis({ rigid, normalisation }: Ground): Basis {
-  return createPayloadBasis({ chain: rigid?.chain ?? chain, outputStd: normalisation.outputStd, friction: rigid?.friction ?? null })
+  const { outputStd } = normalisation
+  return createPayloadBasis({ chain: rigid?.chain ?? chain, outputStd, friction: rigid?.friction ?? null })
 }
 
 /** The payload basis on the rows of a motion, whose states are found by its name. */
@@ -162,7 +173,8 @@ function report(title: string, update: LinearUpdate | null, evaluation: LinearMo
     return { nextBatch: error, stale04: error, stale1: error, after2sStale1: error, frozen: error }
   }
   const started = performance.now()
-  const of = (motions: LinearMotion[]) => meanErrors(motions.map(motion => (update ? measureLinear(update, motion) : nothing(motion))))
+  const errorsOf = (motion: LinearMotion) => (update ? measureLinear(update, motion) : nothing(motion))
+  const of = (motions: LinearMotion[]) => meanErrors(motions.map(errorsOf))
   const steady = of(evaluation.filter(({ changes }) => changes!.length === 0))
   const took = performance.now() - started
   const switching = of(evaluation.filter(({ changes }) => changes!.length > 0))
@@ -177,7 +189,8 @@ function report(title: string, update: LinearUpdate | null, evaluation: LinearMo
     ...motion, residual: motion.residual.map((value, k) => value + 1.25 * motion.basis[k * 5 + 4]),
   }))).frozen.toFixed(4) : ''
   console.log(`${title.padEnd(18)} ${cells.join(' ')} | ${switching.nextBatch.toFixed(4)} ${switching.stale1.toFixed(4)} | `
-    + `${unloaded.nextBatch.toFixed(4)} ${unloaded.stale1.toFixed(4)} ${hurt.toFixed(2)} | ${steady.after2sStale1.toFixed(4)} | ${((1000 * took) / steps).toFixed(0)} | ${rubbing}`)
+    + `${unloaded.nextBatch.toFixed(4)} ${unloaded.stale1.toFixed(4)} ${hurt.toFixed(2)} | `
+    + `${steady.after2sStale1.toFixed(4)} | ${((1000 * took) / steps).toFixed(0)} | ${rubbing}`)
 }
 
 function contextsOf(from: string): Map<string, { unloaded: boolean; changes: number[] }> {
@@ -195,6 +208,10 @@ function finish<P, R>(run: Generator<P, R>, onProgress?: (progress: P) => void):
   let step = run.next()
   for (; !step.done; step = run.next()) onProgress?.(step.value)
   return step.value
+}
+
+function shortJson(value: object): string {
+  return JSON.stringify(value, (_, entry) => (typeof entry === 'number' ? Number(entry.toPrecision(3)) : entry))
 }
 
 function seconds(started: number): string {

@@ -11,7 +11,9 @@ export interface FrictionSpeeds {
 }
 
 /** Writes the columns 1, q̇, tanh(q̇/v), e^−(q̇/s)² tanh(q̇/v) of one velocity. */
-export function frictionColumns(velocity: number, { smoothing, stribeckVelocity }: FrictionSpeeds, out: Float64Array, at: number): void {
+export function frictionColumns(
+  velocity: number, { smoothing, stribeckVelocity }: FrictionSpeeds, out: Float64Array, at: number,
+): void {
   const sign = tanh(velocity / smoothing)
   const ratio = velocity / stribeckVelocity
   out[at] = 1

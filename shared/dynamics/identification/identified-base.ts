@@ -36,7 +36,9 @@ export function createRigidBodyEvaluator({ chain: description, offsets, friction
   const joints = chain.size
   checkLength('offsets', offsets.length, joints, `${joints} joints`)
   checkLength('friction', friction.length, joints, `${joints} joints`)
-  for (const [j, value] of offsets.entries()) if (!Number.isFinite(value)) throw new ShapeError(`offsets: value ${j} is ${value}.`)
+  for (const [j, value] of offsets.entries()) {
+    if (!Number.isFinite(value)) throw new ShapeError(`offsets: value ${j} is ${value}.`)
+  }
   for (const [j, { smoothing, stribeckVelocity }] of friction.entries()) {
     if (!(smoothing > 0 && stribeckVelocity > 0)) throw new ShapeError(`friction: joint ${j} has a speed that is not above 0.`)
   }

@@ -204,7 +204,9 @@ function priorOf({ joints: links }: ChainDescription, data: Data, share: number)
   for (let j = 0; j < joints; j++) {
     const size = 10 * Math.sqrt(data.torqueVariance[j])
     const speed = Math.sqrt(varianceOf(data.velocity[j]))
-    for (let k = 0; k < FRICTION_COLUMNS; k++) deviation[inertial + FRICTION_COLUMNS * j + k] = k === 1 ? size / Math.max(speed, 1e-3) : size
+    for (let k = 0; k < FRICTION_COLUMNS; k++) {
+      deviation[inertial + FRICTION_COLUMNS * j + k] = k === 1 ? size / Math.max(speed, 1e-3) : size
+    }
   }
   return { mean, deviation, length, mass }
 }
@@ -246,7 +248,9 @@ function assemble(data: Data, speeds: readonly FrictionSpeeds[], variance: Float
     const first = PARAMETERS_PER_LINK * j
     const own = inertial + FRICTION_COLUMNS * j
     const normal = data.normals[j]
-    for (let r = first; r < inertial; r++) for (let c = first; c <= r; c++) information[r * size + c] += w * normal[r * inertial + c]
+    for (let r = first; r < inertial; r++) {
+      for (let c = first; c <= r; c++) information[r * size + c] += w * normal[r * inertial + c]
+    }
     const y = data.regressors[j]
     for (let row = 0; row < rows; row++) {
       const torque = data.torque[j][row]
@@ -488,5 +492,7 @@ function spectrumOf(information: Float64Array, prior: Prior, size: number): { ra
   }
   symmetricEigen(matrix, size, new Float64Array(size * size))
   const values = Array.from({ length: size }, (_, k) => matrix[k * size + k]).filter(value => value > 3)
-  return { rank: values.length, conditioning: values.length === 0 ? Infinity : Math.sqrt(Math.max(...values) / Math.min(...values)) }
+  return { rank: values.length, conditioning: values.length === 0
+    ? Infinity
+    : Math.sqrt(Math.max(...values) / Math.min(...values)) }
 }

@@ -103,8 +103,10 @@ export function createContextBasis({ size, network, parameters, normalisation }:
   const joints = outputMean.length
   const inputs = 3 * joints
   if (network.sizes[0] !== inputs || network.sizes.at(-1) !== joints * size || network.activation !== 'relu') {
-    throw new ShapeError(`A basis of ${size} on ${joints} joints is a relu network of ${inputs} inputs and ${joints * size} outputs; `
-      + `found ${network.activation}, [${network.sizes}].`)
+    throw new ShapeError(
+      `A basis of ${size} on ${joints} joints is a relu network of ${inputs} inputs and ${joints * size} outputs; `
+      + `found ${network.activation}, [${network.sizes}].`,
+    )
   }
   checkLength('parameters', parameters.length, parameterCount(network), `sizes ${network.sizes.join('-')}`)
   const theta = Float64Array.from(parameters)
@@ -114,7 +116,9 @@ export function createContextBasis({ size, network, parameters, normalisation }:
   function evaluate(states: Float64Array, rows: number, out: Float64Array): void {
     for (let from = 0; from < rows; from += rowsAtATime) {
       const count = Math.min(rowsAtATime, rows - from)
-      for (let k = 0, at = from * inputs; k < count * inputs; k++, at++) x[k] = (states[at] - inputMean[k % inputs]) / inputStd[k % inputs]
+      for (let k = 0, at = from * inputs; k < count * inputs; k++, at++) {
+        x[k] = (states[at] - inputMean[k % inputs]) / inputStd[k % inputs]
+      }
       forward(pass, theta, x, count, from === 0 && count === rows ? out : out.subarray(from * joints * size))
     }
   }

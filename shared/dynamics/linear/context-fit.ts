@@ -84,7 +84,8 @@ export function* fitContextBasis(
     const parameters = whiten(shape, network.read(), states, stretches, size, joints)
     const given: ContextBasisInputs = { size, network: shape, parameters, normalisation }
     network.write(parameters)
-    return { inputs: given, basis: createContextBasis(given), error: solveStates(kernels, network, stretches, states, size, joints, random) }
+    const error = solveStates(kernels, network, stretches, states, size, joints, random)
+    return { inputs: given, basis: createContextBasis(given), error }
   } finally {
     for (const handle of [network, moments, loss, batch]) handle.free()
   }
@@ -154,7 +155,9 @@ function stretchesOf(motions: readonly LinearMotion[]): Stretch[] {
     if (changes === null) return []
     const rowAfter = (at: number) => { const row = time.findIndex(value => value >= at); return row < 0 ? rows : row }
     const bounds = [0, ...changes.map(rowAfter), rows]
-    return bounds.slice(1).map((to, k) => ({ motion, from: bounds[k], to, unloaded })).filter(({ from, to }) => to - from >= leastRows)
+    return bounds.slice(1)
+      .map((to, k) => ({ motion, from: bounds[k], to, unloaded }))
+      .filter(({ from, to }) => to - from >= leastRows)
   })
 }
 
@@ -176,7 +179,8 @@ function stretchAt(ends: readonly number[], at: number): number {
 
 /** The best z of every loaded stretch for the network as it is. Returns the mean squared error they leave. */
 function solveStates(
-  kernels: Kernels, network: NetworkHandle, stretches: readonly Stretch[], states: readonly Float64Array[], size: number, joints: number,
+  kernels: Kernels, network: NetworkHandle, stretches: readonly Stretch[], states: readonly Float64Array[], size: number,
+  joints: number,
   random: Random,
 ): number {
   const inputs = 3 * joints
@@ -215,11 +219,14 @@ function solveStates(
 
 /** Turns the last layer so that the second moments of z over the loaded stretches are 1; A z stays what it was. */
 function whiten(
-  shape: NetworkShape, parameters: Float32Array, states: readonly Float64Array[], stretches: readonly Stretch[], size: number, joints: number,
+  shape: NetworkShape, parameters: Float32Array, states: readonly Float64Array[], stretches: readonly Stretch[],
+  size: number, joints: number,
 ): Float32Array {
   const loaded = states.filter((_, s) => !stretches[s].unloaded)
   const factor = new Float64Array(size * size)
-  for (const z of loaded) for (let r = 0; r < size; r++) for (let c = 0; c <= r; c++) factor[r * size + c] += (z[r] * z[c]) / loaded.length
+  for (const z of loaded) {
+    for (let r = 0; r < size; r++) for (let c = 0; c <= r; c++) factor[r * size + c] += (z[r] * z[c]) / loaded.length
+  }
   for (let r = 0; r < size; r++) factor[r * size + r] += 1e-6
   factorise(factor, size)
   const { weights, inputs, outputs, biases } = layerPlaces(shape).at(-1)!

@@ -35,7 +35,9 @@ export function createFirstOrderUpdate(constants: FirstOrderConstants, size: num
   const { decay, rowsPerStep, lossShape } = constants
   checkLength('steps', constants.steps.length, d, `${size} states, ${joints} joints`)
   if (!(decay >= 0 && decay < Infinity)) throw new ShapeError(`decay is ${decay}, expected a finite number from 0.`)
-  if (!Number.isInteger(rowsPerStep) || rowsPerStep < 1) throw new ShapeError(`rowsPerStep is ${rowsPerStep}, expected a positive integer.`)
+  if (!Number.isInteger(rowsPerStep) || rowsPerStep < 1) {
+    throw new ShapeError(`rowsPerStep is ${rowsPerStep}, expected a positive integer.`)
+  }
   const steps = Float64Array.from(constants.steps)
   const phi = Float64Array.from(constants.lossParameters)
   const kind = lossKinds[constants.loss]

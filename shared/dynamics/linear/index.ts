@@ -8,14 +8,18 @@ export { createLinearUpdate, learnLinear } from './learn.ts'
 export type { LearnedLinear, LearnLinearOptions, LinearCandidate, LinearConstants } from './learn.ts'
 export { createLeastSquares, fitConstant } from './least-squares.ts'
 export type { ConstantFit, LeastSquaresSettings } from './least-squares.ts'
-export { defaultPayloadRange, drawPayload, mixedMotions, prepareMotion, simulatedMotions, simulatePayload } from './linear-motion.ts'
+export {
+  defaultPayloadRange, drawPayload, mixedMotions, prepareMotion, simulatedMotions, simulatePayload,
+} from './linear-motion.ts'
 export type { BaseEvaluator, LinearMotion, MotionContext, PayloadRange } from './linear-motion.ts'
 export { createLinearCore } from './linear-core.ts'
 export type { LinearCore, LinearCoreInputs, RawBatch } from './linear-core.ts'
 export { meanErrors, measureLinear } from './measure.ts'
 export type { LinearErrors } from './measure.ts'
 export { defaultLinearMetaTrainingOptions, judge, metaTrainLinear } from './meta-training.ts'
-export type { LinearMetaTrainingOptions, LinearMetaTrainingProgress, LinearMetaTrainingResult, Objective } from './meta-training.ts'
+export type {
+  LinearMetaTrainingOptions, LinearMetaTrainingProgress, LinearMetaTrainingResult, Objective,
+} from './meta-training.ts'
 export { defaultPayloadBounds, estimatePayload, implausibilities } from './payload-estimate.ts'
 export type { PayloadBounds, PayloadEstimate } from './payload-estimate.ts'
 export { checkConstants, createRecursiveUpdate } from './recursive.ts'

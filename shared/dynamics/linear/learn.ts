@@ -61,7 +61,9 @@ export function* learnLinear(
   candidate: LinearCandidate, training: readonly LinearMotion[], validation: readonly LinearMotion[], options: LearnLinearOptions,
 ): Generator<LinearMetaTrainingProgress, LearnedLinear> {
   if (training.length === 0 || validation.length === 0) {
-    throw new RangeError(`${training.length} recordings to learn from and ${validation.length} to choose on: at least one of each is needed.`)
+    throw new RangeError(
+      `${training.length} recordings to learn from and ${validation.length} to choose on: at least one of each is needed.`,
+    )
   }
   const { residual, rows, basis, x } = training[0]
   const joints = residual.length / rows
@@ -84,10 +86,12 @@ export function* learnLinear(
   const lossShape: LossShape = { joints, inputs: x.length / rows, hidden: options.hidden, positive: options.positive }
   const learnable = createLearnableFirstOrder(size, joints, rowsPerStep, candidate, lossShape)
   const start = startFirstOrder(candidate, lossShape, training, options, size, joints)
-  const { theta, validation: errors, update } = yield* metaTrainLinear(learnable, thetaOfFirstOrder(start), training, validation, options)
+  const learning = metaTrainLinear(learnable, thetaOfFirstOrder(start), training, validation, options)
+  const { theta, validation: errors, update } = yield* learning
   const steps = firstOrderConstantsOf(theta, size + joints, rowsPerStep, candidate, lossShape)
   // As it is stored, in single precision.
-  return give({ kind: 'first_order', steps: { ...steps, lossParameters: Array.from(Float32Array.from(steps.lossParameters)) } }, errors, update)
+  const lossParameters = Array.from(Float32Array.from(steps.lossParameters))
+  return give({ kind: 'first_order', steps: { ...steps, lossParameters } }, errors, update)
 }
 
 const stepScales = [0.25, 0.5, 1, 2, 4, 8]
@@ -106,7 +110,10 @@ function startFirstOrder(
   }
   const constants = (scale: number): FirstOrderConstants => ({
     rowsPerStep, decay: 0.7, loss, lossShape, lossParameters,
-    steps: [...Array.from(power, sum => (0.1 * scale * count) / Math.max(sum, 1e-9)), ...new Array<number>(joints).fill(0.1 * scale * joints)],
+    steps: [
+      ...Array.from(power, sum => (0.1 * scale * count) / Math.max(sum, 1e-9)),
+      ...new Array<number>(joints).fill(0.1 * scale * joints),
+    ],
   })
   const some = training.filter((_, k) => k % Math.ceil(training.length / 6) === 0)
   let best = { score: Infinity, constants: constants(stepScales[0]) }
@@ -121,7 +128,8 @@ function startFirstOrder(
 function tuneLeastSquares(
   validation: readonly LinearMotion[], { rowsPerStep, objective }: LearnLinearOptions, size: number, joints: number,
 ): { settings: LeastSquaresSettings; errors: LinearErrors } {
-  let best = { score: Infinity, settings: { rowsPerStep, forgetting: 0, initial: 100 } as LeastSquaresSettings, errors: {} as LinearErrors }
+  const settings: LeastSquaresSettings = { rowsPerStep, forgetting: 0, initial: 100 }
+  let best = { score: Infinity, settings, errors: {} as LinearErrors }
   const attempt = (forgetting: number, initial: number): void => {
     const settings = { rowsPerStep, forgetting, initial }
     const judged = judge(createLeastSquares(settings, size, joints), validation, objective)

@@ -16,7 +16,8 @@ export function firstOrderConstantsOf(
   theta: Float64Array, d: number, rowsPerStep: number, loss: LossName, lossShape: LossShape,
 ): FirstOrderConstants {
   return {
-    rowsPerStep, loss, lossShape, decay: exp(theta[d]), steps: Array.from(theta.subarray(0, d), exp), lossParameters: theta.slice(d + 1),
+    rowsPerStep, loss, lossShape, decay: exp(theta[d]), steps: Array.from(theta.subarray(0, d), exp),
+    lossParameters: theta.slice(d + 1),
   }
 }
 

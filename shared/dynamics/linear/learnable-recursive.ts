@@ -21,7 +21,9 @@ const isDiagonal = (r: number, c: number) => r === c
 /** θ of constants; the inverse of {@link constantsOf}. */
 export function thetaOf(constants: FilterConstants): Float64Array {
   const factor = constants.initialFactor.slice()
-  for (let r = 0, k = 0; k < factor.length; r++) for (let c = 0; c <= r; c++, k++) if (isDiagonal(r, c)) factor[k] = Math.log(factor[k])
+  for (let r = 0, k = 0; k < factor.length; r++) {
+    for (let c = 0; c <= r; c++, k++) if (isDiagonal(r, c)) factor[k] = Math.log(factor[k])
+  }
   const logs = [
     ...constants.initialBias, ...constants.driftOfState, ...constants.driftOfBias, ...constants.noise, constants.decay,
     constants.threshold, ...constants.opening,
@@ -34,7 +36,9 @@ export function constantsOf(theta: Float64Array, size: number, joints: number, r
   const at = placesOf(size, joints)
   const part = (from: number, length: number) => Array.from(theta.subarray(from, from + length), exp)
   const initialFactor = Array.from(theta.subarray(0, at.initialBias))
-  for (let r = 0, k = 0; r < size; r++) for (let c = 0; c <= r; c++, k++) if (isDiagonal(r, c)) initialFactor[k] = exp(initialFactor[k])
+  for (let r = 0, k = 0; r < size; r++) {
+    for (let c = 0; c <= r; c++, k++) if (isDiagonal(r, c)) initialFactor[k] = exp(initialFactor[k])
+  }
   return {
     rowsPerStep,
     decay: exp(theta[at.decay]),
@@ -153,7 +157,9 @@ function createTape(constants: FilterConstants, size: number, joints: number, st
   }
 
   /** Backwards through gate and running innovation. Returns the derivative with respect to the innovation before. */
-  function throughGate(i: number, { residual, basis }: LinearRows, first: number, sBar: Float64Array, after: number, gradient: Float64Array): number {
+  function throughGate(
+    i: number, { residual, basis }: LinearRows, first: number, sBar: Float64Array, after: number, gradient: Float64Array,
+  ): number {
     const surprise = surprises[i]
     let surpriseBar = after
     if (surprise > threshold) {

@@ -18,7 +18,9 @@ export interface LeastSquaresSettings {
  *
  * Source: Ljung, System Identification (1999), section 11.2 (from memory).
  */
-export function createLeastSquares({ rowsPerStep, forgetting, initial }: LeastSquaresSettings, size: number, joints: number): LinearUpdate {
+export function createLeastSquares(
+  { rowsPerStep, forgetting, initial }: LeastSquaresSettings, size: number, joints: number,
+): LinearUpdate {
   const most = 1e3 * initial
   const h = new Float64Array(size)
   const v = new Float64Array(size)

@@ -74,7 +74,9 @@ export function createLinearCore({ base, basis, update, normalisation, reference
   const { inputMean, inputStd, outputMean, outputStd } = normalisation
   checkLength('normalisation.outputStd', outputStd.length, joints, `${joints} joints`)
   if (update.size !== size || update.joints !== joints) {
-    throw new ShapeError(`The update is for ${update.size} states and ${update.joints} joints, the basis for ${size} and ${joints}.`)
+    throw new ShapeError(
+      `The update is for ${update.size} states and ${update.joints} joints, the basis for ${size} and ${joints}.`,
+    )
   }
   const share = exp(-update.decay)
   const covarianceLength = update.initial().covariance.length
@@ -84,7 +86,8 @@ export function createLinearCore({ base, basis, update, normalisation, reference
   function makeArea(rows: number) {
     const table = () => new Float64Array(rows * joints)
     return {
-      rows, time: new Float64Array(rows), x: new Float64Array(rows * 3 * joints), base: table(), measured: table(), residual: table(),
+      rows, time: new Float64Array(rows), x: new Float64Array(rows * 3 * joints), base: table(), measured: table(),
+      residual: table(),
       basis: new Float64Array(rows * joints * size), left: new Float64Array(rows), learned: table(),
     }
   }
@@ -114,7 +117,9 @@ export function createLinearCore({ base, basis, update, normalisation, reference
     const rows = out.subarray(first, to * joints)
     rows.set(area.base.subarray(first, to * joints))
     if (!state) return
-    for (let row = from; row < to; row++) area.left[row - from] = area.time[row] > state.asOf ? fade(share, area.time[row] - state.asOf) : 1
+    for (let row = from; row < to; row++) {
+      area.left[row - from] = area.time[row] > state.asOf ? fade(share, area.time[row] - state.asOf) : 1
+    }
     addLearned(state.values, size, joints, area.basis.subarray(first * size), area.left, to - from, rows)
   }
 

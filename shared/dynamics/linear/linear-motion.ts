@@ -74,7 +74,9 @@ export function drawPayload({ mass, centerOfMass }: PayloadRange, random: Random
  * @param z  payload in units of PAYLOAD_SCALES, length 4
  * @param switching  gripped within the second quarter, released within the third or fourth
  */
-export function simulatePayload(motion: LinearMotion, payload: Float64Array, z: Float64Array, switching: boolean, random: Random): LinearMotion {
+export function simulatePayload(
+  motion: LinearMotion, payload: Float64Array, z: Float64Array, switching: boolean, random: Random,
+): LinearMotion {
   const { rows, time } = motion
   const joints = motion.residual.length / rows
   const size = payload.length / motion.residual.length

@@ -54,7 +54,8 @@ export function measureLinear(update: LinearUpdate, motion: LinearMotion): Linea
   let settledRows = 0
   let frozen = 0
   for (let i = 0; i < steps; i++) {
-    const error = (at: number) => squares(motion, history[at], asOf[at], decay, size, joints, i * rowsPerStep, (i + 1) * rowsPerStep)
+    const from = i * rowsPerStep
+    const error = (at: number) => squares(motion, history[at], asOf[at], decay, size, joints, from, from + rowsPerStep)
     lags.forEach((lag, index) => { sums[index] += error(Math.max(i - lag, 0)) })
     if (time[i * rowsPerStep] - time[0] >= SETTLED) {
       settled += error(Math.max(i - lags[2], 0))

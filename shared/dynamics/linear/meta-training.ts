@@ -85,7 +85,9 @@ export function* metaTrainLinear(
 ): Generator<LinearMetaTrainingProgress, LinearMetaTrainingResult> {
   const { steps, rowsPerStep } = options
   const long = training.filter(({ rows }) => rows >= steps * rowsPerStep)
-  if (validation.length === 0) throw new RangeError('Meta-training needs at least one validation recording: constants are chosen on them.')
+  if (validation.length === 0) {
+    throw new RangeError('Meta-training needs at least one validation recording: constants are chosen on them.')
+  }
   if (long.length === 0) throw new RangeError(`Meta-training needs a recording of at least ${steps * rowsPerStep} rows.`)
   const random = createRandom(options.seed)
   const theta = start.slice()
@@ -119,7 +121,9 @@ export function judge(
   const terms = termsOf[objective]
   const scoreOf = ({ nextBatch, stale04, stale1, frozen }: LinearErrors) =>
     [nextBatch, stale04, stale1, frozen].reduce((sum, error, k) => sum + (terms[k] > 0 ? terms[k] * Math.log(error) : 0), 0)
-  const of = (unloaded: boolean) => motions.filter(motion => motion.unloaded === unloaded).map(motion => measureLinear(update, motion))
+  const of = (unloaded: boolean) => motions
+    .filter(motion => motion.unloaded === unloaded)
+    .map(motion => measureLinear(update, motion))
   const loaded = of(false)
   const unloaded = of(true)
   let score = 0
@@ -139,10 +143,13 @@ interface Stream {
 }
 
 function createStreams(
-  motions: readonly LinearMotion[], update: LinearUpdate, { streams: count, steps, rowsPerStep }: LinearMetaTrainingOptions, random: Random,
+  motions: readonly LinearMotion[], update: LinearUpdate,
+  { streams: count, steps, rowsPerStep }: LinearMetaTrainingOptions, random: Random,
 ): Stream[] {
   const groups = [motions.filter(({ unloaded }) => !unloaded), motions.filter(({ unloaded }) => unloaded)]
-  const unloadedStreams = groups[1].length === 0 ? 0 : groups[0].length === 0 ? count : Math.max(1, Math.round(unloadedShare * count))
+  const unloadedStreams = groups[1].length === 0 ? 0 : groups[0].length === 0
+    ? count
+    : Math.max(1, Math.round(unloadedShare * count))
   return Array.from({ length: count }, (_, index) => {
     const own = groups[index < unloadedStreams ? 1 : 0]
     const stream: Stream = {
@@ -191,7 +198,8 @@ function outerGradient(
     const tape = learnable.tape(theta, steps)
     tape.run(state, motion, row)
     const lags = LAGS.map(lag => stepsOfLag(lag, rowsPerStep, periodOf(motion)))
-    if (update.isFinite(state)) chains.push({ stream, tape, first, row, isFresh, lags, far: pickFar(motion, row + steps * rowsPerStep, farRows, random) })
+    const far = pickFar(motion, row + steps * rowsPerStep, farRows, random)
+    if (update.isFinite(state)) chains.push({ stream, tape, first, row, isFresh, lags, far })
     else stream.restart(update)
   }
 
@@ -207,7 +215,9 @@ function outerGradient(
   gradient.fill(0)
   for (const chain of chains) {
     const group = chain.stream.motion.unloaded ? 1 : 0
-    const weights = terms.map((term, k) => (term > 0 && sums[group].counts[k] > 0 ? (shares[group] * term) / sums[group].errors[k] : 0))
+    const weights = terms.map((term, k) => (term > 0 && sums[group].counts[k] > 0
+      ? (shares[group] * term) / sums[group].errors[k]
+      : 0))
     addSlopes(chain, update, options, weights, learnable.decayIndex, gradient)
   }
   for (const chain of chains) advance(chain, update, options)
@@ -229,15 +239,20 @@ function pickFar(motion: LinearMotion, end: number, count: number, random: Rando
 }
 
 /** The values a step's batch is predicted with at a lag, and their index on the tape; −1: from before the chain. */
-function knownAt({ tape, first, stream }: Chain, step: number, lag: number): { values: Float64Array; asOf: number; index: number } {
+function knownAt(
+  { tape, first, stream }: Chain, step: number, lag: number,
+): { values: Float64Array; asOf: number; index: number } {
   const index = step - lag
   if (index >= 0) return { values: tape.values[index], asOf: tape.asOf[index], index }
   const before = stream.past[stream.past.length + index]
-  return before ? { ...before, index: -1 } : { values: stream.past[0]?.values ?? first.values, asOf: stream.past[0]?.asOf ?? first.asOf, index: -1 }
+  return before
+    ? { ...before, index: -1 }
+    : { values: stream.past[0]?.values ?? first.values, asOf: stream.past[0]?.asOf ?? first.asOf, index: -1 }
 }
 
 function addErrors(
-  chain: Chain, update: LinearUpdate, { steps, rowsPerStep }: LinearMetaTrainingOptions, sums: { errors: Float64Array; counts: Float64Array },
+  chain: Chain, update: LinearUpdate, { steps, rowsPerStep }: LinearMetaTrainingOptions,
+  sums: { errors: Float64Array; counts: Float64Array },
 ): void {
   forEachError(chain, update, steps, rowsPerStep, (term, _index, e) => {
     sums.errors[term] += e * e
@@ -247,7 +262,8 @@ function addErrors(
 
 /** Derivatives of weights[term] · e² with respect to the values on the tape, then through the tape to θ. */
 function addSlopes(
-  chain: Chain, update: LinearUpdate, { steps, rowsPerStep }: LinearMetaTrainingOptions, weights: readonly number[], decayIndex: number,
+  chain: Chain, update: LinearUpdate, { steps, rowsPerStep }: LinearMetaTrainingOptions, weights: readonly number[],
+  decayIndex: number,
   gradient: Float64Array,
 ): void {
   const { tape, stream, isFresh } = chain
@@ -269,7 +285,9 @@ function addSlopes(
 
 type OnError = (term: number, index: number, e: number, k: number, joint: number, left: number, age: number, bias: number) => void
 
-function forEachError(chain: Chain, { size, joints, decay }: LinearUpdate, steps: number, rowsPerStep: number, visit: OnError): void {
+function forEachError(
+  chain: Chain, { size, joints, decay }: LinearUpdate, steps: number, rowsPerStep: number, visit: OnError,
+): void {
   const { stream, row, lags, far, tape } = chain
   const { time, residual, basis } = stream.motion
   for (let i = 0; i < steps; i++) {
@@ -299,7 +317,9 @@ function forEachError(chain: Chain, { size, joints, decay }: LinearUpdate, steps
   }
 }
 
-function advance({ stream, tape, lags, row }: Chain, update: LinearUpdate, { steps, rowsPerStep }: LinearMetaTrainingOptions): void {
+function advance(
+  { stream, tape, lags, row }: Chain, update: LinearUpdate, { steps, rowsPerStep }: LinearMetaTrainingOptions,
+): void {
   const kept = Math.max(...lags)
   const added = tape.values.slice(0, steps).map((values, k) => ({ values: values.slice(), asOf: tape.asOf[k] }))
   stream.past = [...stream.past, ...added].slice(-kept - 1)

@@ -23,7 +23,9 @@ export interface PayloadEstimate {
  */
 export function estimatePayload({ values, covariance }: LinearState, size: number): PayloadEstimate {
   const d = values.length
-  const cov = (r: number, c: number) => (covariance.length > 0 ? covariance[r * d + c] * PAYLOAD_SCALES[r] * PAYLOAD_SCALES[c] : NaN)
+  const cov = (r: number, c: number) => (covariance.length > 0
+    ? covariance[r * d + c] * PAYLOAD_SCALES[r] * PAYLOAD_SCALES[c]
+    : NaN)
   const mass = values[0] * PAYLOAD_SCALES[0]
   const massStd = Math.sqrt(cov(0, 0))
   const isKnown = mass > 0 && (Number.isNaN(massStd) ? mass > leastMass : mass > 2 * massStd)
@@ -76,7 +78,10 @@ export function implausibilities(estimate: PayloadEstimate, bounds: PayloadBound
     const reach = Math.sqrt(centerOfMass.reduce((sum, value) => sum + value * value, 0))
     const std = Math.sqrt(centerOfMassStd.reduce((sum, value) => sum + (Number.isNaN(value) ? 0 : value * value), 0))
     if (reach - certainty * std > bounds.mostReach) {
-      found.push(`The payload's centre of mass is estimated ${reach.toFixed(2)} m from the flange, beyond the ${bounds.mostReach} m allowed.`)
+      found.push(
+        `The payload's centre of mass is estimated ${reach.toFixed(2)} m from the flange, `
+        + `beyond the ${bounds.mostReach} m allowed.`,
+      )
     }
   }
   if (frictionScale !== null) {

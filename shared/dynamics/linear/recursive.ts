@@ -137,7 +137,9 @@ export function createRecursiveUpdate(constants: FilterConstants, size: number, 
 
   return {
     size, joints, decay, rowsPerStep,
-    initial: () => ({ values: new Float64Array(d), covariance: initialCovariance.slice(), surprise: 0, opening: false, asOf: NaN }),
+    initial: () => ({
+      values: new Float64Array(d), covariance: initialCovariance.slice(), surprise: 0, opening: false, asOf: NaN,
+    }),
     copy: copyState,
     letPass: (state, time) => void letPass(state, time),
     step,
@@ -256,7 +258,9 @@ export function checkConstants(constants: FilterConstants, size: number, joints:
   for (const [name, list, length, least] of lists) {
     checkLength(name, list.length, length, `${size} states, ${joints} joints`)
     list.forEach((value, k) => {
-      if (!Number.isFinite(value) || value < least) throw new ShapeError(`${name}: value ${k} is ${value}, expected a finite number from ${least}.`)
+      if (!Number.isFinite(value) || value < least) {
+        throw new ShapeError(`${name}: value ${k} is ${value}, expected a finite number from ${least}.`)
+      }
     })
   }
 }

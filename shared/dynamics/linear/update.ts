@@ -56,7 +56,8 @@ export function stepThrough(update: LinearUpdate, state: LinearState, rows: Line
 
 /** Adds A(x) z + ρ^age b to the base's prediction of rows, base standard deviations. age: s per row, null: 0. */
 export function addLearned(
-  values: Float64Array, size: number, joints: number, basis: Float64Array, share: Float64Array | null, rows: number, into: Float64Array,
+  values: Float64Array, size: number, joints: number, basis: Float64Array, share: Float64Array | null, rows: number,
+  into: Float64Array,
 ): void {
   for (let row = 0, k = 0; row < rows; row++) {
     const left = share ? share[row] : 1

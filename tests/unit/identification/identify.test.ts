@@ -98,7 +98,9 @@ describe('an identified base', () => {
 
     const { base, consistent } = run({
       ...thin,
-      joints: thin.joints.map(joint => ({ ...joint, inertial: { ...joint.inertial, inertia: [1e-4, 0, 0, 1e-4, 0, 1.9e-4] as const } })),
+      joints: thin.joints.map(joint => ({
+        ...joint, inertial: { ...joint.inertial, inertia: [1e-4, 0, 0, 1e-4, 0, 1.9e-4] as const },
+      })),
     }, few)
 
     for (const { inertial } of base.chain.joints) expect(inertialFaults(inertial)).toEqual([])

@@ -13,7 +13,9 @@ export const constants: FilterConstants = {
 }
 
 /** A motion that is exactly linear: residual = basis · z + noise, z per row as given. */
-export function motionOf(rows: number, seed: number, zAt: (row: number) => readonly number[], changes: number[] | null = []): LinearMotion {
+export function motionOf(
+  rows: number, seed: number, zAt: (row: number) => readonly number[], changes: number[] | null = [],
+): LinearMotion {
   const random = createRandom(seed)
   const basis = Float64Array.from({ length: rows * joints * size }, () => random.normal())
   const residual = Float64Array.from({ length: rows * joints }, (_, k) => {

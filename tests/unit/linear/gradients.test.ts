@@ -44,10 +44,14 @@ function checkGradient(learnable: Learnable, theta: Float64Array): void {
 
 describe('the gradient through a chain of steps', () => {
   test('agrees with central differences for every constant of the recursive update, gate included', () => {
-    checkGradient(createLearnableRecursive(size, joints, 4), thetaOf({ ...constants, noise: [0.3, 0.5], threshold: 3, opening: [0.5, 0.7, 0.2] }))
+    const busy = { ...constants, noise: [0.3, 0.5], threshold: 3, opening: [0.5, 0.7, 0.2] }
+
+    checkGradient(createLearnableRecursive(size, joints, 4), thetaOf(busy))
   })
 
-  test.each(['mse', 'structured', 'state_dependent', 'unstructured'] as LossName[])('agrees with central differences for first-order steps under %s', loss => {
+  const losses: LossName[] = ['mse', 'structured', 'state_dependent', 'unstructured']
+
+  test.each(losses)('agrees with central differences for first-order steps under %s', loss => {
     const lossShape: LossShape = { joints, inputs: 3 * joints, hidden: 5, positive: 'exp' }
     const lossParameters = lossKinds[loss].initialParameters(lossShape, random).map(value => value + 0.1 * random.normal())
 

@@ -16,7 +16,10 @@ const training = [
   ...loads.map((z, k) => motionOf(400, 20 + k, row => (row < 200 ? [0, 0, 0] : z), [4])),
   motionOf(400, 30, () => [0, 0, 0]),
 ]
-const validation = [motionOf(400, 40, () => [-0.7, 0.6, 0.9]), motionOf(400, 41, row => (row < 160 ? [0, 0, 0] : [1, 1, -1]), [3.2])]
+const validation = [
+  motionOf(400, 40, () => [-0.7, 0.6, 0.9]),
+  motionOf(400, 41, row => (row < 160 ? [0, 0, 0] : [1, 1, -1]), [3.2]),
+]
 const unseen = motionOf(400, 50, row => (row < 200 ? [0, 0, 0] : [-1, 0.5, 0.8]), [4])
 const options = { ...defaultLinearMetaTrainingOptions, updates: 30, steps: 20, streams: 4, positive: 'exp', hidden: 4 } as const
 
@@ -61,7 +64,10 @@ describe('learning the constants of a linear scheme', () => {
 describe('the errors along a motion', () => {
   test('of an update that learns nothing are all the mean squared residual', () => {
     const idle = createLeastSquares({ rowsPerStep: 4, forgetting: 0, initial: 1e-30 }, size, joints)
-    const mean = (from: number) => unseen.residual.subarray(from * joints).reduce((sum, value) => sum + value * value, 0) / ((400 - from) * joints)
+    const mean = (from: number) => {
+      const values = unseen.residual.subarray(from * joints)
+      return values.reduce((sum, value) => sum + value * value, 0) / values.length
+    }
 
     const errors = measureLinear(idle, unseen)
 
@@ -73,7 +79,9 @@ describe('the errors along a motion', () => {
   test('of least squares on a constant payload fall to the noise once settled', () => {
     const motion = motionOf(400, 60, () => loads[0])
 
-    const { frozen, after2sStale1, stale1, nextBatch } = measureLinear(createLeastSquares({ rowsPerStep: 4, forgetting: 0, initial: 1e4 }, size, joints), motion)
+    const update = createLeastSquares({ rowsPerStep: 4, forgetting: 0, initial: 1e4 }, size, joints)
+
+    const { frozen, after2sStale1, stale1, nextBatch } = measureLinear(update, motion)
 
     // 200 rows for three states: their own error adds 3 / 400; the sampling error of the noise's variance is 1 / √400 = 5 %.
     expect(frozen).toBeLessThan(1.2 * noise ** 2)
@@ -84,7 +92,9 @@ describe('the errors along a motion', () => {
 
 describe('simulated payloads', () => {
   test('are explained down to the noise by the basis they were drawn from', () => {
-    const simulated = simulatedMotions([{ ...motionOf(400, 70, () => [0, 0, 0]), basis: randomBasis(400 * joints * 4) }], createRandom(1))
+    const unloaded = { ...motionOf(400, 70, () => [0, 0, 0]), basis: randomBasis(400 * joints * 4) }
+
+    const simulated = simulatedMotions([unloaded], createRandom(1))
 
     expect(simulated.map(({ changes }) => changes!.length)).toEqual([0, 2])
     expect(fitConstant(simulated[0]).error).toBeLessThan(1.2 * noise ** 2)
@@ -116,9 +126,12 @@ describe('a learned basis', () => {
 
   test('carries over to payloads and motions it has not seen', () => {
     const random = createRandom(5)
-    const motions = [...Array.from({ length: 12 }, (_, k) => acted(100 + k, [2 * random.normal(), 2 * random.normal()])), acted(120, [0, 0], true)]
+    const loaded = Array.from({ length: 12 }, (_, k) => acted(100 + k, [2 * random.normal(), 2 * random.normal()]))
+    const motions = [...loaded, acted(120, [0, 0], true)]
     const kernels = createKernels()
-    const run = fitContextBasis(kernels, motions, normalisation, { size: 2, hidden: [24], steps: 1500, rowsPerStep: 128, rate: 1e-2, seed: 1 })
+    const run = fitContextBasis(kernels, motions, normalisation, {
+      size: 2, hidden: [24], steps: 1500, rowsPerStep: 128, rate: 1e-2, seed: 1,
+    })
     let step = run.next()
     while (!step.done) step = run.next()
     const { basis } = step.value

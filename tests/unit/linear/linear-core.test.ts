@@ -17,14 +17,17 @@ const time = Float64Array.from({ length: rows }, (_, row) => 3 + 0.02 * row)
 const basis: Basis = {
   size, joints,
   evaluate(given, count, out) {
-    for (let k = 0; k < count * joints; k++) for (let c = 0; c < size; c++) out[k * size + c] = given[Math.floor(k / joints) * channels + c] + (k % joints)
+    for (let k = 0; k < count * joints; k++) {
+      for (let c = 0; c < size; c++) out[k * size + c] = given[Math.floor(k / joints) * channels + c] + (k % joints)
+    }
   },
 }
 const base = { evaluate: (given: Float64Array, count: number, torque: Float64Array) => {
   for (let k = 0; k < count * joints; k++) torque[k] = 4 * given[Math.floor(k / joints) * channels + 5]
 } }
 const normalisation = {
-  inputMean: new Array<number>(channels).fill(0.1), inputStd: new Array<number>(channels).fill(2), outputMean: [0.5, -0.5], outputStd: [3, 2],
+  inputMean: new Array<number>(channels).fill(0.1), inputStd: new Array<number>(channels).fill(2),
+  outputMean: [0.5, -0.5], outputStd: [3, 2],
 }
 const table = new Float64Array(rows * joints * size)
 basis.evaluate(states, rows, table)
@@ -132,6 +135,9 @@ describe('a linear core', () => {
 
     expect(Array.from(state.values.subarray(0, size))).toEqual(Array.from(before.values.subarray(0, size)))
     for (let k = size; k < size + joints; k++) expect(Math.abs(state.values[k])).toBeLessThan(Math.abs(before.values[k]))
-    for (let c = 0; c < size; c++) expect(state.covariance[c * (size + joints) + c]).toBeGreaterThan(before.covariance[c * (size + joints) + c])
+    for (let c = 0; c < size; c++) {
+      const at = c * (size + joints) + c
+      expect(state.covariance[at]).toBeGreaterThan(before.covariance[at])
+    }
   })
 })

@@ -12,7 +12,9 @@ const outputStd = [3, 2, 5, 1, 4, 0.5]
 const chain = exampleChain()
 const payload = { mass: 1.7, centerOfMass: [0.03, -0.02, 0.09] as [number, number, number] }
 
-const friction = Array.from({ length: joints }, () => ({ viscous: 0.4, coulomb: 1, stribeck: 0.3, stribeckVelocity: 0.1, smoothing: 0.03 }))
+const friction = Array.from({ length: joints }, () => ({
+  viscous: 0.4, coulomb: 1, stribeck: 0.3, stribeckVelocity: 0.1, smoothing: 0.03,
+}))
 
 function statesOf(rows: number, seed: number): Float64Array {
   const random = createRandom(seed)
@@ -62,13 +64,16 @@ describe('the payload basis', () => {
     const residual = Float64Array.from({ length: rows * joints }, (_, k) =>
       z.reduce((sum, value, c) => sum + value * table[k * 5 + c], 0.05 * random.normal()))
     const update = createRecursiveUpdate({
-      rowsPerStep: 4, decay: 1, initialFactor: [1, 0, 1, 0, 0, 1, 0, 0, 0, 1, 0, 0, 0, 0, 1], initialBias: new Array<number>(joints).fill(1e-4),
-      driftOfState: new Array<number>(5).fill(1e-9), driftOfBias: new Array<number>(joints).fill(1e-6), noise: new Array<number>(joints).fill(0.0025),
+      rowsPerStep: 4, decay: 1, initialFactor: [1, 0, 1, 0, 0, 1, 0, 0, 0, 1, 0, 0, 0, 0, 1],
+      initialBias: new Array<number>(joints).fill(1e-4),
+      driftOfState: new Array<number>(5).fill(1e-9), driftOfBias: new Array<number>(joints).fill(1e-6),
+      noise: new Array<number>(joints).fill(0.0025),
       threshold: 9, opening: new Array<number>(5).fill(0.5),
     }, 5, joints)
     const state = update.initial()
 
-    stepThrough(update, state, { time: Float64Array.from({ length: rows }, (_, k) => 0.02 * k), x: states, residual, basis: table }, 0, rows)
+    const time = Float64Array.from({ length: rows }, (_, k) => 0.02 * k)
+    stepThrough(update, state, { time, x: states, residual, basis: table }, 0, rows)
 
     const { mass, massStd, centerOfMass, centerOfMassStd, frictionScale, frictionScaleStd } = estimatePayload(state, 5)
     expect(massStd).toBeLessThan(0.05)
@@ -80,7 +85,10 @@ describe('the payload basis', () => {
 })
 
 describe('plausibility', () => {
-  const sure = { mass: 1, massStd: 0.01, centerOfMass: [0, 0, 0.1], centerOfMassStd: [0.01, 0.01, 0.01], frictionScale: null, frictionScaleStd: null } as const
+  const sure = {
+    mass: 1, massStd: 0.01, centerOfMass: [0, 0, 0.1], centerOfMassStd: [0.01, 0.01, 0.01],
+    frictionScale: null, frictionScaleStd: null,
+  } as const
 
   test.each([
     [{ mass: -0.5 }, /cannot be below 0/],

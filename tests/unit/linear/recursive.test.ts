@@ -9,7 +9,7 @@ const d = size + joints
 const z = [0.8, -1.2, 0.5]
 
 /** Textbook filter in matrix form: all scalars of a step at once, P ← (1 − K H) P, by Gauss elimination. */
-function textbookStep(values: number[], p: number[][], h: number[][], y: number[], r: number[]): { values: number[]; p: number[][] } {
+function textbookStep(values: number[], p: number[][], h: number[][], y: number[], r: number[]) {
   const m = y.length
   const ph = p.map(row => h.map(line => line.reduce((sum, value, k) => sum + value * row[k], 0)))
   const s = h.map((line, a) => h.map((_, b) => line.reduce((sum, value, k) => sum + value * ph[k][b], a === b ? r[a] : 0)))
@@ -23,7 +23,10 @@ function textbookStep(values: number[], p: number[][], h: number[][], y: number[
       }
     }
     const x = new Array<number>(m).fill(0)
-    for (let row = m - 1; row >= 0; row--) x[row] = (a[row][m] - x.reduce((sum, value, k) => (k > row ? sum + a[row][k] * value : sum), 0)) / a[row][row]
+    for (let row = m - 1; row >= 0; row--) {
+      const known = x.reduce((sum, value, k) => (k > row ? sum + a[row][k] * value : sum), 0)
+      x[row] = (a[row][m] - known) / a[row][row]
+    }
     return x
   }
   const solvedE = solve(e)
@@ -45,13 +48,16 @@ describe('the recursive update', () => {
     const motion = motionOf(4, 1, () => z)
     const state = update.initial()
     const before = matrixOf(state)
-    const h = Array.from({ length: 4 * joints }, (_, k) =>
-      [...motion.basis.subarray(k * size, (k + 1) * size), ...Array.from({ length: joints }, (__, j) => (k % joints === j ? 1 : 0))])
+    const h = Array.from({ length: 4 * joints }, (_, k) => [
+      ...motion.basis.subarray(k * size, (k + 1) * size),
+      ...Array.from({ length: joints }, (__, j) => (k % joints === j ? 1 : 0)),
+    ])
+    const r = new Array<number>(4 * joints).fill(noise ** 2)
     // At the first batch the surprise opens the gate: with a threshold out of reach only the filter itself is compared.
     const calm = createRecursiveUpdate({ ...constants, threshold: 1e9 }, size, joints)
 
     calm.step(state, motion, 0, 4)
-    const want = textbookStep(new Array<number>(d).fill(0), before, h, Array.from(motion.residual), new Array<number>(4 * joints).fill(noise ** 2))
+    const want = textbookStep(new Array<number>(d).fill(0), before, h, Array.from(motion.residual), r)
 
     // Both round some hundred operations on numbers near 1; the smallest variance is about 1e-3.
     want.values.forEach((value, k) => expect(state.values[k]).toBeCloseTo(value, 11))
@@ -79,9 +85,10 @@ describe('the recursive update', () => {
 
     for (let row = 0; row < 4000; row += 40) {
       stepThrough(update, state, idle, row, row + 40)
-      for (let r = 0; r < d; r++) for (let c = 0; c < r; c++) expect(state.covariance[r * d + c]).toBe(state.covariance[c * d + r])
+      const p = matrixOf(state)
+      for (let r = 0; r < d; r++) for (let c = 0; c < r; c++) expect(p[r][c]).toBe(p[c][r])
       const v = Array.from({ length: d }, () => random.normal())
-      const quadratic = v.reduce((sum, a, r) => sum + v.reduce((inner, b, c) => inner + a * b * state.covariance[r * d + c], 0), 0)
+      const quadratic = v.reduce((sum, a, r) => sum + v.reduce((inner, b, c) => inner + a * b * p[r][c], 0), 0)
       expect(quadratic).toBeGreaterThan(0)
     }
     expect(update.isFinite(state)).toBe(true)
