@@ -187,15 +187,16 @@ function priorOf({ joints: links }: ChainDescription, data: Data, share: number)
   const deviation = new Float64Array(mean.length)
   const length = new Float64Array(joints)
   const mass = new Float64Array(joints)
-  const heaviest = Math.max(...links.map(link => link.inertial.mass), 0.1)
+  const heaviest = Math.max(...links.map(link => link.inertial.mass)) || unknownMass
   links.forEach((link, i) => {
     const at = PARAMETERS_PER_LINK * i
     mean.set(createChain({ joints: [link], gravity: [0, 0, 0], flange: link.offset }).linkParameters, at)
     const known = mean[at] > 0
-    mass[i] = known ? mean[at] : 0.1 * heaviest
-    length[i] = Math.max(Math.sqrt((mean[at + 4] + mean[at + 7] + mean[at + 9]) / (2 * mass[i])), 0.02)
-    // A link whose mass nobody states can be anything up to the arm's heaviest.
-    const trust = known ? share : 5
+    mass[i] = known ? mean[at] : heaviest
+    const size = Math.sqrt((mean[at + 4] + mean[at + 7] + mean[at + 9]) / (2 * mass[i]))
+    length[i] = known ? Math.max(size, 0.02) : unknownLength
+    // A link whose mass nobody states can be anything up to twice the arm's heaviest.
+    const trust = known ? share : 2
     nearestConsistent(mean, at, length[i], leastShare * mass[i], mean)
     deviation[at] = trust * mass[i]
     for (let k = 1; k < 4; k++) deviation[at + k] = trust * mass[i] * length[i]
@@ -210,6 +211,10 @@ function priorOf({ joints: links }: ChainDescription, data: Data, share: number)
   }
   return { mean, deviation, length, mass }
 }
+
+/** Scales of a link of which nothing is stated, in an arm of which nothing is: kg, m. */
+const unknownMass = 3
+const unknownLength = 0.15
 
 /** Least eigenvalue of a pseudo-inertia that counts as a body, as a share of the link's mass. */
 const leastShare = 1e-5

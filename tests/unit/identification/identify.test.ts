@@ -107,6 +107,21 @@ describe('an identified base', () => {
     expect(consistent).toBe(true)
   })
 
+  test('does without inertial parameters in the description', () => {
+    const bare = {
+      ...truth.chain,
+      joints: truth.chain.joints.map(joint => ({
+        ...joint, inertial: { mass: 0, centerOfMass: [0, 0, 0] as const, inertia: [0, 0, 0, 0, 0, 0] as const },
+      })),
+    }
+
+    const { base, consistent } = run(bare, motions)
+
+    expect(consistent).toBe(true)
+    // As from a description 30 % wrong, with room for what a prior so wide lets noise do.
+    errorsPerJoint(base, unseen).forEach(error => expect(error).toBeLessThan(1.1 * noise))
+  })
+
   test('says that a still arm identifies no inertia', () => {
     const still = motionOf(300, 4)
     still.states.forEach((_, k) => { if (k % (3 * joints) >= joints) still.states[k] = 0 })
