@@ -1,3 +1,4 @@
+import type { IncomingMessage, ServerResponse } from 'node:http'
 import express from 'express'
 import helmet from 'helmet'
 import { Refusal } from '../shared/contract/problems.ts'
@@ -46,11 +47,11 @@ export function createApp(d: Dependencies, services: Services = createServices(d
   app.disable('x-powered-by')
   app.set('etag', false)
   app.set('trust proxy', settings.trustedProxies)
-  app.use(requestContext())
+  const context = requestContext()
+  app.use(context)
 
   // Before everything that costs time on every request.
   const hot = hotRoutes(d, services, { authenticate, protectFromForgery })
-  app.use(hot.direct)
   app.use(hot.router)
 
   app.use(securityHeaders(settings.origin?.startsWith('https://') ?? false))
@@ -76,7 +77,14 @@ export function createApp(d: Dependencies, services: Services = createServices(d
   app.use((req) => {
     throw new Refusal('not-found', `There is nothing at ${req.path}.`)
   })
-  app.use(problemAnswer(log))
+  const answerProblems = problemAnswer(log)
+  app.use(answerProblems)
+  // Usual hot requests never enter Express; everything else does.
+  const entry = app as unknown as { handle: (req: IncomingMessage, res: ServerResponse, next?: (error?: unknown) => void) => void }
+  const handle = entry.handle.bind(app)
+  entry.handle = (req, res, next) => {
+    if (!hot.direct(req, res, context, answerProblems)) handle(req, res, next)
+  }
   return app
 }
 

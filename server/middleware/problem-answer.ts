@@ -24,7 +24,7 @@ export function problemAnswer(log: Logger): ErrorRequestHandler {
 const internal = new Refusal('internal', 'This is our mistake and has been logged. Try again; if it stays, report the request_id to the operator of this installation.')
 
 export function answerProblem(req: Request, res: Response, refusal: Refusal): void {
-  res.status(refusal.kind.status)
+  res.statusCode = refusal.kind.status
   for (const [name, value] of Object.entries(defaultHeaders(refusal))) res.setHeader(name, value)
   for (const [name, value] of Object.entries(refusal.headers)) res.setHeader(name, value)
   res.setHeader('Content-Type', 'application/problem+json')

@@ -49,7 +49,7 @@ async function forward(
   } catch (error) {
     return (error as { code?: string }).code === 'ECONNREFUSED' ? 'gone' : 'unreachable'
   }
-  res.status(answer.statusCode ?? 502)
+  res.statusCode = answer.statusCode ?? 502
   for (const name of answered) {
     const value = answer.headers[name]
     if (value !== undefined) res.setHeader(name, value)
@@ -61,7 +61,7 @@ async function forward(
 }
 
 function ask(address: string, holderId: string, req: Request, body: Buffer | undefined): Promise<IncomingMessage> {
-  const url = new URL(req.originalUrl, address)
+  const url = new URL(req.originalUrl ?? req.url, address)
   const headers: OutgoingHttpHeaders = { [forwardedHeader]: holderId, 'x-request-id': req.requestId }
   for (const [name, value] of Object.entries(req.headers)) {
     if (!notForwarded.has(name) && value !== undefined) headers[name] ??= value

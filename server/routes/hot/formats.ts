@@ -26,8 +26,9 @@ export function sentFormat(req: Request): Format {
 export function wantedFormat(req: Request, sent: Format): Format {
   const header = req.headers.accept
   if (header === undefined || header === '*/*') return sent
-  if (header === types[sent]) return sent
   const other = sent === 'json' ? 'cbor' : 'json'
+  if (header === types[sent]) return sent
+  if (header === types[other]) return other
   const found = req.accepts(types[sent], types[other])
   if (found === false) {
     throw new Refusal('not-acceptable', `Accept is "${header.slice(0, 120)}"; this route answers application/json or application/cbor.`)
