@@ -137,14 +137,14 @@ function detailOf(id: string, item: LogEntry) {
             </>
           )}
         </span>
+        <TextLink to={paths.adaptation(id, { batch: item.position })} className="py-1 text-12">
+          rows<span className="sr-only"> of batch {item.sequence}</span>
+        </TextLink>
         <span className="text-12 text-soft">
           {item.rows !== undefined && counted(item.rows, 'row')}
           {item.skipped ? `, ${item.skipped} skipped before it` : ''}
           {item.time != null && `, to ${robotTime(item.time)} s`}, revision {item.revision}
         </span>
-        <TextLink to={paths.adaptation(id, { batch: item.position })} className="text-12">
-          rows
-        </TextLink>
         {item.reasons?.map((reason) => (
           <span key={reason.code + (reason.joint ?? '')} className="basis-full text-12 text-soft">
             {reason.detail}
