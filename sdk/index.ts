@@ -1,5 +1,6 @@
 export { everyItem, Heftwise, type Page } from './client.ts'
 export { ConnectionError, isProblem, ProblemError, TimeoutError } from './errors.ts'
+export { LocalPredictor, type LocalStates } from './local-predictor.ts'
 export { defaultRetry, type RetryPolicy } from './retry.ts'
 export type { CallOptions, TransportOptions } from './transport.ts'
 export type { AnswerOf, BodyOf, QueryOf, Schemas } from './wire.ts'

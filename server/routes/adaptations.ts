@@ -2,7 +2,7 @@ import { createHash } from 'node:crypto'
 import { Router } from 'express'
 import type { Request, Response } from 'express'
 import type { components } from '../../shared/contract/openapi.generated.ts'
-import { floatsToBase64, updateToWire, versionToWire } from '../../shared/contract/snapshots.ts'
+import { floatsToBase64, rateLimitsToWire, updateToWire, versionToWire } from '../../shared/contract/snapshots.ts'
 import type { GuardSettings } from '../../shared/dynamics/index.ts'
 import type { Contract } from '../middleware/contract.ts'
 import { answerPage } from '../middleware/page-answer.ts'
@@ -229,6 +229,7 @@ function wireSnapshot({ record, base, snapshot }: AdaptationSnapshot): Schemas['
       joint_names: [...record.arm.jointNames],
       unit: [...record.arm.units],
       torque_limits: [...record.arm.torque],
+      torque_rate_limits: rateLimitsToWire(record.arm.torqueRate),
       ...versionToWire(base.artefact),
       checksum: base.checksum,
     },

@@ -1,6 +1,7 @@
 import type { components } from '../../shared/contract/openapi.generated.ts'
-import { updateToWire, versionToWire } from '../../shared/contract/snapshots.ts'
+import { rateLimitsToWire, updateToWire, versionToWire } from '../../shared/contract/snapshots.ts'
 import type { StoredJointMetric, StoredMetrics, StoredUpdate, Version } from '../models/version.ts'
+import { limitsOf } from '../services/live-versions.ts'
 import type { VersionRecord, VersionWithArtefact } from '../services/versions.ts'
 
 type Schemas = components['schemas']
@@ -44,6 +45,7 @@ export function snapshotToJson({
     joint_names: joints.map(({ name }) => name),
     unit: joints.map(({ type }) => (type === 'prismatic' ? 'N' : 'N·m')),
     torque_limits: joints.map(({ torqueLimit }) => torqueLimit),
+    torque_rate_limits: rateLimitsToWire(limitsOf(joints).torqueRate),
     ...versionToWire(artefact),
     checksum,
     metrics: metricsToWire(metrics),

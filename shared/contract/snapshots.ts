@@ -145,6 +145,16 @@ export function updateToWire(
   return { kind, rate, rows_per_step: rowsPerStep, ...(scheme === 'bias' && { fade }) }
 }
 
+/** Torque-rate limits, of which a joint without one has the largest double: on the wire it has null. */
+export function rateLimitsToWire(limits: Iterable<number> | null): Schemas['RateLimits'] {
+  return limits && Array.from(limits, (limit) => (limit === Number.MAX_VALUE ? null : limit))
+}
+
+/** Reads what rateLimitsToWire wrote; snapshots made before there were rate limits in them have none. */
+export function rateLimitsFromWire(limits: Schemas['RateLimits'] | undefined): Float64Array | null {
+  return limits ? Float64Array.from(limits, (limit) => limit ?? Number.MAX_VALUE) : null
+}
+
 /** Numbers as base64 of their binary32, little endian. */
 export function floatsToBase64(values: Float32Array): string {
   const view = new DataView(new ArrayBuffer(4 * values.length))

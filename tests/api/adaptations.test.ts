@@ -1,7 +1,5 @@
 import { afterAll, beforeAll, describe, expect, test } from 'vitest'
-import { createKernels, createPrediction, createPredictor } from '../../shared/dynamics/index.ts'
-import { floatsFromBase64, versionFromWire } from '../../shared/contract/snapshots.ts'
-import { limitsOf } from '../../server/services/live-versions.ts'
+import { LocalPredictor } from '../../sdk/index.ts'
 import { ShapedArray } from '../../server/routes/hot/cbor-reader.ts'
 import { writeCbor } from '../../server/routes/hot/cbor-writer.ts'
 import { contractDocument } from '../support/api.ts'
@@ -430,15 +428,9 @@ describe('serving', () => {
     const { body: snapshot, headers } = await key.get(`${adaptation.path}/snapshot`)
     const served64 = await key.post(`${adaptation.path}/predict`, { joints: served.fingerprint, ...states(motion) }, { headers: { accept: 'application/cbor' } })
 
-    const base = versionFromWire(snapshot.base.description, snapshot.base.parameters)
-    const parameters = snapshot.state.parameters === undefined ? base.parameters : floatsFromBase64('parameters', snapshot.state.parameters)
-    const predictor = createPredictor(createKernels(), { ...base, parameters }, limitsOf(snapshot.base.torque_limits.map((torqueLimit: number) => ({ torqueLimit }))))
-    const into = createPrediction(5, joints)
+    const local = new LocalPredictor(snapshot, { mostRows: 5 })
     const flat = (matrix: number[][]) => Float64Array.from(matrix.flat())
-    predictor.predict(
-      { rows: 5, position: flat(motion.position), velocity: flat(motion.velocity), acceleration: flat(motion.acceleration), time: null }, into,
-      snapshot.state.bias === undefined ? null : { values: Float64Array.from(snapshot.state.bias), fade: snapshot.state.fade },
-    )
+    const into = local.predict({ rows: 5, position: flat(motion.position), velocity: flat(motion.velocity), acceleration: flat(motion.acceleration) })
     const content = served64.body as Buffer
     const at = content.indexOf(Buffer.from('torque')) + 6
     // Tag 40, [[5, 3], tag 85, byte string of 60 bytes]: its numbers begin after 11 bytes.

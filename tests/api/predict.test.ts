@@ -2,6 +2,7 @@ import { decode } from 'cborg'
 import { afterAll, beforeAll, describe, expect, test } from 'vitest'
 import { createKernels, createPrediction, createPredictor } from '../../shared/dynamics/index.ts'
 import { limitsOf } from '../../server/services/live-versions.ts'
+import { LocalPredictor } from '../../sdk/index.ts'
 import { ShapedArray } from '../../server/routes/hot/cbor-reader.ts'
 import { writeCbor } from '../../server/routes/hot/cbor-writer.ts'
 import { contractDocument } from '../support/api.ts'
@@ -102,6 +103,24 @@ describe('answers', () => {
       for (let j = 0; j < joints; j++) expect(Math.abs(torque[row][j] - torque[row - 1][j])).toBeLessThanOrEqual(1 * 0.02 + 2e-4)
     }
     expect(answer.body.limited.length).toBeGreaterThan(0)
+  })
+
+  test('a snapshot evaluated locally keeps the torque-rate limits that the service keeps', async () => {
+    const own = await server.createTeam()
+    const client = await own.createKey(['predict'])
+    const slow = await serveModel(server, own.caller(), { joints, name: 'slow', torqueRateLimit: 1 })
+    const motion = simulatedMotion({ joints, rows: 10 })
+    const flat = (matrix: number[][]) => Float64Array.from(matrix.flat())
+
+    const answer = await client.post('/v1/models/slow/predict', { joints: slow.fingerprint, time: motion.time, ...states(motion) })
+    const { body: snapshot } = await client.get('/v1/models/slow/versions/1/snapshot')
+    const local = new LocalPredictor(snapshot, { mostRows: 10 }).predict({
+      rows: 10, position: flat(motion.position), velocity: flat(motion.velocity), acceleration: flat(motion.acceleration), time: Float64Array.from(motion.time),
+    })
+
+    expect(snapshot.torque_rate_limits).toEqual([1, 1, 1])
+    expect(Array.from(local.torque, (torque) => Number(torque.toPrecision(6)))).toEqual(answer.body.torque.flat())
+    expect(local.limitedCount).toBe(answer.body.limited.length)
   })
 
   test('a hot answer has no ETag, repeats the request id and states the limit', async () => {
