@@ -2,7 +2,7 @@ import type { Response } from 'express'
 import type { Prediction } from '../../../shared/dynamics/index.ts'
 import type { AdaptedArm, BatchResult, ServedState } from '../../services/adaptations/index.ts'
 import { ShapedArray } from './cbor-reader.ts'
-import { writeCbor } from './cbor-writer.ts'
+import { CborWriter, writeCbor } from './cbor-writer.ts'
 import { contentType } from './formats.ts'
 import type { Format } from './formats.ts'
 import type { JointOrder } from './joint-order.ts'
@@ -16,7 +16,9 @@ export interface Predicted {
 }
 
 const writer = new JsonWriter()
-const beginnings = new WeakMap<Predicted, WeakMap<JointOrder, Uint8Array>>()
+const cbor = new CborWriter(65536)
+const beginnings = { json: new WeakMap<Predicted, Beginnings>(), cbor: new WeakMap<Predicted, Beginnings>() }
+type Beginnings = WeakMap<JointOrder, Uint8Array>
 const afterTorque = Buffer.from(',"limited":')
 const afterLimited = Buffer.from(',"coverage":')
 
@@ -26,13 +28,13 @@ export function answerPrediction(
 ): void {
   send(res, format, format === 'json'
     ? predictionJson(of, joints, rows, prediction, state)
-    : writeCbor(predictionObject(of, joints, rows, prediction, state)).toString('latin1'))
+    : predictionCbor(of, joints, rows, prediction, state))
 }
 
 function predictionJson(of: Predicted, joints: JointOrder, rows: number, prediction: Prediction, state?: ServedState): string {
   const n = of.arm.jointNames.length
   writer.clear()
-  writer.bytes(beginningOf(of, joints))
+  writer.bytes(beginningOf('json', of, joints))
   writer.matrix(prediction.torque, rows, n, joints.order)
   writer.bytes(afterTorque)
   writer.pairs(limitedPairs(prediction, joints), prediction.limitedCount)
@@ -47,35 +49,53 @@ function predictionJson(of: Predicted, joints: JointOrder, rows: number, predict
   return writer.take()
 }
 
-function beginningOf(of: Predicted, joints: JointOrder): Uint8Array {
-  let known = beginnings.get(of)
-  if (known === undefined) beginnings.set(of, (known = new WeakMap()))
+/** What comes before the torques; in CBOR without the head of the map, which counts the keys. */
+function beginningOf(format: Format, of: Predicted, joints: JointOrder): Uint8Array {
+  let known = beginnings[format].get(of)
+  if (known === undefined) beginnings[format].set(of, (known = new WeakMap()))
   let bytes = known.get(joints)
   if (bytes === undefined) {
-    const head = JSON.stringify({ model: of.model, version: of.version, joint_names: joints.names, unit: inOrder(of.arm.units, joints) })
-    bytes = Buffer.from(`${head.slice(0, -1)},"torque":`)
+    const head = { model: of.model, version: of.version, joint_names: joints.names, unit: inOrder(of.arm.units, joints) }
+    bytes = format === 'json' ? Buffer.from(`${JSON.stringify(head).slice(0, -1)},"torque":`) : writeCbor(head).subarray(1)
     known.set(joints, bytes)
   }
   return bytes
 }
 
-function predictionObject(of: Predicted, joints: JointOrder, rows: number, prediction: Prediction, state?: ServedState): object {
+/** Torques and coverage of the answer being written, as binary32; grow, and are used again. */
+let single = new Float32Array(8192)
+
+function predictionCbor(of: Predicted, joints: JointOrder, rows: number, prediction: Prediction, state?: ServedState): string {
   const n = of.arm.jointNames.length
-  const torque = new Float32Array(rows * n)
-  for (let at = 0; at < torque.length; at += n) {
-    for (let k = 0; k < n; k++) torque[at + k] = prediction.torque[at + (joints.order === null ? k : joints.order[k])]
-  }
+  const size = rows * n
+  if (size > single.length) single = new Float32Array(2 * size)
+  cbor.clear()
+  cbor.map(state === undefined ? 7 : 11)
+  cbor.raw(beginningOf('cbor', of, joints))
+  copyInOrder(prediction.torque, size, n, joints.order, single)
+  cbor.item('torque')
+  cbor.item(new ShapedArray([rows, n], single.subarray(0, size)))
+  cbor.item('limited')
   const pairs = limitedPairs(prediction, joints)
-  return {
-    model: of.model,
-    version: of.version,
-    joint_names: joints.names,
-    unit: inOrder(of.arm.units, joints),
-    torque: new ShapedArray([rows, n], torque),
-    limited: Array.from({ length: prediction.limitedCount }, (_, k) => [pairs[2 * k], pairs[2 * k + 1]]),
-    coverage: Float32Array.from(prediction.coverage.subarray(0, rows)),
-    ...(state !== undefined && { adaptation: state.record.id, revision: state.revision, as_of: state.asOf, valid_until: state.validUntil }),
+  cbor.array(prediction.limitedCount)
+  for (let k = 0; k < prediction.limitedCount; k++) {
+    cbor.array(2)
+    cbor.item(pairs[2 * k])
+    cbor.item(pairs[2 * k + 1])
   }
+  single.set(prediction.coverage.subarray(0, rows))
+  cbor.item('coverage')
+  cbor.item(single.subarray(0, rows))
+  if (state !== undefined) {
+    const { record, revision, asOf, validUntil } = state
+    for (const part of ['adaptation', record.id, 'revision', revision, 'as_of', asOf, 'valid_until', validUntil]) cbor.item(part)
+  }
+  return cbor.take()
+}
+
+function copyInOrder(values: Float64Array, size: number, n: number, order: Int32Array | null, into: Float32Array): void {
+  if (order === null) return into.set(values.subarray(0, size))
+  for (let at = 0; at < size; at += n) for (let k = 0; k < n; k++) into[at + k] = values[at + order[k]]
 }
 
 /** Pairs row, joint, with the joint's place among the request's names. */

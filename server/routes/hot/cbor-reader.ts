@@ -31,9 +31,9 @@ const deepest = 16
 /**
  * Reads one data item that fills the bytes.
  *
- * Maps become objects without a prototype, arrays and typed arrays lists of numbers (`Float64Array` for typed ones), null and
- * undefined null. Indefinite lengths are taken. Byte strings, big numbers and other tags are refused, as are map keys that
- * are no text or come twice.
+ * Maps become objects without a prototype, arrays and typed arrays lists of numbers, null and undefined null. Typed arrays of
+ * binary32 in little endian become `Float32Array`, others `Float64Array`; either may be a view into `bytes`. Indefinite lengths
+ * are taken. Byte strings, big numbers and other tags are refused, as are map keys that are no text or come twice.
  *
  * @throws {CborError}
  */
@@ -199,7 +199,7 @@ class Reader {
   }
 
   /** RFC 8746, section 2.1: the tag is 0b010_f_s_e_ll. */
-  #typedArray(tag: number, start: number): Float64Array {
+  #typedArray(tag: number, start: number): Float32Array | Float64Array {
     const kind = elementKinds[tag - 64]
     if (kind === null) throw new CborError(`Typed arrays of tag ${tag}, at byte ${start}, are not taken`)
     this.#need(1)
@@ -207,41 +207,41 @@ class Reader {
     if (first >> 5 !== 2 || (first & 31) === 31) throw new CborError(`Tag ${tag} at byte ${start} wants a byte string of definite length`)
     const length = this.#argument(first & 31, start)
     if (length % kind.width !== 0) throw new CborError(`The typed array at byte ${start} has ${length} bytes, no multiple of ${kind.width}`)
-    const from = this.#skip(length)
-    const values = new Float64Array(length / kind.width)
-    kind.read(this.#view, from, values)
-    return values
+    return kind.read(this.#view, this.#skip(length), length / kind.width)
   }
 }
 
 /** Whether a value read from CBOR or JSON is a list: an array or a typed array. */
 export function isList(value: unknown): value is ArrayLike<unknown> {
-  return Array.isArray(value) || value instanceof Float64Array
+  return Array.isArray(value) || value instanceof Float64Array || value instanceof Float32Array
 }
 
 interface ElementKind {
   readonly width: number
-  read(view: DataView, from: number, into: Float64Array): void
+  read(view: DataView, from: number, count: number): Float32Array | Float64Array
 }
 
 function elements(width: number, get: (view: DataView, at: number) => number): ElementKind {
   return {
     width,
-    read(view, from, into) {
-      for (let k = 0; k < into.length; k++) into[k] = get(view, from + k * width)
+    read(view, from, count) {
+      const values = new Float64Array(count)
+      for (let k = 0; k < count; k++) values[k] = get(view, from + k * width)
+      return values
     },
   }
 }
 
-/** binary32 and binary64, little endian, are what machines send: their bytes are copied and read through a view. */
-function copied<T extends Float32Array | Float64Array>(width: number, over: (bytes: ArrayBuffer) => T, slow: ElementKind): ElementKind {
+/** binary32 and binary64, little endian, are what machines send: read where they lie, or, off their alignment, from a copy. */
+function viewed(Numbers: typeof Float32Array | typeof Float64Array, slow: ElementKind): ElementKind {
+  const { width } = slow
   return {
     width,
-    read(view, from, into) {
-      if (!littleEndian) return slow.read(view, from, into)
-      const bytes = new Uint8Array(into.length * width)
-      bytes.set(new Uint8Array(view.buffer, view.byteOffset + from, bytes.length))
-      into.set(over(bytes.buffer))
+    read(view, from, count) {
+      if (!littleEndian) return slow.read(view, from, count)
+      const buffer = view.buffer as ArrayBuffer
+      const at = view.byteOffset + from
+      return at % width === 0 ? new Numbers(buffer, at, count) : new Numbers(buffer.slice(at, at + count * width))
     },
   }
 }
@@ -274,8 +274,8 @@ const elementKinds: readonly (ElementKind | null)[] = [
   elements(8, (v, at) => v.getFloat64(at)),
   null, // binary128
   elements(2, (v, at) => halfFloat(v, at, true)),
-  copied(4, (bytes) => new Float32Array(bytes), elements(4, (v, at) => v.getFloat32(at, true))),
-  copied(8, (bytes) => new Float64Array(bytes), elements(8, (v, at) => v.getFloat64(at, true))),
+  viewed(Float32Array, elements(4, (v, at) => v.getFloat32(at, true))),
+  viewed(Float64Array, elements(8, (v, at) => v.getFloat64(at, true))),
   null, // binary128
 ]
 

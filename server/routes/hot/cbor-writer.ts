@@ -8,17 +8,50 @@ const littleEndian = new Uint8Array(Uint16Array.of(1).buffer)[0] === 1
  * ShapedArray tag 40 of its dimensions and values.
  */
 export function writeCbor(value: unknown): Buffer {
-  const writer = new Writer()
+  const writer = new CborWriter()
   writer.item(value)
-  return writer.bytes()
+  return writer.written()
 }
 
-class Writer {
-  #bytes = Buffer.allocUnsafe(1024)
+/** Writes one data item, or the parts of one, after the other. One writer serves one answer at a time and is used again. */
+export class CborWriter {
+  #bytes: Buffer
   #at = 0
 
-  bytes(): Buffer {
+  constructor(room = 1024) {
+    this.#bytes = Buffer.allocUnsafe(room)
+  }
+
+  /** Forgets what was written. */
+  clear(): void {
+    this.#at = 0
+  }
+
+  /** What was written: a view that the next answer overwrites. */
+  written(): Buffer {
     return this.#bytes.subarray(0, this.#at)
+  }
+
+  /** What was written, one Latin-1 character per byte. */
+  take(): string {
+    return this.#bytes.toString('latin1', 0, this.#at)
+  }
+
+  /** CBOR as it stands. */
+  raw(bytes: Uint8Array): void {
+    this.#reserve(bytes.length)
+    this.#bytes.set(bytes, this.#at)
+    this.#at += bytes.length
+  }
+
+  /** The beginning of a map of so many keys with their values. */
+  map(count: number): void {
+    this.#head(5, count)
+  }
+
+  /** The beginning of an array of so many items. */
+  array(count: number): void {
+    this.#head(4, count)
   }
 
   item(value: unknown): void {
@@ -29,14 +62,14 @@ class Writer {
     else if (value instanceof Float32Array) this.#typedArray(value)
     else if (value instanceof ShapedArray) this.#shaped(value)
     else if (Array.isArray(value)) {
-      this.#head(4, value.length)
+      this.array(value.length)
       for (const entry of value) this.item(entry)
     } else this.#map(value as object)
   }
 
   #map(value: object): void {
     const entries = Object.entries(value).filter(([, entry]) => entry !== undefined)
-    this.#head(5, entries.length)
+    this.map(entries.length)
     for (const [key, entry] of entries) {
       this.#text(key)
       this.item(entry)
@@ -45,7 +78,7 @@ class Writer {
 
   #shaped({ dimensions, values }: ShapedArray): void {
     this.#head(6, 40)
-    this.#head(4, 2)
+    this.array(2)
     this.item(dimensions)
     this.item(values)
   }
@@ -54,8 +87,10 @@ class Writer {
     this.#head(6, 85)
     this.#head(2, 4 * values.length)
     this.#reserve(4 * values.length)
-    if (littleEndian) this.#at += Buffer.from(values.buffer, values.byteOffset, values.byteLength).copy(this.#bytes, this.#at)
-    else for (let k = 0; k < values.length; k++) this.#at = this.#bytes.writeFloatLE(values[k], this.#at)
+    if (littleEndian) {
+      this.#bytes.set(new Uint8Array(values.buffer, values.byteOffset, values.byteLength), this.#at)
+      this.#at += values.byteLength
+    } else for (let k = 0; k < values.length; k++) this.#at = this.#bytes.writeFloatLE(values[k], this.#at)
   }
 
   #number(value: number): void {

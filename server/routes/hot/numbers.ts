@@ -44,6 +44,11 @@ function rowsInto(rows: readonly unknown[], n: number, order: Int32Array | null,
 
 function shapedInto({ dimensions, values }: ShapedArray, rows: number, n: number, order: Int32Array | null, into: Float64Array): boolean {
   if (dimensions.length !== 2 || dimensions[0] !== rows || dimensions[1] !== n) return false
+  if (order === null && ArrayBuffer.isView(values)) {
+    // As one block, which is a tenth of the work.
+    into.set(values as Float64Array)
+    return areStates(into, rows * n)
+  }
   for (let r = 0, at = 0; r < rows; r++, at += n) {
     for (let k = 0; k < n; k++) {
       const x = values[at + k]
@@ -51,6 +56,11 @@ function shapedInto({ dimensions, values }: ShapedArray, rows: number, n: number
       into[at + (order === null ? k : order[k])] = x
     }
   }
+  return true
+}
+
+function areStates(values: Float64Array, count: number): boolean {
+  for (let k = 0; k < count; k++) if (!(values[k] <= largestState && values[k] >= -largestState)) return false
   return true
 }
 
