@@ -16,9 +16,9 @@ export class ShapedArray {
 
 /** A matrix that came as an array of rows of equal length. */
 export class RowMatrix extends ShapedArray {
-  rows(): number[][] {
-    const [rows, columns] = this.dimensions
-    return Array.from({ length: rows }, (_, row) => Array.from(this.values as Float64Array).slice(row * columns, (row + 1) * columns))
+  row(index: number): Float64Array {
+    const [, columns] = this.dimensions
+    return (this.values as Float64Array).subarray(index * columns, (index + 1) * columns)
   }
 }
 

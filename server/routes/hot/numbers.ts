@@ -64,12 +64,11 @@ function areStates(values: Float64Array, count: number): boolean {
   return true
 }
 
-function explainMatrix(name: string, given: unknown, rows: number, joints: readonly string[], faults: Faults): void {
-  const value = given instanceof RowMatrix ? given.rows() : given
+function explainMatrix(name: string, value: unknown, rows: number, joints: readonly string[], faults: Faults): void {
   const pointer = `/${name}`
   const n = joints.length
   const perJoint = `Send one value per joint, in the order of joint_names.`
-  if (value instanceof ShapedArray) {
+  if (value instanceof ShapedArray && !(value instanceof RowMatrix)) {
     if (value.dimensions.length !== 2 || value.dimensions[0] !== rows || value.dimensions[1] !== n) {
       faults.add({ pointer, detail: `${name} is ${value.dimensions.join(' × ')}, expected ${rows} × ${n}: rows × joints. ${perJoint}` })
       return
@@ -77,17 +76,18 @@ function explainMatrix(name: string, given: unknown, rows: number, joints: reado
     for (let k = 0; k < rows * n && !faults.full; k++) explainNumber(name, value.values[k], Math.floor(k / n), k % n, joints, faults)
     return
   }
-  if (!Array.isArray(value)) {
+  const count = rowsOf(value)
+  if (count === null) {
     const found = value === undefined ? 'missing' : shown(value)
     faults.add({ pointer, detail: `${name} is ${found}, expected an array of rows, or in CBOR a typed array with its dimensions (tag 40).` })
     return
   }
-  if (value.length !== rows) {
-    faults.add({ pointer, detail: `${name} has ${value.length} rows, the request has ${rows}. Send one row per state in each matrix.` })
+  if (count !== rows) {
+    faults.add({ pointer, detail: `${name} has ${count} rows, the request has ${rows}. Send one row per state in each matrix.` })
     return
   }
   for (let r = 0; r < rows && !faults.full; r++) {
-    const row: unknown = value[r]
+    const row: unknown = value instanceof RowMatrix ? value.row(r) : (value as readonly unknown[])[r]
     if (!isList(row)) {
       faults.add({ pointer: `${pointer}/${r}`, row: r, detail: `${name}: row ${r} is ${shown(row)}, expected an array of ${n} numbers.` })
     } else if (row.length !== n) {
