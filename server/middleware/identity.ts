@@ -40,6 +40,8 @@ export function identity({ keys, sessions, consoleSession }: { keys: KeyDirector
   passport.use(new BearerStrategy({ realm: 'heftwise' }, (token: string, done: (error: unknown, entry: unknown) => void) => done(null, keys.find(hashSecret(token)) ?? false)))
 
   const byKey: RequestHandler = (req, res, next) => {
+    // The strategy would go on to look for a key in the query, where logs and histories keep it.
+    if (!/^bearer\b/i.test(req.headers.authorization ?? '')) return next(noCredentials())
     const settle = (error: unknown, entry: { caller: Caller } | false | undefined, _info: unknown, status?: number) => {
       if (error) return next(error)
       if (entry) {

@@ -384,3 +384,22 @@ describe('refusals', () => {
     }
   })
 })
+
+test('a matrix of a million short rows is refused without keeping anybody waiting', async () => {
+  const rows = 900_000
+  const sound = body(1)
+  const text = JSON.stringify({ ...sound, velocity: [[0]] }).replace('[[0]]', `[${'[0],'.repeat(rows - 1)}[0]]`)
+
+  const startedAt = performance.now()
+  const answer = await key.post(path, text, { headers: { 'content-type': 'application/json' } })
+
+  expect(answer.status).toBe(422)
+  expect(answer.body.detail).toContain(`velocity has ${rows} rows, the request has 1.`)
+  expect(performance.now() - startedAt).toBeLessThan(3_000)
+})
+
+test('a key in the query is not read, whatever the header says', async () => {
+  const answer = await server.api().post(`${path}?access_token=${key.secret}`, body(), { headers: { authorization: 'Basic YTpi' } })
+
+  expect([answer.status, typeOf(answer)]).toEqual([401, 'unauthenticated'])
+})
