@@ -11,6 +11,8 @@ const forwardedHeader = 'x-heftwise-forwarded'
 const notForwarded = new Set([
   'connection', 'keep-alive', 'proxy-authenticate', 'proxy-authorization', 'te', 'trailer', 'transfer-encoding', 'upgrade', 'host', 'expect',
   'content-length', 'idempotency-key',
+  // Held against our own address here already, which is not the holder's.
+  'origin', 'sec-fetch-site',
 ])
 const answered = ['content-type', 'retry-after', 'etag', 'location', 'link', 'www-authenticate', 'cache-control']
 const timeoutMs = 10_000
@@ -44,8 +46,11 @@ async function forward(
 ): Promise<'answered' | 'gone' | 'unreachable'> {
   if (holder.address === null) return 'unreachable'
   let answer: IncomingMessage
+  let bytes: Buffer
   try {
     answer = await ask(holder.address, holder.id, req, body)
+    // Whole, before anything is answered: what breaks off is no answer, and an Idempotency-Key keeps it in one piece.
+    bytes = await wholeOf(answer)
   } catch (error) {
     return (error as { code?: string }).code === 'ECONNREFUSED' ? 'gone' : 'unreachable'
   }
@@ -54,14 +59,21 @@ async function forward(
     const value = answer.headers[name]
     if (value !== undefined) res.setHeader(name, value)
   }
-  await new Promise<void>((done, fail) => {
-    answer.on('error', fail).pipe(res).on('finish', done).on('close', done)
-  })
+  res.end(bytes)
   return 'answered'
 }
 
+async function wholeOf(answer: IncomingMessage): Promise<Buffer> {
+  const parts: Buffer[] = []
+  for await (const part of answer) parts.push(part as Buffer)
+  return Buffer.concat(parts)
+}
+
 function ask(address: string, holderId: string, req: Request, body: Buffer | undefined): Promise<IncomingMessage> {
-  const url = new URL(req.originalUrl ?? req.url, address)
+  // A request may name a host of its own choice in its first line (RFC 9112, section 3.2.2); only path and query are taken from it.
+  const url = new URL(address)
+  const { pathname, search } = new URL(req.originalUrl ?? req.url, url)
+  Object.assign(url, { pathname, search })
   const headers: OutgoingHttpHeaders = { [forwardedHeader]: holderId, 'x-request-id': req.requestId }
   for (const [name, value] of Object.entries(req.headers)) {
     if (!notForwarded.has(name) && value !== undefined) headers[name] ??= value

@@ -1,7 +1,9 @@
+import { createServer, request } from 'node:http'
+import type { AddressInfo } from 'node:net'
 import { afterAll, beforeAll, expect, test } from 'vitest'
 import type { ApiClient } from '../support/api.ts'
 import { startTestServer } from '../support/server.ts'
-import type { TestServer } from '../support/server.ts'
+import type { TestServer, TestTeam } from '../support/server.ts'
 import { serveModel, simulatedMotion } from '../support/served-model.ts'
 import type { ServedModel } from '../support/served-model.ts'
 
@@ -10,11 +12,12 @@ let two: TestServer
 let served: ServedModel
 let key: ApiClient & { secret: string }
 let other: ApiClient
+let team: TestTeam
 
 beforeAll(async () => {
   one = await startTestServer()
   two = await one.another()
-  const team = await one.createTeam()
+  team = await one.createTeam()
   key = await team.createKey(['predict', 'adapt', 'read'])
   other = two.api(key.secret)
   served = await serveModel(one, team.caller(), { joints: 3 })
@@ -125,4 +128,48 @@ test('a process that stops hands its adaptations over', async () => {
 
   expect(await holderOf(path)).toBeNull()
   expect((await other.post(`${path}/batches`, batch(2))).body.revision).toBe(2)
+})
+
+test('an answer that came through another process is kept whole for a repeated Idempotency-Key', async () => {
+  const path = await start()
+  await other.post(`${path}/batches`, batch(1))
+  const options = { headers: { 'idempotency-key': 'freeze-once' } }
+
+  const first = await key.post(`${path}/freeze`, { reason: 'Through the other process.' }, options)
+  const again = await key.post(`${path}/freeze`, { reason: 'Through the other process.' }, options)
+
+  expect([first.status, first.body.state]).toEqual([200, 'frozen'])
+  expect([again.status, again.body]).toEqual([200, first.body])
+})
+
+test('the console reaches an adaptation that another process holds', async () => {
+  const path = await start()
+  await other.post(`${path}/batches`, batch(1))
+  const engineer = await team.signIn('engineer')
+
+  const answer = await engineer.post(`${path}/freeze`, { reason: 'From the console.' }, { headers: { origin: one.origin } })
+
+  expect([answer.status, answer.body.state]).toEqual([200, 'frozen'])
+})
+
+test('a request line that names another host is not sent there', async () => {
+  const path = await start()
+  await other.post(`${path}/batches`, batch(1))
+  const seen: string[] = []
+  const elsewhere = createServer((req, res) => {
+    seen.push(String(req.headers.authorization))
+    res.end('{}')
+  })
+  await new Promise<void>((done) => elsewhere.listen(0, '127.0.0.1', done))
+  const { port } = elsewhere.address() as AddressInfo
+
+  // RFC 9112, section 3.2.2: the absolute form.
+  const status = await new Promise((done, fail) => {
+    const { hostname, port: own } = new URL(one.origin)
+    const target = `http://127.0.0.1:${port}${path}/snapshot`
+    request({ hostname, port: own, path: target, headers: { authorization: `Bearer ${key.secret}` } }, (res) => done(res.resume().statusCode)).on('error', fail).end()
+  })
+  await new Promise((done) => elsewhere.close(done))
+
+  expect([status, seen]).toEqual([200, []])
 })
