@@ -9,6 +9,8 @@ export interface UploadForm {
   readonly fileName: string
   /** The file as it arrives. Throws a Refusal when it is too large, breaks off, or something follows it that should not. */
   readonly file: AsyncIterable<Uint8Array>
+  /** Call it at the end, whatever became of the file: a sender that reads its refusal only after the last byte must get there. */
+  letRunDry(): void
 }
 
 const FIELD_BYTES = 16_384
@@ -24,7 +26,7 @@ export async function readUploadForm(req: Request, fileField: string, mostFileBy
   if (Number(req.headers['content-length'] ?? 0) > mostFileBytes + MOST_FIELDS * (FIELD_BYTES + 1_000))
     throw tooLarge(mostFileBytes)
   const form = openForm(req, mostFileBytes)
-  const fields: Record<string, string> = {}
+  const fields = Object.create(null) as Record<string, string>
   let late: string | undefined
   let opened = false
   const ended = new Promise<void>((resolve, reject) => {
@@ -70,7 +72,7 @@ export async function readUploadForm(req: Request, fileField: string, mostFileBy
   req.pipe(form)
   try {
     const { stream, name } = await file
-    return { fields, fileName: name, file: contents(req, form, stream, ended, mostFileBytes, () => late) }
+    return { fields, fileName: name, file: contents(req, form, stream, ended, mostFileBytes, () => late), letRunDry: () => letRunDry(req, form) }
   } catch (error) {
     letRunDry(req, form)
     throw error

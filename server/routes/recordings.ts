@@ -28,15 +28,15 @@ export function recordingRoutes({ recordings }: Services, contract: Contract): R
   router.post(
     '/v1/recordings',
     contract.handle('createRecording', async ({ caller, requestId }, res, req) => {
-      const { fields, fileName, file } = await readUploadForm(req, 'file', MOST_FILE_BYTES)
-      const { recording, stored } = await recordings.upload(
-        caller,
-        fieldsFromWire(contract.document, fields, fileName),
-        file,
-        requestId,
-      )
-      if (stored) res.status(201).location(`/v1/recordings/${recording.id}`)
-      res.json(recordingToWire(recording))
+      const { fields, fileName, file, letRunDry } = await readUploadForm(req, 'file', MOST_FILE_BYTES)
+      try {
+        const given = fieldsFromWire(contract.document, fields, fileName)
+        const { recording, stored } = await recordings.upload(caller, given, file, requestId)
+        if (stored) res.status(201).location(`/v1/recordings/${recording.id}`)
+        res.json(recordingToWire(recording))
+      } finally {
+        letRunDry()
+      }
     }),
   )
 

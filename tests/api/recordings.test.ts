@@ -208,6 +208,25 @@ function* longCsv(bytes: number, seed = 1): Generator<string> {
   }
 }
 
+test('a sender that reads nothing until its last byte is sent gets its refusal all the same', async () => {
+  const { key } = await teamWithArm()
+  const file = Buffer.alloc(20_000_000, '0,')
+  const field = (name: string, value: string) => `--edge\r\ncontent-disposition: form-data; name="${name}"\r\n\r\n${value}\r\n`
+  const head = `${field('arm', 'no-such-arm')}${field('use', 'fit')}--edge\r\ncontent-disposition: form-data; name="file"; filename="a.csv"\r\n\r\n`
+  const whole = Buffer.concat([Buffer.from(head), file, Buffer.from('\r\n--edge--\r\n')])
+
+  const asked = request(`${server.origin}/v1/recordings`, {
+    method: 'POST',
+    headers: { authorization: `Bearer ${key.secret}`, 'content-type': 'multipart/form-data; boundary=edge', 'content-length': whole.length },
+  })
+  const answered = new Promise<number | undefined>((done, fail) => asked.on('response', (res) => done(res.resume().statusCode)).on('error', fail))
+  const sent = new Promise<void>((done) => asked.on('finish', done))
+  asked.end(whole)
+  await sent
+
+  expect(await answered).toBe(404)
+}, 10_000)
+
 test('an upload that breaks off leaves nothing behind', async () => {
   const { key } = await teamWithArm()
   const before = (await key.get('/v1/recordings')).body.items
