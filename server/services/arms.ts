@@ -101,7 +101,7 @@ export function createArmService({ database, clock, audit, changeFeed }: Depende
         where: {
           teamId: caller.teamId,
           ...(!archived && { archivedAt: null }),
-          ...(cursor !== undefined && { name: { [Op.gt]: decodeCursor(cursor, 1)[0] } }),
+          ...(cursor !== undefined && { name: { [Op.gt]: decodeCursor(cursor, 'text') } }),
         },
         order: [['name', 'ASC']],
         limit: limit + 1,

@@ -203,7 +203,7 @@ export function createLossService({ database, clock, audit, changeFeed }: Depend
     async list(caller, { cursor, limit, model }) {
       requireAction(caller, 'read')
       const rows = await Loss.findAll({
-        where: { teamId: caller.teamId, ...(cursor !== undefined && { name: { [Op.gt]: decodeCursor(cursor, 1)[0] } }) },
+        where: { teamId: caller.teamId, ...(cursor !== undefined && { name: { [Op.gt]: decodeCursor(cursor, 'text') } }) },
         include: [{ model: Model, as: 'model', required: true, ...(model !== undefined && { where: { name: model } }) }],
         order: [['name', 'ASC']],
         limit: limit + 1,
@@ -220,7 +220,7 @@ export function createLossService({ database, clock, audit, changeFeed }: Depend
       requireAction(caller, 'read')
       const loss = await find(caller.teamId, name)
       const rows = await LossVersion.findAll({
-        where: { lossId: loss.id, ...(cursor !== undefined && { number: { [Op.lt]: decodeCursor(cursor, 1)[0] } }) },
+        where: { lossId: loss.id, ...(cursor !== undefined && { number: { [Op.lt]: decodeCursor(cursor, 'number') } }) },
         order: [['number', 'DESC']],
         limit: limit + 1,
       })

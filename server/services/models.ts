@@ -82,7 +82,7 @@ export function createModelService({ database, clock, audit, changeFeed }: Depen
         where: {
           teamId: caller.teamId,
           ...(!archived && { archivedAt: null }),
-          ...(cursor !== undefined && { name: { [Op.gt]: decodeCursor(cursor, 1)[0] } }),
+          ...(cursor !== undefined && { name: { [Op.gt]: decodeCursor(cursor, 'text') } }),
         },
         include: [{ model: Arm, as: 'arm', required: true, ...(arm !== undefined && { where: { name: arm } }) }],
         order: [['name', 'ASC']],

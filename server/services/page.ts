@@ -16,13 +16,19 @@ export function encodeCursor(position: readonly (string | number)[]): string {
   return Buffer.from(JSON.stringify(position)).toString('base64url')
 }
 
-/** @throws {Refusal} invalid-request: not a cursor of ours with so many values */
-export function decodeCursor(cursor: string, length: number): (string | number)[] {
+/**
+ * The one sort value of a cursor.
+ *
+ * @throws {Refusal} invalid-request: not a cursor of ours with one value of that kind
+ */
+export function decodeCursor(cursor: string, kind: 'text'): string
+export function decodeCursor(cursor: string, kind: 'number'): number
+export function decodeCursor(cursor: string, kind: 'text' | 'number'): string | number {
   try {
     const position = JSON.parse(Buffer.from(cursor, 'base64url').toString('utf8')) as unknown
-    if (Array.isArray(position) && position.length === length && position.every((value) => typeof value === 'string' || typeof value === 'number')) {
-      return position
-    }
+    const value: unknown = Array.isArray(position) && position.length === 1 ? position[0] : undefined
+    // Also no infinity, which JSON can write as 1e999 and SQL cannot.
+    if (kind === 'text' ? typeof value === 'string' : Number.isSafeInteger(value)) return value as string | number
   } catch {
     // Told below.
   }

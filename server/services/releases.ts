@@ -162,7 +162,7 @@ export function createReleaseService({ database, clock, audit, changeFeed }: Dep
       const rows = await Release.findAll({
         where: {
           modelId: model.id,
-          ...(cursor !== undefined && { number: { [Op.lt]: decodeCursor(cursor, 1)[0] } }),
+          ...(cursor !== undefined && { number: { [Op.lt]: decodeCursor(cursor, 'number') } }),
         },
         order: [['number', 'DESC']],
         limit: limit + 1,

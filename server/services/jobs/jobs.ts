@@ -111,7 +111,7 @@ export function createJobService(
           teamId: caller.teamId,
           ...(kind !== undefined && { kind }),
           ...(state !== undefined && { state }),
-          ...(cursor !== undefined && { id: { [Op.lt]: decodeCursor(cursor, 1)[0] } }),
+          ...(cursor !== undefined && { id: { [Op.lt]: decodeCursor(cursor, 'text') } }),
         },
         order: [['id', 'DESC']],
         limit: limit + 1,

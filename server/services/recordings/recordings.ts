@@ -187,7 +187,7 @@ export function createRecordingService({ database, clock, audit, log }: Dependen
         where: {
           teamId: caller.teamId,
           ...(use !== undefined && { use }),
-          ...(cursor !== undefined && { id: { [Op.lt]: decodeCursor(cursor, 1)[0] } }),
+          ...(cursor !== undefined && { id: { [Op.lt]: decodeCursor(cursor, 'text') } }),
         },
         include: include(arm),
         order: [['id', 'DESC']],
