@@ -118,7 +118,7 @@ export function createKeyService({ database, clock, audit, changeFeed, keys }: D
   return {
     async list(caller, { cursor, limit, state }) {
       requireAction(caller, 'manage_keys')
-      const before = cursor === undefined ? {} : { id: { [Op.lt]: String(decodeCursor(cursor, 1)[0]) } }
+      const before = cursor === undefined ? {} : { id: { [Op.lt]: decodeCursor(cursor, 'text') } }
       const rows = await ApiKey.findAll({
         where: { [Op.and]: [{ teamId: caller.teamId }, before, stateFilter(state, clock.now())] },
         order: [['id', 'DESC']],
@@ -176,7 +176,9 @@ function newSecret() {
 
 function requireExpiry(expiresAt: Date, now: Date): void {
   const detail =
-    expiresAt <= now
+    Number.isNaN(expiresAt.getTime())
+      ? 'This is no time that a clock shows; leap seconds are not taken. Name a time such as 2027-06-01T00:00:00Z.'
+      : expiresAt <= now
       ? `${expiresAt.toISOString()} has passed. Name a time in the future.`
       : expiresAt.getTime() > now.getTime() + 2 * 366 * dayMs
         ? `${expiresAt.toISOString()} is more than two years ahead. Name an earlier time; keys can be rotated.`

@@ -6,7 +6,7 @@ import { ShapeError } from '../../shared/dynamics/shape-error.ts'
 import { decodeVersion, encodeVersion, type Version as VersionArtefact } from '../../shared/dynamics/version.ts'
 import { uuid7 } from '../database/uuid7.ts'
 import type { Dependencies } from '../dependencies.ts'
-import type { StoredJoint } from '../models/arm.ts'
+import type { Arm, StoredJoint } from '../models/arm.ts'
 import type { StoredMetrics, Version, VersionOrigin } from '../models/version.ts'
 import { findModel, requireModelInUse, type ModelWithArm } from './model-records.ts'
 import { decodeCursor, pageOf, type Page, type PageRequest } from './page.ts'
@@ -136,7 +136,7 @@ export function createVersionService({ database, clock, audit, changeFeed }: Dep
       requireAction(caller, 'read_models')
       const model = await findModel(database, caller.teamId, name)
       const rows = await Version.findAll({
-        where: { modelId: model.id, ...(cursor !== undefined && { number: { [Op.lt]: decodeCursor(cursor, 1)[0] } }) },
+        where: { modelId: model.id, ...(cursor !== undefined && { number: { [Op.lt]: decodeCursor(cursor, 'number') } }) },
         order: [['number', 'DESC']],
         limit: limit + 1,
       })
@@ -159,6 +159,7 @@ export function createVersionService({ database, clock, audit, changeFeed }: Dep
         requireModelInUse(model)
         requireSameJoints(model, given)
         const artefact = readImport('parameters', () => versionFromWire(given.description, given.parameters))
+        requireJointCount(artefact, model.arm)
         requireChecksum(encodeVersion(artefact), given.checksum)
         return add(
           transaction,
@@ -234,6 +235,12 @@ function requireSameJoints({ arm }: ModelWithArm, { jointNames, unit }: VersionI
       )
     }
   })
+}
+
+function requireJointCount({ description: { joints } }: VersionArtefact, { joints: expected }: Arm): void {
+  if (joints === expected.length) return
+  const detail = `The snapshot's network is for ${joints} joints; its joint_names are ${expected.length}. Export it again and send it unchanged.`
+  throw new Refusal('artefact-unreadable', detail, { errors: [{ pointer: '/description/joints', detail: `Expected ${expected.length}.` }] })
 }
 
 function noVersion({ name }: ModelWithArm, number: number): Refusal {

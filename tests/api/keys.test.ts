@@ -16,6 +16,7 @@ beforeAll(async () => {
 })
 afterAll(() => server.stop())
 
+const cursorOf = (position: unknown) => Buffer.from(JSON.stringify(position)).toString('base64url')
 const dayMs = 24 * 3_600_000
 const works = async (secret: string, at: TestServer = server) => (await at.api(secret).get('/v1/session')).status === 200
 
@@ -60,6 +61,7 @@ describe('making a key', () => {
     ['no name', { scopes: ['read'] }, '/name'],
     ['an unknown field', { name: 'a', scopes: ['read'], quota: 3 }, '/quota'],
     ['a date without a zone', { name: 'a', scopes: ['read'], expires_at: '2027-01-01' }, '/expires_at'],
+    ['a leap second', { name: 'a', scopes: ['read'], expires_at: '2026-12-31T23:59:60Z' }, '/expires_at'],
   ])('with %s is refused, pointing at the field', async (_case, body, pointer) => {
     const answer = await administrator.post('/v1/keys', body)
 
@@ -247,7 +249,7 @@ describe('the list of keys', () => {
     expect(await ids('expired')).toEqual([])
   })
 
-  test.each(['limit=0', 'limit=201', 'limit=two', 'limit=1&limit=2', 'state=gone', 'colour=red', 'cursor=zzz'])('with %s is refused', async (query) => {
+  test.each(['limit=0', 'limit=201', 'limit=two', 'limit=1&limit=2', 'state=gone', 'colour=red', 'cursor=zzz', `cursor=${cursorOf([1])}`, `cursor=${cursorOf(['a', 'b'])}`])('with %s is refused', async (query) => {
     const answer = await administrator.get(`/v1/keys?${query}`)
 
     expect(answer.status).toBe(422)

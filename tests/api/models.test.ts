@@ -1,4 +1,5 @@
 import { afterAll, beforeAll, describe, expect, test } from 'vitest'
+import { versionToWire } from '../../shared/contract/snapshots.ts'
 import { twoJointArm } from '../support/recording-csv.ts'
 import { startTestServer, type TestServer } from '../support/server.ts'
 import { smallVersion, versionSnapshot } from '../support/versions.ts'
@@ -114,6 +115,12 @@ describe('an import is refused', () => {
       'artefact-unreadable',
       /parameters/,
     ],
+    [
+      'with a network for another number of joints',
+      { ...versionToWire(smallVersion(1, 3)), checksum: versionSnapshot(smallVersion(1, 3), joints).checksum },
+      'artefact-unreadable',
+      /for 3 joints/,
+    ],
     ['in another format', { format: 'someone-elses' }, 'invalid-request', /heftwise-version-1/],
   ])('%s', async (_, change, slug, detail) => {
     const { key } = await teamWithModel()
@@ -137,6 +144,16 @@ test('versions are listed newest first, page after page', async () => {
   expect(first.body.items.map((item: { version: number }) => item.version)).toEqual([3, 2])
   expect(second.body.items.map((item: { version: number }) => item.version)).toEqual([1])
   expect(second.body.next_cursor).toBeNull()
+})
+
+test.each(['1e999', '"a"', 'null'])('a cursor that holds %s is refused', async (value) => {
+  const { key } = await teamWithModel()
+  const cursor = Buffer.from(`[${value}]`).toString('base64url')
+
+  for (const list of ['versions', 'releases']) {
+    const answer = await key.get(`/v1/models/tinker-base/${list}?cursor=${cursor}`)
+    expect([answer.status, answer.body.errors[0].pointer]).toEqual([422, 'cursor'])
+  }
 })
 
 test('an archived model takes no versions but can still be read', async () => {
