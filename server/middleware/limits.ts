@@ -2,6 +2,7 @@ import { createHash } from 'node:crypto'
 import type { Request, RequestHandler } from 'express'
 import { ipKeyGenerator, rateLimit } from 'express-rate-limit'
 import { Refusal } from '../../shared/contract/problems.ts'
+import { normalEmail } from '../services/people.ts'
 import type { Settings } from '../settings.ts'
 
 /**
@@ -59,5 +60,5 @@ function addressOf(req: Request): string {
 
 function hashEmail(body: unknown): string {
   const { email } = body as { email: string }
-  return createHash('sha256').update(email.trim().toLowerCase()).digest('base64url')
+  return createHash('sha256').update(normalEmail(email)).digest('base64url')
 }

@@ -51,7 +51,10 @@ export function createSessionService({ database, clock, audit, settings }: Depen
     caller,
 
     async signIn({ email, password }, requestId) {
-      const person = await Person.findOne({ where: { email: normalEmail(email) } })
+      const address = normalEmail(email)
+      const found = await Person.findOne({ where: { email: address } })
+      // The database also finds look-alikes (accents, characters without weight). Each would be another count of failed tries.
+      const person = found?.email === address ? found : null
       const isRight = await passwords.matches(password, person?.passwordHash)
       const [membership] = isRight && person ? await memberships(person.id) : []
       if (!person || !membership) throw signInFailed()
