@@ -2,6 +2,7 @@ import { createHash, randomBytes } from 'node:crypto'
 import type { RequestHandler } from 'express'
 import session from 'express-session'
 import type { SessionData } from 'express-session'
+import { Op } from 'sequelize'
 import type { Clock } from '../clock.ts'
 import type { Database } from '../database/connection.ts'
 import type { Settings } from '../settings.ts'
@@ -10,6 +11,8 @@ declare module 'express-session' {
   interface SessionData {
     personId: string
     teamId: string
+    /** It came from the database, as opposed to one that this request begins. */
+    isStored?: true
   }
 }
 
@@ -89,16 +92,26 @@ class DatabaseSessionStore extends session.Store {
       return null
     }
     // The cookie's own expiry is not kept: the limits above decide.
-    return { ...(JSON.parse(row.data) as Omit<SessionData, 'cookie'>), cookie: { originalMaxAge: this.#limits.absoluteMs } }
+    return { ...(JSON.parse(row.data) as Omit<SessionData, 'cookie'>), isStored: true, cookie: { originalMaxAge: this.#limits.absoluteMs } }
   }
 
-  async #write(idHash: string, { cookie: _cookie, ...data }: SessionData): Promise<void> {
+  async #write(idHash: string, { cookie: _cookie, isStored, ...data }: SessionData): Promise<void> {
     const now = this.#clock.now()
     const { Session } = this.#database.models
     const stored = { personId: data.personId ?? null, data: JSON.stringify(data), seenAt: now }
-    // Only an existing row is updated: a session that was ended meanwhile stays ended.
-    const known = await Session.findByPk(idHash)
-    if (known) await known.update(stored)
-    else await Session.create({ idHash, ...stored, createdAt: now })
+    // A session that was ended while this request ran has no row any more, and stays ended.
+    const [updated] = await Session.update(stored, { where: { idHash } })
+    if (updated > 0 || isStored) return
+    await Session.create({ idHash, ...stored, createdAt: now })
+    // When it fails, the next sign-in sweeps.
+    await this.#sweep(now.getTime()).catch(() => undefined)
+  }
+
+  /** Sessions whose cookie nobody sends any more are found by nobody else. */
+  async #sweep(now: number): Promise<void> {
+    const { idleMs, absoluteMs } = this.#limits
+    await this.#database.models.Session.destroy({
+      where: { [Op.or]: [{ seenAt: { [Op.lt]: new Date(now - idleMs) } }, { createdAt: { [Op.lt]: new Date(now - absoluteMs) } }] },
+    })
   }
 }

@@ -1,5 +1,5 @@
 import { createHash } from 'node:crypto'
-import { afterAll, beforeAll, describe, expect, test } from 'vitest'
+import { afterAll, beforeAll, describe, expect, test, vi } from 'vitest'
 import { client, cookieOf } from '../support/api.ts'
 import { testClock } from '../support/clock.ts'
 import { startTestServer } from '../support/server.ts'
@@ -126,6 +126,15 @@ describe('signing in', () => {
     expect((await server.api().post('/v1/session', credentials(other))).status).toBe(201)
   })
 
+  test('an address that only looks like a person’s is another one, so that it buys no more guesses', async () => {
+    const person = await team.createPerson('engineer')
+    const lookAlikes = [person.email.replace('e', 'é'), person.email.replace('@', '\u0001@')]
+
+    const answers = await Promise.all(lookAlikes.map((email) => server.api().post('/v1/session', { email, password: person.password })))
+
+    expect(answers.map(({ status }) => status)).toEqual([401, 401])
+  })
+
   test('guesses from one address of the network are throttled', async () => {
     const strict = await server.another({ limits: { signInsPerAddress: 3 } })
 
@@ -146,6 +155,34 @@ describe('a session', () => {
     expect(answer.status).toBe(204)
     expect(answer.headers.getSetCookie()[0]).toMatch(/^heftwise_session=;/)
     expect((await engineer.get('/v1/session')).status).toBe(401)
+  })
+
+  test('that was ended while a request of it ran stays ended', async () => {
+    const engineer = await team.signIn('engineer')
+    const second = await server.createTeam()
+    await server.services.people.add({ teamId: second.id, email: engineer.email, name: 'A guest', role: 'engineer', password: engineer.password })
+    const { Membership: memberships } = server.database.models
+    const find = memberships.findOne.bind(memberships)
+    const ending = vi.spyOn(memberships, 'findOne').mockImplementationOnce(async (options) => {
+      await server.database.models.Session.destroy({ where: { personId: engineer.personId } })
+      return find(options)
+    })
+
+    const running = await engineer.patch('/v1/session', { team: second.id })
+    ending.mockRestore()
+
+    expect(running.status).toBe(200)
+    expect((await engineer.get('/v1/session')).status).toBe(401)
+    expect(await server.database.models.Session.count({ where: { personId: engineer.personId } })).toBe(0)
+  })
+
+  test('that nobody uses any more is deleted at the next sign-in', async () => {
+    const forgotten = await team.signIn('engineer')
+    clock.advance(2 * 3_600_000)
+
+    await team.signIn('engineer')
+
+    expect(await server.database.models.Session.count({ where: { personId: forgotten.personId } })).toBe(0)
   })
 
   test('ends after an hour without use', async () => {
