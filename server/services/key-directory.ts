@@ -39,7 +39,7 @@ export function createKeyDirectory({ database, clock, changeFeed, log }: { datab
   let prefixesOf = new Map<string, string[]>()
   const used = new Map<string, Date>()
   let timer: NodeJS.Timeout | undefined
-  let refreshing = Promise.resolve()
+  let reading: Promise<void> = Promise.resolve()
 
   const prefixOf = (hash: Buffer) => hash.toString('latin1', 0, 16)
   const put = (entry: KeyEntry) => {
@@ -50,6 +50,12 @@ export function createKeyDirectory({ database, clock, changeFeed, log }: { datab
   const drop = (id: string) => {
     for (const prefix of prefixesOf.get(id) ?? []) byPrefix.delete(prefix)
     prefixesOf.delete(id)
+  }
+  /** One after the other: what was read before a revocation must not be put in place after it. */
+  const inTurn = (read: () => Promise<void>): Promise<void> => {
+    const done = reading.then(read)
+    reading = done.catch(() => undefined)
+    return done
   }
   const load = async () => {
     const rows = await database.models.ApiKey.findAll({ where: { revokedAt: null, expiresAt: { [Op.gt]: clock.now() } } })
@@ -96,16 +102,12 @@ export function createKeyDirectory({ database, clock, changeFeed, log }: { datab
       return entry
     },
     lastUsed: (id) => used.get(id),
-    refresh(id) {
-      // One after the other: an answer read before a revocation must not be put in place after it.
-      refreshing = refreshing.then(() => readAgain(id))
-      return refreshing
-    },
+    refresh: (id) => inTurn(() => readAgain(id)),
     flush,
     async start() {
       changeFeed.on('key', ({ subject }) => directory.refresh(subject))
-      changeFeed.onGap(load)
-      await load()
+      changeFeed.onGap(() => inTurn(load))
+      await inTurn(load)
       timer = setInterval(() => void flush(), flushMs)
       timer.unref()
     },
