@@ -76,3 +76,14 @@ test('each is heard once', async () => {
   expect(heard.here.filter(({ subject }) => subject === told.subject)).toHaveLength(1)
   expect(heard.there.filter(({ subject }) => subject === told.subject)).toHaveLength(1)
 })
+
+test('one whose commit was never answered is heard here too', async () => {
+  const told = change()
+  const connection = await here.database.pool.getConnection()
+
+  // What is to be called after the commit is not called.
+  await here.dependencies.changeFeed.announceOn(connection, told)
+  await connection.release()
+
+  expect(await within(1_000, () => heard.here.some(({ subject }) => subject === told.subject))).toBe(true)
+})
