@@ -47,5 +47,12 @@ export async function stopDependencies({ changeFeed, keys }: Dependencies): Prom
 }
 
 export function createLog(settings: Pick<Settings, 'logLevel'>): Logger {
-  return pino({ level: settings.logLevel, base: undefined, redact: ['*.password', '*.secret', '*.authorization', '*.cookie'] })
+  return pino({ level: settings.logLevel, base: undefined, serializers: { err: errorForLog }, redact: ['*.password', '*.secret', '*.authorization', '*.cookie'] })
+}
+
+/** An error as it is logged: without the statement and its parameters, which hold what was to be stored. */
+export function errorForLog(error: Error): Record<string, unknown> {
+  const { sql, parameters, parent, original, ...told } = pino.stdSerializers.err(error) as unknown as Record<string, unknown>
+  const withoutStatement = (text: unknown) => String(text).replaceAll(/\nsql: [^]*?(?=\n {4}at |$)/g, '')
+  return { ...told, message: withoutStatement(told.message), stack: withoutStatement(told.stack) }
 }

@@ -35,7 +35,7 @@ export function openDatabase(address: DatabaseAddress, sizes: { models?: number;
     timezone: '+00:00',
     isolationLevel: Transaction.ISOLATION_LEVELS.READ_COMMITTED,
     pool: { max: sizes.models ?? 8, acquire: 20_000, idle: 60_000 },
-    dialectOptions: { connectTimeout: 5_000, allowPublicKeyRetrieval: false },
+    dialectOptions: { connectTimeout: 5_000, allowPublicKeyRetrieval: false, logParam: false },
     define: { timestamps: false, underscored: true, freezeTableName: true },
   })
   const pool = mariadb.createPool({
@@ -45,6 +45,8 @@ export function openDatabase(address: DatabaseAddress, sizes: { models?: number;
     charset: 'utf8mb4',
     initSql: ['SET NAMES utf8mb4', 'SET SESSION TRANSACTION ISOLATION LEVEL READ COMMITTED'],
     connectTimeout: 5_000,
+    // What was to be stored stays out of error messages.
+    logParam: false,
     acquireTimeout: 20_000,
     insertIdAsNumber: true,
     bigIntAsNumber: true,
