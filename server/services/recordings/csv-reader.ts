@@ -22,6 +22,11 @@ export interface ReadSummary {
 export const LEAST_ROWS = 100
 /** Hz. What is logged slower misses the accelerations that torque goes into. */
 export const LEAST_RATE = 20
+/** Hz. No arm logs as fast; such times are in another unit. */
+const MOST_RATE = 100_000
+/** Magnitude of a time (s), and of everything else in SI units; as on the hot routes, no arm comes near it. */
+const LARGEST_TIME = 1e12
+const LARGEST_VALUE = 1e7
 /** A position this many times beyond its limit is in another unit. Degrees read as radians are 57 times too large. */
 const FAR_BEYOND = 4
 const MOST_FAULTS = 10
@@ -135,6 +140,7 @@ function createRowChecker(joints: readonly RecordedJoint[], header: readonly str
         const value = readNumber(text)
         row[k] = value
         if (Number.isNaN(value)) fault(absentValue(columns[k], joints, text, line), columns[k].joint)
+        else if (Math.abs(value) > (k === 0 ? LARGEST_TIME : LARGEST_VALUE)) fault(tooLarge(columns[k], value, line), columns[k].joint)
         else if (Math.abs(value) > farPosition[k]) fault(farBeyondLimit(columns[k], joints, value, line), columns[k].joint)
       }
       if (!Number.isNaN(row[0])) checkTime(row[0], line)
@@ -160,6 +166,9 @@ function createRowChecker(joints: readonly RecordedJoint[], header: readonly str
           `at least ${LEAST_RATE} Hz are needed, since slower logs miss the accelerations. Log at 100 Hz or more.`,
         )
       }
+      if (rate > MOST_RATE) {
+        throw new Refusal('recording-unreadable', `The rows come at ${rate.toPrecision(3)} Hz. Is time in seconds? Send seconds.`)
+      }
       return { count, duration: Number((last - first).toPrecision(12)), rate: Number(rate.toPrecision(6)) }
     },
   }
@@ -179,6 +188,10 @@ function absentValue({ title, joint }: Column, joints: readonly RecordedJoint[],
   const whose = joint < 0 ? '' : ` (joint ${joints[joint].name})`
   return `line ${line}, column ${title}${whose} ${found}, expected a number. Missing values are not filled in: ` +
     'cut the log there, or repair it.'
+}
+
+function tooLarge({ title }: Column, value: number, line: number): string {
+  return `line ${line}, column ${title}: ${value} is beyond anything in SI units. Check unit and decoding.`
 }
 
 function farPositionOf(joints: readonly RecordedJoint[], { quantity, joint }: Column): number {

@@ -211,3 +211,17 @@ describe('reading a number', () => {
     expect(readNumber(text)).toBeNaN()
   })
 })
+
+describe('numbers that no arm sends', () => {
+  it.each([
+    ['a torque of 1e300', changed(4, 7, '1e300'), /line 6, column torque_\w+: 1e\+300 is beyond anything in SI units/],
+    ['a time of 1e308', changed(149, 0, '1e308'), /line 151, column time: 1e\+308 is beyond/],
+    [
+      'times that hardly differ',
+      csvOf(twoJointHeader, rows.map((cells, r) => [`${r}e-320`, ...cells.slice(1)])),
+      /The rows come at Infinity Hz\. Is time in seconds\?/,
+    ],
+  ])('%s is refused', async (_, text, detail) => {
+    expect((await refusal(text)).message).toMatch(detail)
+  })
+})
