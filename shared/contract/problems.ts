@@ -73,7 +73,7 @@ export function problemKind(slug: ProblemSlug): ProblemKind {
 
 export function slugOfType(type: string): ProblemSlug | undefined {
   const slug = type.startsWith(prefix) ? type.slice(prefix.length) : ''
-  return slug in table ? (slug as ProblemSlug) : undefined
+  return Object.hasOwn(table, slug) ? (slug as ProblemSlug) : undefined
 }
 
 /** Where in a request a fault lies. */

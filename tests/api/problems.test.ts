@@ -33,6 +33,10 @@ test('the table of problems and the contract list the same types', () => {
   expect(problemKinds.map(({ type }) => type).sort()).toEqual([...components.schemas.ProblemType.enum].sort())
 })
 
+test.each(['constructor', '__proto__', 'toString'])('"%s" is no type of ours', (slug) => {
+  expect(slugOfType(`tag:heftwise.invalid,2026:${slug}`)).toBeUndefined()
+})
+
 test('every type has a title of its own and a status of the 4xx or 5xx', () => {
   expect(new Set(problemKinds.map(({ title }) => title)).size).toBe(problemKinds.length)
   for (const { status } of problemKinds) expect(status).toBeGreaterThanOrEqual(400)
