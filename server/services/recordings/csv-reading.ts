@@ -43,7 +43,9 @@ export function createCsvReading(): CsvReading {
   }
 
   function lose(lost: Worker, error: Error): void {
-    if (thread === lost) thread = undefined
+    // One that was ended for idleness may be heard of when its successor is at work.
+    if (thread !== lost) return
+    thread = undefined
     for (const [id, listener] of listeners) listener({ kind: 'failed', id, message: error.stack ?? error.message })
   }
 
