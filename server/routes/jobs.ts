@@ -65,7 +65,7 @@ async function stream(jobs: JobService, caller: Caller, id: string, req: Request
   for (;;) {
     for (const event of news.events) {
       at = event.kind === 'job' ? { ...at, changeNumber: event.job.changeNumber } : { ...at, pointNumber: event.point.number }
-      if (!res.write(eventText(event, at))) await Promise.race([once(res, 'drain'), once(res, 'close')])
+      if (!res.write(eventText(event, at))) await roomIn(res)
       wroteAt = performance.now()
     }
     if (news.ended || res.destroyed || server?.listening === false) break
@@ -78,6 +78,14 @@ async function stream(jobs: JobService, caller: Caller, id: string, req: Request
     news = await jobs.events(caller, id, at)
   }
   res.end()
+}
+
+/** Resolves when the reader has taken what was written, or has gone. */
+async function roomIn(res: Response): Promise<void> {
+  if (res.destroyed) return
+  const settled = new AbortController()
+  const { signal } = settled
+  await Promise.race([once(res, 'drain', { signal }), once(res, 'close', { signal })]).finally(() => settled.abort())
 }
 
 function eventText(event: JobEvent, { changeNumber, pointNumber }: JobPosition): string {
