@@ -7,11 +7,13 @@ import { databaseErrno } from '../database/connection.ts'
 /** Turns whatever was thrown into the one RFC 9457 answer. What is not a refusal is our mistake, and reported. */
 export function problemAnswer(log: Logger): ErrorRequestHandler {
   return (error: unknown, req, res, next) => {
+    // Hot requests that never entered Express have no path of its making.
+    const path = req.path ?? req.url
     const refusal = asRefusal(error)
     if (refusal === undefined) {
-      log.error({ err: error, requestId: req.requestId, method: req.method, path: req.path }, 'a request failed')
+      log.error({ err: error, requestId: req.requestId, method: req.method, path }, 'a request failed')
     } else if (refusal.kind.status >= 500) {
-      log.warn({ err: error, requestId: req.requestId, path: req.path }, refusal.message)
+      log.warn({ err: error, requestId: req.requestId, path }, refusal.message)
     }
     if (res.headersSent) {
       next(error)
