@@ -1,7 +1,7 @@
 import { fork } from 'node:child_process'
 import type { ChildProcess } from 'node:child_process'
 import { mkdtempSync, readFileSync, rmSync } from 'node:fs'
-import { tmpdir } from 'node:os'
+import { availableParallelism, loadavg, tmpdir } from 'node:os'
 import { join } from 'node:path'
 import { startPrivateMariaDb } from '../../server/database/private-mariadb.ts'
 import { jointNamesOf, simulatedMotion } from '../support/served-model.ts'
@@ -10,9 +10,9 @@ import { ShapedArray } from '../../server/routes/hot/cbor-reader.ts'
 import { writeCbor } from '../../server/routes/hot/cbor-writer.ts'
 import { drive, requestBytes, sendOnce } from './client.ts'
 import type { Run } from './client.ts'
-import type { ProductOptions, ProductReady } from './product-process.ts'
+import type { ProductLoad, ProductOptions, ProductReady } from './product-process.ts'
 
-// npm run bench [-- --quick] [-- --only=predict|batches|soak] [-- --soak]
+// npm run bench [-- --quick] [-- --only=predict|batches|training|soak] [-- --soak]
 // Floor, product and its variant in one run, each in a process of its own, rounds interleaved, medians of the rounds' ratios.
 
 const quick = process.argv.includes('--quick')
@@ -30,7 +30,7 @@ interface Server {
   readonly port: number
 }
 
-type Product = Server & ProductReady & { readonly sequences: number[] }
+type Product = Server & ProductReady & { readonly process: ChildProcess; readonly sequences: number[] }
 
 async function startFloor(): Promise<Server> {
   const child = start('floor-process.ts')
@@ -42,7 +42,7 @@ async function startProduct(groupCommit: ProductOptions['groupCommit'], adaptati
   const child = start('product-process.ts')
   child.send({ database: mariaDb.address, groupCommit, adaptations } satisfies ProductOptions)
   const ready = await message<ProductReady>(child)
-  return { ...ready, pid: child.pid!, sequences: ready.adaptations.map(() => 0) }
+  return { ...ready, pid: child.pid!, process: child, sequences: ready.adaptations.map(() => 0) }
 }
 
 function start(file: string): ChildProcess {
@@ -55,8 +55,12 @@ function start(file: string): ChildProcess {
 
 function message<T>(child: ChildProcess): Promise<T> {
   return new Promise((resolve, reject) => {
-    child.once('message', (value) => resolve(value as T))
-    child.once('exit', (code) => reject(new Error(`A process of the benchmark ended with ${code}.`)))
+    const onExit = (code: number | null) => reject(new Error(`A process of the benchmark ended with ${code}.`))
+    child.once('exit', onExit)
+    child.once('message', (value) => {
+      child.off('exit', onExit)
+      resolve(value as T)
+    })
   })
 }
 
@@ -129,6 +133,38 @@ async function predictCase({ port, secret, model, fingerprint }: Product, rows: 
 /** Nine digits: what a controller that keeps binary32 states sends. */
 function rounded(matrix: number[][]): number[][] {
   return matrix.map((row) => row.map((value) => Number(value.toPrecision(9))))
+}
+
+/** One connection: client and server then keep one core busy by turns, and the training has the other. */
+async function benchTraining(product: Product): Promise<void> {
+  const lines: string[][] = []
+  for (const rows of [1, 32]) {
+    const requests = quick ? 1500 : 4000
+    const { product: request } = await predictCase(product, rows, 'json', 1.2, requests)
+    const p50 = async (load: ProductLoad): Promise<number> => {
+      const isSo = message<ProductLoad>(product.process)
+      product.process.send(load)
+      await isSo
+      const run = await drive(product.port, { connections: 1, requests, next: () => request })
+      requireAll(run, 200)
+      return run.latencies[run.requests >> 1]
+    }
+    await p50('rest')
+    const pairs: { alone: number; training: number }[] = []
+    for (let round = 0; round < rounds; round++) pairs.push({ alone: await p50('rest'), training: await p50('train') })
+    await p50('rest')
+    lines.push([
+      `${rows} row${rows > 1 ? 's' : ''}, JSON`, String(requests * rounds), median(pairs.map(({ alone }) => alone)).toFixed(3),
+      median(pairs.map(({ training }) => training)).toFixed(3), median(pairs.map(({ alone, training }) => training / alone)).toFixed(2), '≤ 1.2',
+    ])
+  }
+  console.log(`\npredict while a meta-training runs in a job thread, 1 connection, ${rounds} interleaved rounds`)
+  table(['case', 'requests', 'p50 ms alone', 'p50 ms training', 'ratio', 'target'], lines)
+}
+
+/** What else the machine does bends times and rates, and ratios less: said beside them. */
+function tellLoad(when: string): void {
+  console.log(`machine ${when}: ${availableParallelism()} cores, load average ${loadavg().map((load) => load.toFixed(2)).join(' ')} (1, 5, 15 min)`)
 }
 
 async function benchBatches(grouped: Product): Promise<void> {
@@ -229,12 +265,15 @@ function table(head: string[], lines: string[][]): void {
 }
 
 try {
+  tellLoad('before')
   const floor = await startFloor()
   const product = await startProduct({ largestGroup: 256, lanes: 1 }, 64)
   if (only === undefined || only === 'predict') await benchPredicts(floor, product)
   if (only === undefined || only === 'batches') await benchBatches(product)
   if (soak) await benchMemory(product)
   console.log(`\nresident memory of the server: ${residentMiB(product.pid)} MiB`)
+  if (only === undefined || only === 'training') await benchTraining(product)
+  tellLoad('after')
 } finally {
   await Promise.all(children.map(end))
   await mariaDb.stop()

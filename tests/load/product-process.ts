@@ -10,6 +10,7 @@ import type { Caller } from '../../server/services/permissions.ts'
 import { readSettings } from '../../server/settings.ts'
 import type { Settings } from '../../server/settings.ts'
 import { serveModel } from '../support/served-model.ts'
+import { startMetaTraining } from './meta-training.ts'
 
 /** What the parent says it wants, and what it gets to know. */
 export interface ProductOptions {
@@ -25,6 +26,9 @@ export interface ProductReady {
   readonly fingerprint: string
   readonly adaptations: readonly string[]
 }
+
+/** What the parent may ask for afterwards; answered by the same word when it is so. */
+export type ProductLoad = 'train' | 'rest'
 
 // The product as server/index.ts runs it, with a team, a key, a model 21-64-64-7 and adaptations of it.
 
@@ -56,6 +60,12 @@ async function run({ database: address, groupCommit, adaptations: count }: Produ
   }
   process.send?.({ port, secret, model: served.model, fingerprint: served.fingerprint, adaptations } satisfies ProductReady)
 
+  let endTraining = async (): Promise<void> => undefined
+  process.on('message', async (load: ProductLoad) => {
+    await endTraining()
+    endTraining = load === 'train' ? await startMetaTraining(7, settings.jobNiceness) : async () => undefined
+    process.send?.(load)
+  })
   process.on('disconnect', () => {
     server.close()
     server.closeAllConnections()
