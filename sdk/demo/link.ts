@@ -26,6 +26,8 @@ type Entry =
 /** What happened on the line. */
 export interface LinkCounters {
   predictions: number
+  /** Of them, from the base version, as the adaptation had not learned for longer than the arm trusts one. */
+  onBase: number
   batches: { accepted: number; rejected: number; stored: number }
   /** Entries dropped because the service did not answer for long. */
   skipped: number
@@ -59,7 +61,13 @@ export function createLink({
   size: number
   signal: AbortSignal
 }): Link {
-  const counters: LinkCounters = { predictions: 0, batches: { accepted: 0, rejected: 0, stored: 0 }, skipped: 0, failed: 0 }
+  const counters: LinkCounters = {
+    predictions: 0,
+    onBase: 0,
+    batches: { accepted: 0, rejected: 0, stored: 0 },
+    skipped: 0,
+    failed: 0,
+  }
   const call = { signal, timeoutMs: 2000 }
   const queue: Entry[] = []
   const announced: Extract<Entry, { kind: 'event' }>[] = []
@@ -104,6 +112,12 @@ export function createLink({
     const ahead = Array.from(times, (at) => Math.max(0, at - time + now - (asOf ?? now)))
     const answer = await heftwise.adaptations.predict(source.adaptation, { ...body, ahead }, call)
     asOf = answer.as_of
+    // Frozen, it learns no more, and its time runs out. The version it began with goes on serving.
+    if (answer.valid_until !== null && answer.valid_until <= now) {
+      const { torque } = await heftwise.predict(answer.model, { ...body, version: answer.version }, call)
+      counters.onBase++
+      return { time: times, torque: flat(torque), expires: now + 1 }
+    }
     return { time: times, torque: flat(answer.torque), expires: answer.valid_until ?? now + 1 }
   }
 

@@ -119,6 +119,10 @@ async function main(signal: AbortSignal): Promise<void> {
   if (signal.aborted) console.log('Stopped. The table covers what ran until then.')
   const jointNames = alder7.nominal.joints.map(({ name }) => name)
   console.log(`\n${formatResults(results, jointNames)}\n`)
+  for (const { name, link } of results) {
+    if (!link?.onBase) continue
+    console.log(`${name}: ${link.onBase} predictions came from the base version, as the adaptation stood still (frozen?).`)
+  }
   console.log(`Without Heftwise the controller feeds forward its published rigid-body model: no friction, no payload.`)
   console.log(`Both adaptations go on living in the console: ${address.url}`)
 }

@@ -12,7 +12,7 @@ const shift = planShift(10, 1)
 const { signal } = new AbortController()
 
 /** A service that keeps what it is sent and predicts zero torque; `failures` says for how many calls it does not answer. */
-function createService(failures = { left: 0, isStored: false }) {
+function createService(failures = { left: 0, isStored: false }, validUntil = 1e9) {
   const log: (Schemas['Batch'] | Schemas['NewEvent'])[] = []
   const store = (entry: Schemas['Batch'] | Schemas['NewEvent']): void => {
     const expected = log.length === 0 ? 1 : log.at(-1)!.sequence + 1
@@ -39,7 +39,13 @@ function createService(failures = { left: 0, isStored: false }) {
         return { verdict: 'accepted' }
       },
       postEvent: async (_id: string, body: Schemas['NewEvent']) => store(body),
-      predict: async (_id: string, body: { position: number[][] }) => ({ ...predict(body), as_of: 0, valid_until: 1e9 }),
+      predict: async (_id: string, body: { position: number[][] }) => ({
+        ...predict(body),
+        model: 'm',
+        version: 1,
+        as_of: 0,
+        valid_until: validUntil,
+      }),
     },
   } as unknown as Heftwise
   return { heftwise, log }
@@ -95,6 +101,16 @@ describe("the demo's link to the service", () => {
 
     expect(link.counters).toMatchObject({ failed: 60, skipped: 11, batches: { accepted: 50 } })
     expect([log[0].sequence, log[0].skipped]).toEqual([12, 11])
+  })
+
+  it('takes the base version when the adaptation has stood still for too long', async () => {
+    const { heftwise } = createService(undefined, 1)
+    const link = open(heftwise)
+
+    expect((await link.exchange(0.9, 0.9))!.expires).toBe(1)
+    expect(link.counters.onBase).toBe(0)
+    expect((await link.exchange(1.5, 1.5))!.expires).toBe(2.5)
+    expect(link.counters.onBase).toBe(1)
   })
 
   it('asks for what lies ahead on the desired trajectory', async () => {
