@@ -99,7 +99,7 @@ export function FitDialog({ models, onClose }: { models: string[]; onClose: () =
         </div>
         {create.error && <InlineFailure error={create.error} />}
         <DialogActions>
-          <Button onClick={onClose}>Start none</Button>
+          <Button onClick={onClose}>Not now</Button>
           <Button type="submit" look="primary" pending={create.isPending}>
             Start fitting
           </Button>

@@ -139,7 +139,7 @@ export function MetaTrainDialog({ losses, models, kinds, createLoss, onClose }: 
         </div>
         {(makeLoss.error ?? create.error) && <InlineFailure error={makeLoss.error ?? create.error} />}
         <DialogActions>
-          <Button onClick={onClose}>Start none</Button>
+          <Button onClick={onClose}>Not now</Button>
           <Button type="submit" look="primary" pending={pending}>
             Start meta-training
           </Button>

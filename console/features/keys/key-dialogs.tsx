@@ -95,7 +95,7 @@ export function CreateKeyDialog({ onClose }: { onClose: () => void }) {
         </SelectField>
         {create.error && <InlineFailure error={create.error} />}
         <DialogActions>
-          <Button onClick={onClose}>Make none</Button>
+          <Button onClick={onClose}>Not now</Button>
           <Button type="submit" look="primary" pending={create.isPending}>
             Create key
           </Button>

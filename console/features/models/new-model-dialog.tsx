@@ -60,7 +60,7 @@ export function NewModelDialog({ arms, onClose }: { arms: string[]; onClose: () 
         />
         {create.error && <InlineFailure error={create.error} />}
         <DialogActions>
-          <Button onClick={onClose}>Start none</Button>
+          <Button onClick={onClose}>Not now</Button>
           <Button type="submit" look="primary" pending={create.isPending}>
             Start model
           </Button>

@@ -55,7 +55,7 @@ export function VersionDetails({ version, live }: { version: Version; live: Vers
             <JointErrors version={version} against={against} />
           </>
         ) : (
-          <p className="text-soft">It came without metrics. A comparison on recordings of your own tells how good it is.</p>
+          <p className="text-soft">It came without metrics: nobody has measured it on recordings it did not see.</p>
         )}
       </div>
       <Facts items={facts} />
