@@ -101,6 +101,9 @@ export class Heftwise {
     get: (name: string, options: CallOptions = {}): Promise<Schemas['Arm']> =>
       this.#body({ ...options, method: 'GET', path: `/v1/arms/${part(name)}` }),
     create: (body: Schemas['NewArm'], options: CallOptions = {}): Promise<Schemas['Arm']> => this.#create('/v1/arms', body, options),
+    /** What a URDF says of an arm: joints, limits, bodies and findings. Nothing is stored. */
+    inspect: (body: Schemas['DescriptionToInspect'], options: CallOptions = {}): Promise<Schemas['InspectedDescription']> =>
+      this.#body({ ...options, method: 'POST', path: '/v1/arms/inspect', body }),
     archive: (name: string, reason: string, options: CallOptions = {}): Promise<Schemas['Arm']> =>
       this.#create(`/v1/arms/${part(name)}/archive`, { reason }, options),
   }

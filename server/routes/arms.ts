@@ -4,6 +4,7 @@ import type { Contract } from '../middleware/contract.ts'
 import { answerPage } from '../middleware/page-answer.ts'
 import type { StoredJoint } from '../models/arm.ts'
 import type { ArmRecord, NewArm } from '../services/arms.ts'
+import { inspectDescription, type InspectedDescription } from '../services/descriptions.ts'
 import type { Services } from '../services/index.ts'
 
 type Schemas = components['schemas']
@@ -24,6 +25,14 @@ export function armRoutes({ arms }: Services, contract: Contract): Router {
     contract.handle('createArm', async ({ caller, body, requestId }, res) => {
       const arm = await arms.create(caller, armFromWire(body), requestId)
       res.status(201).location(`/v1/arms/${arm.name}`).json(armToWire(arm))
+    }),
+  )
+
+  router.post(
+    '/v1/arms/inspect',
+    contract.handle('inspectDescription', async ({ caller, body }, res) => {
+      const { urdf, base_link: baseLink, tip_link: tipLink } = body
+      res.json(inspectedToWire(inspectDescription(caller, { urdf, baseLink, tipLink })))
     }),
   )
 
@@ -96,5 +105,32 @@ function armToWire(arm: ArmRecord): Schemas['Arm'] {
     archived_at: arm.archivedAt?.toISOString() ?? null,
     created_at: arm.createdAt.toISOString(),
     created_by: arm.createdBy,
+  }
+}
+
+function inspectedToWire({ arm, links, tips, moved }: InspectedDescription): Schemas['InspectedDescription'] {
+  return {
+    robot: arm.name,
+    links: [...links],
+    tips: [...tips],
+    base_link: arm.base,
+    tip_link: arm.tip,
+    joints: arm.joints.map((joint) => ({
+      name: joint.name,
+      type: joint.kind,
+      position_lower: joint.lower,
+      position_upper: joint.upper,
+      velocity_limit: joint.velocity,
+      torque_limit: joint.torque,
+    })),
+    rigid_body: {
+      links: arm.chain.joints.map(({ name, inertial }) => ({
+        name: moved.get(name)!,
+        mass: inertial.mass,
+        center_of_mass: [...inertial.centerOfMass],
+        inertia: [...inertial.inertia],
+      })),
+    },
+    findings: arm.findings.map(({ kind, subject, rule, message }) => ({ kind, subject, rule, detail: message })),
   }
 }

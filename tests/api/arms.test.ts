@@ -1,4 +1,5 @@
 import { createHash } from 'node:crypto'
+import { readFileSync } from 'node:fs'
 import { afterAll, beforeAll, describe, expect, test } from 'vitest'
 import type { Answer } from '../support/api.ts'
 import { twoJointArm } from '../support/recording-csv.ts'
@@ -140,4 +141,52 @@ test('describing an arm leaves an audit event with who, what and the request', a
 
   const event = await server.database.models.AuditEvent.findOne({ where: { teamId: team.id, action: 'arm.create' } })
   expect(event).toMatchObject({ actorKind: 'key', actorId: key.id, subjectName: 'tinker-2', requestId: 'req-arm-1' })
+})
+
+describe('inspecting a URDF', () => {
+  // Of a simulated arm.
+  const heron = readFileSync('tests/data/heron-7.urdf', 'utf8')
+
+  test('tells joints, limits and bodies of the chain, and stores nothing', async () => {
+    const key = await builder()
+
+    const inspected = await key.post('/v1/arms/inspect', { urdf: heron, base_link: 'link_1', tip_link: 'link_4' })
+
+    expect(inspected.status).toBe(200)
+    expect(inspected.body).toMatchObject({ robot: 'heron-7', base_link: 'link_1', tip_link: 'link_4', tips: ['flange'] })
+    expect(inspected.body.findings).toMatchObject([{ kind: 'left_out', subject: 'link_5', rule: 'branch' }])
+    expect(inspected.body.joints[0]).toEqual({
+      name: 'heron_shoulder_pitch',
+      type: 'revolute',
+      position_lower: -1.9,
+      position_upper: 1.9,
+      velocity_limit: 1.6,
+      torque_limit: 150,
+    })
+    expect(inspected.body.rigid_body.links.map(({ name }: { name: string }) => name)).toEqual(['link_2', 'link_3', 'link_4'])
+    expect((await key.get('/v1/arms')).body.items).toEqual([])
+  })
+
+  test('names link, rule and numbers of a body that cannot be', async () => {
+    const urdf = heron.replace('ixx="0.014369"', 'ixx="0.114369"')
+
+    const { body } = await (await builder()).post('/v1/arms/inspect', { urdf })
+
+    expect(body.findings).toMatchObject([{ kind: 'inconsistent', subject: 'link_4', rule: 'triangle_inequality' }])
+    expect(body.findings[0].detail).toMatch(/kg·m²/)
+  })
+
+  test.each([
+    ['a DOCTYPE', { urdf: `<!DOCTYPE robot>${heron}` }, '/urdf', /has a DOCTYPE/],
+    ['an unknown tip', { urdf: heron, tip_link: 'link_99' }, '/tip_link', /no link "link_99"/],
+    ['an unknown base', { urdf: heron, base_link: 'link_99' }, '/base_link', /no link "link_99"/],
+    ['links the wrong way round', { urdf: heron, base_link: 'link_4', tip_link: 'link_2' }, '/urdf', /does not hang on/],
+    ['a file that is too large', { urdf: heron.padEnd(1_000_001) }, '/urdf', /at most 1000000/],
+  ])('refuses %s', async (_, body, pointer, detail) => {
+    const refused = await (await builder()).post('/v1/arms/inspect', body)
+
+    expect(refused.status).toBe(422)
+    expect(refused.body.errors[0].pointer).toBe(pointer)
+    expect(refused.body.detail).toMatch(detail)
+  })
 })

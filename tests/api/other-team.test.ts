@@ -85,7 +85,7 @@ const requests: Partial<Record<OperationId, () => { body?: unknown; query?: stri
 
 /** These name nothing that a team owns. */
 const namesNothing: readonly OperationId[] = [
-  'listAdaptations', 'listArms', 'createArm', 'listRecordings', 'listModels', 'listLosses', 'listJobs', 'getSession', 'signIn', 'chooseTeam', 'signOut', 'changePassword',
+  'listAdaptations', 'listArms', 'createArm', 'inspectDescription', 'listRecordings', 'listModels', 'listLosses', 'listJobs', 'getSession', 'signIn', 'chooseTeam', 'signOut', 'changePassword',
   'listKeys', 'createKey', 'rotateCurrentKey', 'health', 'readiness', 'contract',
 ]
 
