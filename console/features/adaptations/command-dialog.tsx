@@ -21,7 +21,7 @@ function words(command: Command, { robot, revision, model, version, state }: Ada
       return {
         title: `Freeze ${robot}`,
         act: 'Freeze',
-        consequence: `It stops learning at once and goes on serving revision ${revision}. Batches that arrive are stored, without a step.`,
+        consequence: `It stops learning at once and goes on serving revision ${revision}, whose validity ends with the arm’s horizon: a controller that keeps to it then does without. Batches that arrive are stored, without a step.`,
         done: `${robot} is frozen.`,
         destructive: true,
       }
