@@ -1,12 +1,15 @@
 import type { AnswerOf, BodyOf, QueryOf, Schemas } from './wire.ts'
 import { readEvents } from './server-sent-events.ts'
-import { Transport, type Answer, type CallOptions, type TransportOptions } from './transport.ts'
+import { sleep, Transport, type Answer, type CallOptions, type TransportOptions } from './transport.ts'
 
 /** A page of a list; `next_cursor` is null on the last one. */
 export interface Page<T> {
   items: T[]
   next_cursor: string | null
 }
+
+/** Between the end of an event stream and the next try. */
+const reconnectMs = 500
 
 type Listed<Q> = Q & CallOptions
 const part = encodeURIComponent
@@ -277,6 +280,7 @@ export class Heftwise {
         yield job
         return
       }
+      await sleep(reconnectMs, options.signal)
     }
   }
 }

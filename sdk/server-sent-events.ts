@@ -19,7 +19,8 @@ export async function* readEvents(body: ReadableStream<Uint8Array>): AsyncGenera
     for (;;) {
       const { done, value } = await reader.read()
       if (done) return
-      const lines = (rest + value).split(/\r\n|\n|\r/)
+      // A carriage return at the very end may be half of a CRLF: what comes next tells.
+      const lines = (rest + value).split(/\r\n|\n|\r(?!$)/)
       rest = lines.pop()!
       for (const line of lines) {
         if (line === '') {

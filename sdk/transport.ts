@@ -118,7 +118,8 @@ function queryString(query: object | undefined): string {
   return text && `?${text}`
 }
 
-function sleep(ms: number, signal: AbortSignal | undefined): Promise<void> {
+/** @throws the signal's reason when it aborts */
+export function sleep(ms: number, signal: AbortSignal | undefined): Promise<void> {
   return new Promise((resolve, reject) => {
     const stop = () => {
       clearTimeout(timer)

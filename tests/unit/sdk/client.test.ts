@@ -115,13 +115,14 @@ describe('the client', () => {
       if (!request.url!.endsWith('/events')) return void response.setHeader('content-type', 'application/json').end(job('running'))
       response.writeHead(200, { 'content-type': 'text/event-stream' })
       if (count === 1) {
-        response.write(`event: job\r\ndata: ${job('queued')}\r\n\r\n: still here\n\nevent: point\ndata: {}\n\n`)
-        setTimeout(() => response.destroy(), 20)
+        response.write('event: job\r')
+        setTimeout(() => response.write(`\ndata: ${job('queued')}\r\n\r\n: still here\n\nevent: point\ndata: {}\n\nevent: job\rdata: ${job('running')}\r\r: go on`), 30)
+        setTimeout(() => response.destroy(), 80)
       } else response.end(`event: job\ndata: ${job('done')}\n\n`)
     })
 
     const seen = (await collect(new Heftwise({ url, retry: quick }).jobs.watch('j'))).map((job) => job.state)
 
-    expect(seen).toEqual(['queued', 'done'])
+    expect(seen).toEqual(['queued', 'running', 'done'])
   })
 })
