@@ -6,6 +6,11 @@ import swaggerUi from 'swagger-ui-express'
 export function docsRoutes(document: object): Router {
   const router = Router()
   const shown = document as OpenAPIV3_1.Document
-  router.use('/docs', swaggerUi.serve, swaggerUi.setup(shown, { customSiteTitle: 'Heftwise API', swaggerOptions: { validatorUrl: null, persistAuthorization: false } }))
+  const page = {
+    customSiteTitle: 'Heftwise API',
+    customCss: '.topbar { display: none }',
+    swaggerOptions: { validatorUrl: null, persistAuthorization: false },
+  }
+  router.use('/docs', swaggerUi.serve, swaggerUi.setup(shown, page))
   return router
 }
